@@ -1,0 +1,1 @@
+"""seedaudit: does a seed-correlation result survive a small shift of its seed?"""

@@ -1,0 +1,139 @@
+"""The story of an audit, top to bottom: each step is one call into one room."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any, Protocol
+
+from seedaudit.conclusions import conclude_seed, group_state
+from seedaudit.errors import Problem, StudyError
+from seedaudit.inference.glm import orthonormal_design
+from seedaudit.inputs.anatomy import anatomy
+from seedaudit.plan import Plan, make_plan
+from seedaudit.provenance import provenance
+from seedaudit.results import Audit
+from seedaudit.study import Study
+from seedaudit.sweep.schedule import ParticipantRecord, ParticipantTask, assign_folds, sweep
+from seedaudit.workers import available_cores
+
+
+class Progress(Protocol):
+    """Told how far the work is; every method may do nothing."""
+
+    def stage(self, name: str, total: int) -> None:
+        """A stage of so many steps begins."""
+
+    def step(self, label: str) -> None:
+        """One step is done; called from any thread."""
+
+
+class Silence:
+    """Progress that tells nobody."""
+
+    def stage(self, name: str, total: int) -> None:
+        """Do nothing."""
+
+    def step(self, label: str) -> None:
+        """Do nothing."""
+
+
+def audit(
+    study: Study | Plan, *, workers: int | None = None, progress: Progress | None = None
+) -> Audit:
+    """Does the seed-correlation result survive small shifts of its seed?
+
+    Parameters
+    ----------
+    study : Study or Plan
+        What is asked; a plan is a study whose inputs are checked already.
+    workers : int, optional
+        Threads; default: the cores that this process may use.
+    progress : Progress, optional
+
+    Returns
+    -------
+    Audit
+
+    Raises
+    ------
+    StudyError, DataError
+        With every problem that can be found before computing, or the first one in the data.
+    """
+    workers = available_cores() if workers is None else workers
+    if workers < 1:
+        raise StudyError(Problem("workers", f"is {workers}", "1 or more"))
+    progress = progress or Silence()
+    started = time.monotonic()
+    plan = study if isinstance(study, Plan) else make_plan(study)
+
+    # an equivalent design with orthonormal columns keeps the digits of the streamed sums
+    matrix, contrast = orthonormal_design(plan.design.matrix, plan.design.contrast)
+    folds = plan_folds(plan)
+    progress.stage("reading participants", len(plan.participants))
+    swept = sweep(
+        plan.sweep_task(matrix),
+        folds,
+        workers=workers,
+        on_participant=lambda record: progress.step(_label(record)),
+    )
+    swept_at = time.monotonic()
+
+    group = group_state(plan, swept, matrix, contrast)
+    picture, source = anatomy(plan.first_run, template=plan.in_template_space)
+    progress.stage("drawing conclusions", len(plan.seeds))
+    seeds = []
+    for number, seed in enumerate(plan.seeds):
+        seeds.append(conclude_seed(plan, swept, group, number, picture))
+        progress.step(seed.seed.name)
+
+    timings = {
+        "pass over the data": swept_at - started,
+        "conclusions": time.monotonic() - swept_at,
+    }
+    told = provenance(plan, swept, group, timings=timings, workers=workers, anatomy=source)
+    return Audit(plan.study.title, tuple(seeds), told)
+
+
+def plan_folds(plan: Plan) -> list[list[ParticipantTask]]:
+    """The participants dealt into folds."""
+    rows = assign_folds(plan.design.strata, plan.study.group.folds)
+    return [[plan.participants[row] for row in fold] for fold in rows]
+
+
+def audit_images(
+    bold: Sequence[str | Path],
+    seed: Sequence[float],
+    radius: float = 6.0,
+    within: float = 6.0,
+    *,
+    mask: str | Path | None = None,
+    regions: str | Path | None = None,
+    space: str = "mni",
+    workers: int | None = None,
+    **placements: Any,
+) -> Audit:
+    """Audit one seed on a list of runs, one for each participant, without a study file.
+
+    Parameters
+    ----------
+    bold : sequence of paths
+        Cleaned 4-D NIfTI runs on one grid.
+    seed : (x, y, z)
+        mm
+    radius, within : float
+        Radius of the sphere and of the cloud, mm.
+    mask, regions : path, optional
+        As in the study file.
+    space : str
+        `mni`, `talairach` or `native`.
+    workers : int, optional
+    **placements
+        More keys of the section `placements`.
+    """
+    raise NotImplementedError
+
+
+def _label(record: ParticipantRecord) -> str:
+    return record.participant if record.used else f"{record.participant} (set aside)"

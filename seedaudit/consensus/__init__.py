@@ -1,0 +1,1 @@
+"""What the audit concludes: functions on arrays, free of paths, images, settings and figures."""

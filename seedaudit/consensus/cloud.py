@@ -1,0 +1,267 @@
+"""What the placements of one cloud say together: every conclusion drawn from merged moments."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from seedaudit.consensus.agreement import (
+    agreement_shares,
+    class_counts,
+    conjunction,
+    contested_map,
+    effect_spread,
+    modal_class,
+    placement_to_sampling,
+    safe_map,
+)
+from seedaudit.consensus.chance import fleiss_kappa, gwet_ac1
+from seedaudit.consensus.overlap import (
+    correlation_pairs,
+    density_sweep,
+    dice_pairs,
+    dice_with_reference,
+    spatial_similarity,
+    value_sweep,
+)
+from seedaudit.consensus.regional import region_table, regional_stability
+from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
+from seedaudit.inference.glm import solve_model
+from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier, group_maps
+from seedaudit.sweep.moments import Moments, merged
+
+DENSITIES = np.arange(1, 51) / 100
+VALUE_CUTS = np.arange(1, 21) / 20
+"""Fisher z"""
+
+Table = dict[str, NDArray[Any]]
+
+
+@dataclass(frozen=True)
+class GroupDesign:
+    """The group model of the participants used.
+
+    Parameters
+    ----------
+    matrix : (n, p)
+    contrast : (p,)
+    strata : (n,) int
+        Participants with equal numbers are exchanged for one another by the bootstrap.
+    least_count : int
+        Participants that a voxel needs.
+    """
+
+    matrix: NDArray[np.float64]
+    contrast: NDArray[np.float64]
+    strata: NDArray[np.int_]
+    least_count: int
+
+
+@dataclass(frozen=True)
+class Space:
+    """Where the voxels are: indices `ijk` (V, 3) in a grid of `shape`, the `analysis` voxels
+    (V,) of the cloud, and the region `labels` (V,), 0 for none, of the regions `index` (K,).
+    """
+
+    ijk: NDArray[np.int32]
+    shape: tuple[int, int, int]
+    analysis: NDArray[np.bool_]
+    labels: NDArray[np.int32]
+    index: NDArray[np.int_]
+
+
+@dataclass(frozen=True)
+class CloudConsensus:
+    """All that is concluded about one cloud.
+
+    Parameters
+    ----------
+    voxels : (V,) bool
+        Analysis voxels that could be estimated; the maps are over these.
+    maps : dict of (A,) arrays
+        By the names of the result folder.
+    similarity, pairs, thresholds, regions : dict of columns
+    stability : (value, low, high)
+        Gwet's AC1 over the three classes with its jackknife interval.
+    kappa : float
+        Fleiss' kappa.
+    df : float
+        Residual degrees of freedom (the smallest, where voxels differ); infinite for scores.
+    """
+
+    voxels: NDArray[np.bool_]
+    maps: Table
+    similarity: Table
+    pairs: Table
+    thresholds: Table
+    regions: Table
+    stability: tuple[float, float, float]
+    kappa: float
+    df: float
+
+
+def conclude(
+    folds: Sequence[Moments],
+    fold_sizes: Sequence[int],
+    design: GroupDesign,
+    space: Space,
+    rule: ThresholdRule,
+    region_means: NDArray[np.float64],
+    *,
+    safe: float = 0.95,
+    random_state: int = 0,
+) -> CloudConsensus:
+    """Draw every conclusion about one cloud.
+
+    Parameters
+    ----------
+    folds : sequence of Moments
+        Of the cloud's placements, the reported one first.
+    fold_sizes : sequence of int
+        Participants in each fold.
+    design : GroupDesign
+    space : Space
+    rule : ThresholdRule
+    region_means : (n, K)
+        Mean z of each region in each participant at the reported placement.
+    safe : float
+        Share of placements.
+    random_state : int
+        Of the bootstrap.
+    """
+    total = merged(folds)
+    estimable = np.isfinite(solve_model(total, design.contrast, design.least_count).spread)
+    voxels = space.analysis & estimable
+    kept = total.voxels(voxels)
+    del total
+    classes_of = classifier(rule, space.ijk[voxels], space.shape)
+    maps = group_maps(kept, design.contrast, design.least_count, classes_of)
+    labels = space.labels[voxels]
+    whole, by_region = _without_each_fold(
+        kept, folds, fold_sizes, design, voxels, classes_of, labels, space.index
+    )
+    counts = class_counts(maps.classes[1:])
+    stability = gwet_ac1(counts)
+    sizes = [size for size in fold_sizes if size]
+    low, high = delete_fold_interval(np.array(stability), whole, sizes)
+    regional = delete_fold_interval(
+        regional_stability(labels, space.index, maps.classes[1:]), by_region, sizes
+    )
+    effects = region_effects(maps.effects, labels, space.index)
+    interval = bootstrap_interval(
+        design.matrix, region_means, design.contrast, design.strata, random_state=random_state
+    )
+    return CloudConsensus(
+        voxels,
+        _maps(maps, counts, safe),
+        _similarity(maps),
+        _pairs(maps),
+        _thresholds(maps),
+        region_table(
+            labels, space.index, maps.classes[1:], maps.classes[0], effects[1:], effects[0],
+            *interval, *regional, safe,
+        ),
+        (float(stability), float(low), float(high)),
+        float(fleiss_kappa(counts)),
+        float(np.nanmin(maps.df)) if voxels.any() else float("nan"),
+    )  # fmt: skip
+
+
+def region_effects(
+    effects: NDArray[np.float32], labels: NDArray[np.int32], index: NDArray[np.int_]
+) -> NDArray[np.float64]:
+    """Mean group effect (N, K) of the voxels of each region; NaN for a region without any."""
+    result = np.full((len(effects), len(index)), np.nan)
+    for k, label in enumerate(index):
+        members = np.flatnonzero(labels == label)
+        if len(members):
+            result[:, k] = effects[:, members].mean(axis=1, dtype=np.float64)
+    return result
+
+
+def _without_each_fold(
+    kept: Moments,
+    folds: Sequence[Moments],
+    fold_sizes: Sequence[int],
+    design: GroupDesign,
+    voxels: NDArray[np.bool_],
+    classes_of: Classifier,
+    labels: NDArray[np.int32],
+    index: NDArray[np.int_],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Stability of the whole map (G,) and of the regions (G, K) with one fold left out."""
+    whole, regional = [], []
+    for fold, size in zip(folds, fold_sizes, strict=True):
+        if not size or len(fold_sizes) < 2:
+            continue
+        rest = kept - fold.voxels(voxels)
+        classes = group_maps(rest, design.contrast, design.least_count - size, classes_of).classes[
+            1:
+        ]
+        whole.append(gwet_ac1(class_counts(classes)))
+        regional.append(regional_stability(labels, index, classes))
+    return np.array(whole), np.array(regional).reshape(len(regional), len(index))
+
+
+def _maps(maps: GroupMaps, counts: NDArray[np.int32], safe: float) -> Table:
+    positive, negative = agreement_shares(counts)
+    spread = effect_spread(maps.effects[1:])
+    return {
+        "agreement_positive": positive,
+        "agreement_negative": negative,
+        "modal_class": modal_class(counts)[0],
+        "modal_share": modal_class(counts)[1],
+        "safe": safe_map(counts, safe),
+        "contested": contested_map(counts, safe),
+        "conjunction": conjunction(maps.statistics),
+        "effect_reported": maps.effects[0],
+        "effect_mean": spread.mean,
+        "effect_sd": spread.sd,
+        "effect_range": spread.maximum - spread.minimum,
+        "placement_to_sampling": placement_to_sampling(spread.sd, maps.standard_error),
+        "t_reported": maps.statistics[0],
+        "class_reported": maps.classes[0],
+    }
+
+
+def _similarity(maps: GroupMaps) -> Table:
+    overlap = dice_with_reference(maps.classes[0], maps.classes)
+    likeness = spatial_similarity(maps.effects[0], maps.effects)
+    return {
+        "n_positive": overlap.sizes[:, 0],
+        "n_negative": overlap.sizes[:, 1],
+        "dice_positive": overlap.dice[:, 0],
+        "dice_negative": overlap.dice[:, 1],
+        "spatial_r": likeness.r,
+        "concordance": likeness.concordance,
+        "rms_difference": likeness.rms_difference,
+    }
+
+
+def _pairs(maps: GroupMaps) -> Table:
+    positive, negative = dice_pairs(maps.classes[1:])
+    r = correlation_pairs(maps.effects[1:])
+    a, b = np.triu_indices(len(r), 1)
+    return {
+        "a": a + 1,
+        "b": b + 1,
+        "dice_positive": positive[a, b],
+        "dice_negative": negative[a, b],
+        "spatial_r": r[a, b],
+    }
+
+
+def _thresholds(maps: GroupMaps) -> Table:
+    sweeps = {
+        "density": density_sweep(maps.statistics[0], maps.statistics[1:], DENSITIES),
+        "effect": value_sweep(maps.effects[0], maps.effects[1:], VALUE_CUTS),
+    }
+    columns = list(sweeps["density"])
+    return {
+        "rule": np.repeat(list(sweeps), [len(sweep["cut"]) for sweep in sweeps.values()]),
+        **{name: np.concatenate([sweep[name] for sweep in sweeps.values()]) for name in columns},
+    }

@@ -1,0 +1,60 @@
+"""What a run will need: time, memory and disk, from headers alone."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from seedaudit.dictionary import MAPS
+from seedaudit.plan import Plan
+from seedaudit.sweep.correlate import BLOCK
+from seedaudit.sweep.schedule import assign_folds
+
+READ_RATE = 150e6
+"""Uncompressed bytes a worker reads in a second: the usual order for gzip on one core."""
+
+PRODUCT_RATE = 3e10
+"""Floating-point operations a worker's products do in a second: the usual order."""
+
+ESTIMATE_RATE = 1.5e7
+"""Voxels of group maps that are estimated and classified in a second: the usual order."""
+
+BASE_MEMORY = 300e6
+"""The program itself with its libraries, bytes."""
+
+
+@dataclass(frozen=True)
+class Forecast:
+    """Rough needs of a run: `seconds`, `memory` and `disk` in bytes."""
+
+    seconds: float
+    memory: float
+    disk: float
+
+
+def forecast(plan: Plan, workers: int) -> Forecast:
+    """Predict what a run of the plan needs with so many workers."""
+    n_voxels, n_placements = len(plan.voxels), plan.n_swept
+    p = plan.design.matrix.shape[1]
+    runs = [[run.header for run in participant.runs] for participant in plan.participants]
+    n_folds = len(assign_folds(plan.design.strata, plan.study.group.folds))
+    workers = min(workers, n_folds)
+
+    layers = p + 1 + (len(plan.participants) == 1)
+    one_state = 8 * n_voxels * (layers * n_placements + p * p) + 4 * n_voxels
+    series = max(4 * n_voxels * sum(h.n_volumes for h in own) for own in runs)
+    block = 8 * BLOCK * (n_placements * 4 + max(h.n_volumes for own in runs for h in own))
+    sweeping = workers * (series + block)
+    largest = max(len(seed.used) for seed in plan.seeds) / n_placements
+    # the merged state, the same on analysis voxels, that without a fold, and the maps
+    concluding = largest * (3 * one_state + 30 * n_voxels * n_placements)
+    memory = BASE_MEMORY + n_folds * one_state + max(sweeping, concluding)
+
+    stored = sum(float(np.prod(h.grid.shape)) * h.n_volumes * h.dtype.itemsize
+                 for own in runs for h in own)  # fmt: skip
+    products = 2.0 * n_placements * n_voxels * sum(h.n_volumes for own in runs for h in own)
+    estimates = n_placements * n_voxels * (n_folds + 1)
+    seconds = (stored / READ_RATE + products / PRODUCT_RATE) / workers + estimates / ESTIMATE_RATE
+    disk = len(plan.seeds) * (2.0 * len(MAPS) * n_voxels + 60.0 * n_placements**2 / 2) + 2e6
+    return Forecast(seconds, memory, disk)

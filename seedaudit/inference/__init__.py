@@ -1,0 +1,1 @@
+"""From merged moments to effects, test statistics and classes."""

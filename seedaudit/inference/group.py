@@ -1,0 +1,106 @@
+"""Group maps of every placement of a cloud: effect, test statistic and class per voxel."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from seedaudit.inference.glm import estimate, solve_model
+from seedaudit.inference.threshold import classify, drop_small_clusters
+from seedaudit.sweep.moments import Moments
+
+
+@dataclass(frozen=True)
+class ThresholdRule:
+    """The rule that makes classes, the same for every placement.
+
+    Parameters
+    ----------
+    rule : str
+        p, fdr, bonferroni, t, effect or density.
+    level : float
+    scale : str
+        `z` or `r`, for rule effect.
+    per_tail : bool
+        For rule density.
+    min_voxels : int
+        Smallest cluster.
+    neighbours : int
+        6, 18 or 26.
+    """
+
+    rule: str
+    level: float
+    scale: str = "z"
+    per_tail: bool = False
+    min_voxels: int = 1
+    neighbours: int = 26
+
+
+@dataclass(frozen=True)
+class GroupMaps:
+    """Maps of N placements on the analysis voxels V of a cloud; row 0 is the reported placement.
+
+    `effects` and `statistics` are (N, V) float32, `classes` (N, V) int8, `standard_error` (V,)
+    that of the reported placement, `df` (V,) infinite for a standard normal statistic.
+    """
+
+    effects: NDArray[np.float32]
+    statistics: NDArray[np.float32]
+    classes: NDArray[np.int8]
+    standard_error: NDArray[np.float64]
+    df: NDArray[np.float64]
+
+
+Classifier = Callable[
+    [NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]], NDArray[np.int8]
+]
+
+
+def classifier(
+    rule: ThresholdRule, ijk: NDArray[np.int32], shape: tuple[int, int, int]
+) -> Classifier:
+    """A function (statistic, effect, df) -> classes for the voxels `ijk` (V, 3)."""
+
+    def classes(
+        statistic: NDArray[np.float64], effect: NDArray[np.float64], df: NDArray[np.float64]
+    ) -> NDArray[np.int8]:
+        made = classify(
+            statistic, effect, df, rule.rule, rule.level, scale=rule.scale, per_tail=rule.per_tail
+        )
+        return drop_small_clusters(made, ijk, shape, rule.min_voxels, rule.neighbours)
+
+    return classes
+
+
+def group_maps(
+    moments: Moments, contrast: NDArray[np.float64], needed: int, classes_of: Classifier
+) -> GroupMaps:
+    """Estimate and classify every placement.
+
+    Parameters
+    ----------
+    moments : Moments
+        Of one cloud, on its analysis voxels.
+    contrast : (p,)
+    needed : int
+        Participants a voxel needs.
+    classes_of : callable
+        See `classifier`.
+    """
+    model = solve_model(moments, contrast, needed)
+    shape = moments.zz.shape
+    effects = np.empty(shape, np.float32)
+    statistics = np.empty(shape, np.float32)
+    classes = np.empty(shape, np.int8)
+    standard_error = np.empty(shape[1])
+    for i in range(shape[0]):
+        found = estimate(moments, model, i)
+        effects[i], statistics[i] = found.effect, found.statistic
+        classes[i] = classes_of(found.statistic, found.effect, model.df)
+        if i == 0:
+            standard_error = found.standard_error
+    return GroupMaps(effects, statistics, classes, standard_error, model.df)

@@ -1,0 +1,1 @@
+"""Files to arrays: runs, nuisance bases, the group design, region labels."""

@@ -1,0 +1,1 @@
+"""From a result to what a person reads and prints."""

@@ -1,0 +1,1 @@
+"""One pass over the data: from runs to the one mergeable state."""

@@ -1,0 +1,67 @@
+"""The mergeable state: merging is addition, in any grouping, and keeps the digits."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.sweep.moments import Moments, merged
+
+N, V = 3, 11
+
+
+def moments_of(x, z, rows, valid=None) -> Moments:
+    total = Moments.empty(x.shape[1], N, V)
+    for row in rows:
+        keep = np.ones(V, bool) if valid is None else valid[row]
+        for where in (slice(0, 4), slice(4, V)):
+            block = np.where(keep[where], z[row][:, where], 0).astype(np.float32)
+            total.add(x[row], where, block, keep[where])
+    return total
+
+
+def study(rng, n=12, p=2):
+    x = np.column_stack([np.ones(n), rng.standard_normal((n, p - 1))])
+    return x, rng.standard_normal((n, N, V)).astype(np.float32)
+
+
+@settings(max_examples=30, deadline=None)
+@given(cuts=st.sets(st.integers(1, 11), max_size=6), seed=st.integers(0, 100))
+def test_any_grouping_gives_the_same_state(cuts, seed):
+    x, z = study(np.random.default_rng(seed))
+    whole = moments_of(x, z, range(12))
+    bounds = [0, *sorted(cuts), 12]
+    parts = [moments_of(x, z, range(a, b)) for a, b in zip(bounds[:-1], bounds[1:], strict=True)]
+    again = merged(parts)
+    np.testing.assert_allclose(again.zz, whole.zz, rtol=1e-13)
+    np.testing.assert_allclose(again.xtz, whole.xtz, atol=1e-12)
+    np.testing.assert_array_equal(again.count, whole.count)
+    left = whole - parts[0]
+    np.testing.assert_allclose(left.zz, merged(parts[1:]).zz if len(parts) > 1 else 0, atol=1e-12)
+
+
+def test_merging_leaves_its_parts_alone():
+    x, z = study(np.random.default_rng(1))
+    parts = [moments_of(x, z, range(6)), moments_of(x, z, range(6, 12))]
+    before = parts[0].zz.copy()
+    merged(parts)
+    np.testing.assert_array_equal(parts[0].zz, before)
+
+
+@pytest.mark.parametrize("mean", [0.0, 1.0, 8.0])
+def test_no_cancellation_in_the_residual_sum_of_squares(mean):
+    """Trap: float32 sums of z² lose the variance when the mean is large beside the spread."""
+    rng = np.random.default_rng(2)
+    n = 40
+    z = (mean + 1e-3 * rng.standard_normal((n, N, V))).astype(np.float32)
+    x, contrast = orthonormal_design(np.ones((n, 1)), np.array([1.0]))
+    moments = moments_of(x, z, range(n))
+    found = estimate(moments, solve_model(moments, contrast, n), 1)
+    values = z[:, 1].astype(np.float64)
+    np.testing.assert_allclose(found.effect, values.mean(axis=0), rtol=1e-12, atol=1e-12)
+    np.testing.assert_allclose(
+        found.standard_error, values.std(axis=0, ddof=1) / np.sqrt(n), rtol=1e-6
+    )
