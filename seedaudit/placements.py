@@ -114,7 +114,7 @@ def build_cloud(
     Raises
     ------
     StudyError
-        If an argument is missing or out of range.
+        If an argument is out of range.
     DataError
         If the reported centre is not in the mask, or its sphere is covered too little; if less
         than 1 % of the drawn centres fall `inside`; if fewer than two drawn placements remain.

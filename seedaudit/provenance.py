@@ -8,7 +8,7 @@ from __future__ import annotations
 import platform
 from datetime import UTC, datetime
 from importlib.metadata import version
-from pathlib import Path, PurePath
+from pathlib import PurePosixPath, PureWindowsPath
 from typing import Any
 
 import numpy as np
@@ -113,5 +113,6 @@ def shortened(content: Any) -> Any:
 
 def file_name(text: str) -> str:
     """A relative path as typed; of an absolute one, the last part."""
-    typed = Path(text).expanduser() if text.startswith("~") else PurePath(text)
-    return typed.name if typed.is_absolute() else text
+    home = text.startswith(("~/", "~\\"))
+    absolute = PurePosixPath(text).is_absolute() or PureWindowsPath(text).is_absolute()
+    return PureWindowsPath(text).name if home or absolute else text

@@ -45,12 +45,14 @@ def draw_shifts(
         Largest shift, mm, above 0.
     random_state : int
         0 or more; the same number gives the same shifts. `lattice` has no chance in it.
-    sd : float
-        Standard deviation along each axis before truncation, mm; `normal` only.
-    distances : sequence of float
-        Distances of `shell`, mm, up to `within`; `count` is split evenly over them.
-    step : float
-        Spacing of `lattice`, mm.
+    sd : float, optional
+        Standard deviation of `normal` along each axis before truncation, mm; half of `within` when
+        left out.
+    distances : sequence of float, optional
+        Distances of `shell`, mm, up to `within`, which is the only one when left out; `count` is
+        split evenly over them.
+    step : float, optional
+        Spacing of `lattice`, mm; 2 when left out.
     accept : function of shifts (M, 3) to bool (M,), optional
         Which shifts may stand. More are drawn until `count` do; a lattice keeps those that do.
 
@@ -62,7 +64,7 @@ def draw_shifts(
     Raises
     ------
     StudyError
-        If an argument is missing or out of range.
+        If an argument is out of range.
     DataError
         If less than 1 % of the draws are accepted.
 
@@ -71,12 +73,18 @@ def draw_shifts(
     `ball` and `normal` are scrambled Sobol points (Owen 1998, J. Complexity 14:466-489) sent
     through the inverse distribution of the radius and a uniform direction.
     """
-    _check_draw(draw, count, within, random_state, sd, distances, step)
+    sd = within / 2 if sd is None else sd
+    step = 2.0 if step is None else step
+    lengths = [within] if distances is None else list(distances)
+    _check_draw(draw, count, within, random_state, sd, lengths, step)
     if draw == "lattice":
-        assert step is not None  # _check_draw has seen to it
         points = _lattice(within, step)
         return points if accept is None else points[accept(points)]
-    streams = _streams(draw, count, within, random_state, sd, distances)
+    if draw == "shell":
+        streams = _shells(lengths, count, random_state)
+    else:
+        spread = sd if draw == "normal" else None
+        streams = [(count, _sobol_batches(count, within, random_state, spread))]
     return np.concatenate([_fill(wanted, stream, accept) for wanted, stream in streams])
 
 
@@ -89,24 +97,16 @@ def _lattice(within: float, step: float) -> Shifts:
     return np.asarray(points[order])
 
 
-def _streams(
-    draw: str,
-    count: int,
-    within: float,
-    random_state: int,
-    sd: float | None,
-    distances: Sequence[float] | None,
+def _shells(
+    lengths: Sequence[float], count: int, random_state: int
 ) -> list[tuple[int, Iterator[Shifts]]]:
-    """How many shifts are wanted from each endless stream of batches; a batch covers the want."""
-    if draw == "shell":
-        rng = np.random.default_rng(random_state)
-        lengths = list(distances or ())
-        shares = [len(part) for part in np.array_split(np.arange(count), len(lengths))]
-        return [
-            (share, _shell_batches(length, share, child))
-            for share, length, child in zip(shares, lengths, rng.spawn(len(lengths)), strict=True)
-        ]
-    return [(count, _sobol_batches(count, within, random_state, sd if draw == "normal" else None))]
+    """How many shifts are wanted at each distance, and the endless stream they come from."""
+    shares = [len(part) for part in np.array_split(np.arange(count), len(lengths))]
+    generators = np.random.default_rng(random_state).spawn(len(lengths))
+    return [
+        (share, _shell_batches(length, share, rng))
+        for length, share, rng in zip(lengths, shares, generators, strict=True)
+    ]
 
 
 def _shell_batches(length: float, count: int, rng: np.random.Generator) -> Iterator[Shifts]:
@@ -176,9 +176,9 @@ def _check_draw(
     count: int,
     within: float,
     random_state: int,
-    sd: float | None,
-    distances: Sequence[float] | None,
-    step: float | None,
+    sd: float,
+    lengths: Sequence[float],
+    step: float,
 ) -> None:
     problems = []
 
@@ -191,19 +191,18 @@ def _check_draw(
     need(random_state >= 0, "random_state", random_state, "a whole number, 0 or more")
     need(is_length(within), "within", within, "a length above 0 mm")
     if draw == "normal":
-        need(is_length(sd), "sd", sd, "a length above 0 mm, which draw = normal needs")
+        need(is_length(sd), "sd", sd, "a length above 0 mm")
     if draw == "lattice":
-        need(is_length(step), "step", step, "a length above 0 mm, which draw = lattice needs")
+        need(is_length(step), "step", step, "a length above 0 mm")
     if draw == "shell":
-        lengths = list(distances or ())
         fine = bool(lengths) and all(is_length(d) and d <= within + _SLACK for d in lengths)
         rule = f"one or more lengths above 0 and up to within = {within:g} mm"
-        need(fine, "distances", distances, f"{rule}, which draw = shell needs")
+        need(fine, "distances", lengths, rule)
         need(count >= len(lengths), "count", count, f"{len(lengths)} or more, one per distance")
     if problems:
         raise StudyError(*problems)
 
 
-def is_length(value: float | None) -> bool:
+def is_length(value: float) -> bool:
     """Whether a value is a finite length above 0."""
-    return value is not None and isfinite(value) and value > 0
+    return isfinite(value) and value > 0

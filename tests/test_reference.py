@@ -243,7 +243,8 @@ def test_reference_follows_its_own_definitions_vectorised(audit):
     t = audit["group"]["t"][:, rows]
     lowest = np.where((t > 0).all(0), t.min(0), np.where((t < 0).all(0), t.max(0), 0))
     np.testing.assert_array_equal(audit["agreement"]["conjunction"], lowest)
-    assert (np.sign(t[1:]).std(axis=0) < np.sign(t).std(axis=0)).any()  # row 0 breaks some ties
+    sign = np.sign(t)
+    assert ((sign[1:] == sign[1]).all(axis=0) & (sign[0] != sign[1])).any()  # row 0 must count
     counts = np.stack([(drawn == k).sum(axis=0) for k in (-1, 0, 1)], axis=1)
     assert audit["kappa"] == pytest.approx(statsmodels_fleiss(counts), abs=1e-12)
     for i, one in enumerate(audit["similarity"], start=1):

@@ -200,6 +200,18 @@ def test_acceptance_under_one_percent_is_an_error():
 
 
 @pytest.mark.parametrize(
+    ("draw", "left_out"),
+    [("normal", {"sd": 3.0}), ("shell", {"distances": [6.0]}), ("lattice", {"step": 2.0})],
+)
+def test_what_is_left_out_follows_the_study_file(draw, left_out):
+    """CONTRACT, [placements]: half of `within`, `within` alone, 2 mm."""
+    options = {"count": 20, "within": 6.0, "random_state": 0}
+    np.testing.assert_array_equal(
+        draw_shifts(draw, **options), draw_shifts(draw, **options, **left_out)
+    )
+
+
+@pytest.mark.parametrize(
     ("options", "word"),
     [
         ({"draw": "cube"}, "draw: 'cube'; allowed: ball, normal, shell, lattice"),
@@ -207,11 +219,9 @@ def test_acceptance_under_one_percent_is_an_error():
         ({"within": 0.0}, "within: 0"),
         ({"within": np.inf}, "within: inf"),
         ({"random_state": -1}, "random_state: -1"),
-        ({"draw": "normal"}, "sd: None"),
         ({"draw": "normal", "sd": 0.0}, "sd: 0"),
-        ({"draw": "lattice"}, "step: None"),
         ({"draw": "lattice", "step": -1.0}, "step: -1"),
-        ({"draw": "shell"}, "distances: None"),
+        ({"draw": "shell", "distances": []}, "distances: "),
         ({"draw": "shell", "distances": [3.0, 7.0]}, "distances: .* up to within = 6 mm"),
         ({"draw": "shell", "distances": [3.0, 0.0]}, "distances"),
         ({"draw": "shell", "distances": [1.0, 2.0], "count": 1}, "count: 1"),

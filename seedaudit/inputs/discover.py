@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import glob
+import os
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from nilearn.interfaces.bids import get_bids_files, parse_bids_filename
+from nilearn.interfaces.bids import get_bids_files
 
 from seedaudit.errors import DataError, Problem, StudyError
 from seedaudit.inputs.tables import nearest, read_table
@@ -75,10 +76,9 @@ def find_runs(
     if runs is not None and runs.endswith(".tsv"):
         found, problems = _from_table(base / runs)
     elif runs is not None:
-        found, problems = _from_paths(_matching(runs, base), base), []
+        found, problems = _from_paths(_matching(runs, base)), []
     elif bids is not None:
-        folder = base / bids
-        found, problems = _from_paths(_bids_files(folder, select or {}), folder), []
+        found, problems = _from_paths(_bids_files(base / bids, select or {})), []
     else:
         raise StudyError(Problem("data", "no runs are given", "runs or bids"))
     problems += _missing_files(found) + _repeated(found)
@@ -121,30 +121,104 @@ def _matching(pattern: str, base: Path) -> list[Path]:
 
 
 def _bids_files(folder: Path, select: Mapping[str, str]) -> list[Path]:
-    def search(filters: Sequence[tuple[str, str]]) -> list[Path]:
-        files = get_bids_files(
-            glob.escape(str(folder)),
-            file_tag="bold",
-            file_type="nii*",
-            modality_folder="func",
-            filters=list(filters),
-        )
-        return sorted(Path(file) for file in files if str(file).endswith(_IMAGE))
-
     if not folder.is_dir():
         raise StudyError(Problem("data.bids", f"{folder} is no folder"))
-    images = search([(name, str(value)) for name, value in select.items()])
-    if images:
-        return images
-    everything = [parse_bids_filename(file) for file in search([])]
-    if not everything:
-        found = f"no sub-*/[ses-*/]func/*_bold.nii[.gz] below {folder}"
-        raise StudyError(Problem("data.bids", found, "a BIDS derivative folder"))
-    seen = {name: sorted({e.get(name) or "n/a" for e in map(_entities, everything)}) for name in select}
-    raise StudyError(
-        Problem(
-            "data.select",
-            ", ".join(f"{n}-{v}" for n, v in select.items()) + f" matches none of {len(everything)}",
-            "; ".join(f"{name}: {', '.join(values)}" for name, values in seen.items()),
-        )
+    paths = get_bids_files(
+        glob.escape(str(folder)), file_tag="bold", file_type="nii*", modality_folder="func"
     )
+    everything = sorted(Path(path) for path in paths if str(path).endswith(_IMAGE))
+    if not everything:
+        found = f"no sub-*/func/*_bold.nii.gz (or with ses-*) below {folder}"
+        raise StudyError(Problem("data.bids", found, "a BIDS derivative folder"))
+    entities = {
+        path: dict(part.split("-", 1) for part in path.name.split("_") if "-" in part)
+        for path in everything
+    }
+    images = [
+        path
+        for path in everything
+        if all(entities[path].get(name) == value for name, value in select.items())
+    ]
+    if not images:
+        seen = {name: {own.get(name, "n/a") for own in entities.values()} for name in select}
+        wanted = ", ".join(f"{name} = {value}" for name, value in select.items())
+        raise StudyError(
+            Problem(
+                "data.select",
+                f"none of the {len(everything)} runs has {wanted}",
+                "; ".join(f"{name} is {', '.join(sorted(v))}" for name, v in seen.items()),
+            )
+        )
+    return images
+
+
+def _from_paths(images: Sequence[Path]) -> list[Run]:
+    shared = os.path.commonpath([image.parent for image in images])
+    return [
+        Run(_participant(image), _run_label(image.relative_to(shared)), image, _confounds(image))
+        for image in images
+    ]
+
+
+def _participant(image: Path) -> str:
+    """The `sub-` label of the file name, else of the nearest folder, else the stem."""
+    if label := _PARTICIPANT.search(image.name):
+        return label.group()
+    folders = (folder.name for folder in image.parents)
+    return next((name for name in folders if _PARTICIPANT.fullmatch(name)), _stem(image))
+
+
+def _run_label(relative: Path) -> str:
+    return "_".join(dict.fromkeys(_RUN.findall(str(relative))))
+
+
+def _confounds(image: Path) -> Path | None:
+    """The confounds table beside a run, by its BIDS name or by the stem of the run."""
+    stem = _stem(image)
+    names = (
+        f"{_IMAGE_ENTITIES.sub('', stem)}_desc-confounds_timeseries.tsv",
+        f"{image.name.removesuffix('.gz').removesuffix('.nii')}_confounds.tsv",
+        f"{stem}_confounds.tsv",
+    )
+    return next((path for name in names if (path := image.with_name(name)).is_file()), None)
+
+
+def _stem(image: Path) -> str:
+    return image.name.removesuffix(".gz").removesuffix(".nii").removesuffix("_bold")
+
+
+def _missing_files(runs: Sequence[Run]) -> list[Problem]:
+    files = [
+        (run, what, path)
+        for run in runs
+        for what, path in (("bold", run.bold), ("confounds", run.confounds), ("mask", run.mask))
+    ]
+    return [
+        Problem(str(path), f"no such file ({what} of {run.participant})", "", "mend the path")
+        for run, what, path in files
+        if path is not None and not path.is_file()
+    ]
+
+
+def _repeated(runs: Sequence[Run]) -> list[Problem]:
+    by_file: dict[Path, list[str]] = {}
+    by_label: dict[tuple[str, str], list[str]] = {}
+    for run in runs:
+        by_file.setdefault(run.bold.resolve(), []).append(f"{run.participant} {run.run}".strip())
+        by_label.setdefault((run.participant, run.run), []).append(run.bold.name)
+    problems = [
+        Problem(str(path), f"listed {len(owners)} times ({', '.join(owners)})", "once")
+        for path, owners in by_file.items()
+        if len(owners) > 1
+    ]
+    problems += [
+        Problem(
+            f"participant {participant}",
+            f"{len(names)} files for {f'run {run!r}' if run else 'one run'} ({', '.join(names)})",
+            "one file per participant and run",
+            "tell them apart by a run column or run- in the names, or select fewer files",
+        )
+        for (participant, run), names in by_label.items()
+        if len(names) > 1
+    ]
+    return problems

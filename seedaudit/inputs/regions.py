@@ -137,9 +137,7 @@ def _image_labels(
     return _at_world(image, grid, voxels).astype(np.int32), [note]
 
 
-def _at_world(
-    image: NDArray[np.float64], grid: Grid, voxels: VoxelSet
-) -> NDArray[np.float64]:
+def _at_world(image: NDArray[np.float64], grid: Grid, voxels: VoxelSet) -> NDArray[np.float64]:
     at = grid.voxel_of(voxels.xyz)
     inside = ((at >= 0) & (at < grid.shape)).all(axis=1)
     values = np.zeros(len(voxels))

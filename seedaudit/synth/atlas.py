@@ -167,9 +167,7 @@ def draw_warps(
     return tuple(Warp(frequencies, phases, personal) for personal in amplitudes)
 
 
-def network_loads(
-    xyz: Floats, voxel_size: float, warp: Warp | None = None
-) -> NDArray[np.float32]:
+def network_loads(xyz: Floats, voxel_size: float, warp: Warp | None = None) -> NDArray[np.float32]:
     """Give the share of each voxel that belongs to each network, (V, K), from 8 points a voxel.
 
     Parameters

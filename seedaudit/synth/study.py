@@ -236,7 +236,7 @@ def _write_image(
         image.header["pixdim"][4] = repetition_time
     with (
         path.open("wb") as file,
-        gzip.GzipFile(filename="", mode="wb", fileobj=file, compresslevel=9, mtime=0) as packed,
+        gzip.GzipFile(filename="", mode="wb", fileobj=file, compresslevel=6, mtime=0) as packed,
     ):
         image.to_file_map({"image": FileHolder(fileobj=packed)})
 

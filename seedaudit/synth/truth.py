@@ -155,9 +155,7 @@ def planted_truth(
             name: {
                 "at": point.tolist(),
                 "network": network,
-                "expected": _network_rows(
-                    expected_correlations(point, SEED_RADIUS, drawn, pooled)
-                ),
+                "expected": _network_rows(expected_correlations(point, SEED_RADIUS, drawn, pooled)),
             }
             for name, (point, network) in points.items()
         },

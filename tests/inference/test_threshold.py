@@ -88,6 +88,20 @@ def test_infinite_statistic_passes(rule):
     np.testing.assert_array_equal(classify(t, t, 5, rule, 0.05), [0, -1, 0])
 
 
+def test_a_statistic_at_the_critical_value_passes():
+    # The step-up rule rejects p <= k q / m, equality included: first with k = m, then with k = 1.
+    at_m = -critical_value(np.zeros(1), 12, "p", 0.05)
+    at_one = critical_value(np.zeros(1), 12, "p", 0.025)
+    for rule, statistic in (
+        ("p", [at_m]),
+        ("fdr", [at_m]),
+        ("fdr", [at_one, 0.0]),
+        ("bonferroni", [at_one, 0.0]),
+    ):
+        t = np.array(statistic)
+        np.testing.assert_array_equal(classify(t, t, 12, rule, 0.05), np.sign(t))
+
+
 # Two-sided critical values of t as printed in common handbook tables (.05, .01).
 T_TABLE = {
     1: (12.7062, 63.6567),
@@ -129,7 +143,7 @@ def test_given_value_of_t():
     np.testing.assert_array_equal(classify(t, t, 9, "t", 3.1), [1, -1, 0, 0])
 
 
-@pytest.mark.parametrize("share", [0.01, 0.1, 0.37, 1.0])
+@pytest.mark.parametrize("share", [0.01, 0.1, 0.3704, 0.557, 1.0])
 @pytest.mark.parametrize("decimals", [0, 12])
 def test_density_is_the_kth_largest(share, decimals):
     t = random_statistics(3, decimals)

@@ -248,6 +248,6 @@ def test_grids_and_sets_are_read_only_and_travel():
     voxels = full(grid)
     with pytest.raises(ValueError, match="read-only"):
         voxels.ijk[0] = 1
-    copy = pickle.loads(pickle.dumps(voxels))
+    copy = pickle.loads(pickle.dumps(voxels))  # noqa: S301 - as a worker process receives it
     np.testing.assert_array_equal(copy.xyz, voxels.xyz)
     assert len(VoxelSet.from_mask(grid, np.zeros(SHAPE))) == 0
