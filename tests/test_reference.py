@@ -1,8 +1,7 @@
 """The reference, held to libraries and to published values.
 
 Without this the naive implementation would be only a second opinion of the same authors. Each check
-names its source; the marks P (read), C (recomputed) and M (from memory) are explained beside the
-project's list of check values.
+names its source; CHECKS is the project's list of check values.
 """
 
 from __future__ import annotations
@@ -18,7 +17,7 @@ from statsmodels.stats.inter_rater import fleiss_kappa as statsmodels_fleiss
 
 from tests import reference_consensus as second
 from tests import reference_maps as first
-from tests.reference import reference_audit, rows_of
+from tests.reference import agreement_stage, reference_audit, rows_of
 from tests.small_study import SmallStudy, write_small_study
 
 NAN = float("nan")
@@ -43,7 +42,7 @@ def audit(study: SmallStudy) -> dict:
 @pytest.mark.parametrize(
     ("edges", "offset", "radius", "count"),
     [
-        # Sphere counts, brute force and OEIS A117609 (CHECKS 9b, 9c; P and C)
+        # Sphere counts, brute force and OEIS A117609 (CHECKS 9b, 9c)
         ((2, 2, 2), (0, 0, 0), 6, 123),
         ((2, 2, 2), (1, 0, 0), 6, 110),
         ((2, 2, 2), (1, 1, 0), 6, 112),
@@ -97,18 +96,18 @@ def test_fisher_z_table_and_clip():
 
 
 def test_lag_one_and_effective_n():
-    # NIST StRD NumAcc1 and NumAcc2, certified lag-1 autocorrelations (CHECKS 14c; M, C)
+    # NIST StRD NumAcc1 and NumAcc2, certified lag-1 autocorrelations (CHECKS 14c, from memory)
     accurate = np.array([10000001.0, 10000003.0, 10000002.0])
     assert first.lag_one(accurate - accurate.mean()) == pytest.approx(-0.5, abs=1e-9)
     wave = np.array([1.2] + [1.1, 1.3] * 500)
     assert first.lag_one(wave - wave.mean()) == pytest.approx(-0.999, abs=1e-9)
-    # Effective n at n = 200 (CHECKS 11; P for the formula, C)
+    # Effective n at n = 200 (Quenouille 1948; CHECKS 11)
     for a, b, n_eff in [(0.3, 0.3, 166.9725), (0.7, 0.4, 112.5), (0.5, -0.5, 333.3333)]:
         assert first.effective_n(200, a, b) == pytest.approx(n_eff, abs=1e-4)
 
 
 def test_single_participant_score_matches_simulation():
-    """sd(z) of AR(1) pairs, a = .5, b = .3, T = 200: 0.08227 simulated (CHECKS 11, S; 3 %)."""
+    """sd(z) of AR(1) pairs, a = .5, b = .3, T = 200: 0.08227 simulated (CHECKS 11; tolerance 3 %)."""
     sd = first.combined_sd([first.effective_n(200, 0.5, 0.3)], [197.0])
     assert sd == pytest.approx(0.08227, rel=0.03)
     # Two equal runs halve the variance; weights pull the mean (by hand).
@@ -179,7 +178,7 @@ def test_contrast_matches_statsmodels():
 
 
 def test_paired_sleep_data():
-    """Student's sleep data, paired t = -4.0621, p = .002833 (Student 1908; CHECKS 14f, P)."""
+    """Student's sleep data, paired t = -4.0621, p = .002833 (Student 1908; CHECKS 14f)."""
     one = np.array([0.7, -1.6, -0.2, -1.2, -0.1, 3.4, 3.7, 0.8, 0, 2.0])
     two = np.array([1.9, 0.8, 1.1, 0.1, -0.1, 4.4, 5.5, 1.6, 4.6, 3.4])
     _, _, t, df = first.contrast_fit(one - two, np.ones((10, 1)), np.ones(1))
@@ -232,6 +231,21 @@ def test_analysis_voxels_by_distance(study, audit):
     assert 0 < audit["excluded"].sum() < len(xyz) / 2
 
 
+def test_reported_placement_is_no_draw_but_counts_in_the_conjunction():
+    """Two voxels, three placements, every number by hand."""
+    effect = np.array([[0.9, 0.5], [0.1, -0.2], [0.3, -0.4]])
+    group = {"effect": effect, "t": 10 * effect, "se": np.array([[0.5, 0.1], [9, 9], [9, 9]])}
+    classes = np.array([[1, 1], [0, -1], [1, -1]], dtype=np.int8)
+    maps = agreement_stage({"group": group, "rows": [0, 1]}, classes, 0.95)
+    assert maps["positive"].tolist() == [0.5, 0.0]
+    assert maps["negative"].tolist() == [0.0, 1.0]
+    assert maps["safe"].tolist() == [0, -1]
+    assert maps["contested"].tolist() == [True, False]
+    assert maps["conjunction"].tolist() == [pytest.approx(1.0), 0.0]
+    np.testing.assert_allclose(maps["effect_mean"], [0.2, -0.3])
+    np.testing.assert_allclose(maps["placement_to_sampling"], np.sqrt(0.02) / [0.5, 0.1])
+
+
 def test_reference_follows_its_own_definitions_vectorised(audit):
     """The loops against whole-array numpy, scipy percentiles and statsmodels' kappa."""
     classes, effect, rows = audit["classes"], audit["group"]["effect"], audit["rows"]
@@ -243,8 +257,6 @@ def test_reference_follows_its_own_definitions_vectorised(audit):
     t = audit["group"]["t"][:, rows]
     lowest = np.where((t > 0).all(0), t.min(0), np.where((t < 0).all(0), t.max(0), 0))
     np.testing.assert_array_equal(audit["agreement"]["conjunction"], lowest)
-    sign = np.sign(t)
-    assert ((sign[1:] == sign[1]).all(axis=0) & (sign[0] != sign[1])).any()  # row 0 must count
     counts = np.stack([(drawn == k).sum(axis=0) for k in (-1, 0, 1)], axis=1)
     assert audit["kappa"] == pytest.approx(statsmodels_fleiss(counts), abs=1e-12)
     for i, one in enumerate(audit["similarity"], start=1):

@@ -1,6 +1,6 @@
 """The reference's classes, agreement, overlap and chance, held to libraries and published values.
 
-Each check names its source; the marks are explained beside the project's list of check values.
+Each check names its source; CHECKS is the project's list of check values.
 """
 
 from __future__ import annotations
@@ -16,7 +16,8 @@ from statsmodels.stats.multitest import multipletests
 from tests import reference_consensus as second
 from tests.reference_maps import correlation
 
-# Thrombolysis example of Benjamini & Hochberg 1995 (CHECKS 7; P): BH rejects 4, Bonferroni 3
+# Thrombolysis example of Benjamini & Hochberg 1995 (CHECKS 7): BH rejects 4,
+# Bonferroni 3 (that count from memory)
 BH_P = [0.0001, 0.0004, 0.0019, 0.0095, 0.0201, 0.0278, 0.0298, 0.0344, 0.0459, 0.3240]
 BH_P += [0.4262, 0.5719, 0.6528, 0.7590, 1.000]
 
@@ -95,7 +96,7 @@ def test_concordance_peak_flow():
     assert second.rms_difference(x, y) ** 2 == pytest.approx(np.mean((x - y) ** 2))
 
 
-# Fleiss 1971, 30 patients, 6 psychiatrists, 5 categories (CHECKS 4b; P, C)
+# Fleiss 1971, 30 patients, 6 psychiatrists, 5 categories (CHECKS 4b)
 FLEISS = """00060 03003 01401 00006 03030 20400 00402 20310 20040 00006
 10050 11040 03300 10050 02031 00501 30012 51000 02040 10203
 00006 01050 02013 20040 10041 05010 40002 02040 10500 00006"""
@@ -107,7 +108,7 @@ def test_chance_corrected_agreement_published():
     assert second.fleiss_kappa(counts) == pytest.approx(0.4302445201, abs=1e-10)
     assert second.fleiss_kappa(counts) == pytest.approx(statsmodels_fleiss(counts), abs=1e-12)
     assert second.gwet_ac1(counts) == pytest.approx(0.4478845158, abs=1e-10)
-    # The two-rater paradox table: AC1 0.940776 (CHECKS 4e; C)
+    # The two-rater paradox table: AC1 0.940776 (CHECKS 4e, irrCAC)
     table = [[2, 0]] * 118 + [[1, 1]] * 7
     assert second.gwet_ac1(table) == pytest.approx(0.940776, abs=1e-6)
     # Its Cohen kappa is below zero (scikit-learn), and so is Fleiss' here

@@ -150,8 +150,9 @@ def nuisance_basis(
     """
     time = np.linspace(-1, 1, n_volumes)
     parts = [np.polynomial.legendre.legvander(time, drift)]
+    cosines = np.empty((n_volumes, 0))
     if band is not None:
-        parts.append(_cosines_outside(band, n_volumes, repetition_time))
+        cosines = _cosines_outside(band, n_volumes, repetition_time)
     if confounds is not None:
         _check_rows("confounds", len(confounds), n_volumes)
         # Centring first: beside a large mean the rank test would not see a small variation.
@@ -160,7 +161,7 @@ def nuisance_basis(
     if censored is not None:
         _check_rows("censored volumes", len(censored), n_volumes)
         parts.append(np.eye(n_volumes)[:, censored])
-    return _orthonormal(np.hstack(parts))
+    return _orthonormal(cosines, np.hstack(parts))
 
 
 def _cosines_outside(
@@ -180,18 +181,26 @@ def _cosines_outside(
     frequency = k / (2 * n_volumes * repetition_time)
     slack = 1e-9 * frequency  # so that rounding does not decide about a band edge
     removed = k[(frequency < low - slack) | (frequency > high + slack)]
-    return np.asarray(
-        np.cos(np.pi * np.outer(2 * np.arange(n_volumes) + 1, removed) / (2 * n_volumes))
-    )
+    angle = np.pi * np.outer(2 * np.arange(n_volumes) + 1, removed) / (2 * n_volumes)
+    return np.asarray(np.sqrt(2 / n_volumes) * np.cos(angle))
 
 
-def _orthonormal(columns: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Orthonormal basis of the span, by QR with column pivoting on columns of unit length."""
+def _orthonormal(cosines: NDArray[np.float64], columns: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Orthonormal basis of the span, by QR with column pivoting on columns of unit length.
+
+    The cosines are orthonormal as they are; only what the columns add to them is decomposed.
+    """
     lengths = np.linalg.norm(columns, axis=0)
-    scaled = columns[:, lengths > 0] / lengths[lengths > 0]
-    q, r, _ = linalg.qr(scaled, mode="economic", pivoting=True)
+    added = columns[:, lengths > 0] / lengths[lengths > 0]
+    q, r, _ = linalg.qr(_beyond(cosines, added), mode="economic", pivoting=True)
     rank = int((np.abs(np.diag(r)) > _RANK_TOLERANCE).sum())
-    return np.ascontiguousarray(q[:, :rank])
+    # Once more: unit length magnifies what rounding left of the cosines in a small remainder.
+    q, _ = linalg.qr(_beyond(cosines, q[:, :rank]), mode="economic")
+    return np.hstack([cosines, q])
+
+
+def _beyond(cosines: NDArray[np.float64], columns: NDArray[np.float64]) -> NDArray[np.float64]:
+    return columns - cosines @ (cosines.T @ columns)
 
 
 def _confounds_table(path: Path, n_volumes: int) -> pd.DataFrame:

@@ -20,8 +20,11 @@ BLOCK = 4096
 LIMIT = 1 - 1e-7
 """Largest |r| that is transformed, so that z is finite."""
 
-CANCELLING = 0.05
+CANCELLING = 0.1
 """Residual share of a voxel's sum of squares below which float32 would lose digits."""
+
+STEEP = 0.9
+"""Correlation above which z magnifies an error of r more than fivefold."""
 
 VANISHED = 1e-13
 """Residual share of the sum of squares below which nothing but float32 rounding is left."""
@@ -132,16 +135,19 @@ def z_blocks(
     n_voxels = run.series.shape[1]
     for start in range(0, n_voxels, block):
         where = slice(start, min(start + block, n_voxels))
-        series = np.ascontiguousarray(run.series[:, where])
+        stored = run.series[:, where]
+        # the basis holds the intercept: centring changes nothing but the digits that are kept
+        series = stored - stored.mean(axis=0)
         total = np.einsum("tv,tv->v", series, series)
         explained = basis32.T @ series
         left = total - np.einsum("qv,qv->v", explained, explained)
         r = seeds32 @ series
         valid = run.finite[where] & (total > 0)
-        risky = valid & ((left < CANCELLING * total) | lag_one)
+        steep = np.maximum(r.max(axis=0), -r.min(axis=0)) > STEEP * np.sqrt(np.maximum(left, 0))
+        risky = valid & (steep | (left < CANCELLING * total) | lag_one)
         autocorrelation = np.zeros(len(valid)) if lag_one else None
         if risky.any():
-            exact = residuals(series[:, risky].astype(np.float64), run.basis)
+            exact = residuals(stored[:, risky].astype(np.float64), run.basis)
             left_exact = np.einsum("tv,tv->v", exact, exact)
             valid[risky] = left_exact > VANISHED * total[risky]
             left[risky] = left_exact

@@ -9,6 +9,7 @@ from scipy.ndimage import gaussian_filter
 from scipy.signal import fftconvolve
 
 from seedaudit.synth.atlas import AMPLITUDES, BASELINE, GREY, Brain, nearest_correlation
+from seedaudit.synth.settings import SynthSettings
 
 Floats = NDArray[np.float64]
 
@@ -98,7 +99,7 @@ def head_motion(rng: np.random.Generator, volumes: int) -> Floats:
     walk = np.cumsum(0.015 * restlessness * rng.standard_normal((volumes, 6)), axis=0)
     for start in np.flatnonzero(rng.random(volumes) < 0.015):
         walk[start : start + 2] += 0.12 * restlessness * rng.standard_normal(6)
-    return walk * scale
+    return np.asarray(walk * scale)
 
 
 def framewise_displacement(motion: Floats) -> Floats:
@@ -117,7 +118,8 @@ def framewise_displacement(motion: Floats) -> Floats:
         mm; NaN at the first volume, which has no change.
     """
     change = np.abs(np.diff(motion, axis=0))
-    return np.r_[np.nan, change[:, :3].sum(axis=1) + HEAD_RADIUS * change[:, 3:].sum(axis=1)]
+    travelled = change[:, :3].sum(axis=1) + HEAD_RADIUS * change[:, 3:].sum(axis=1)
+    return np.concatenate([[np.nan], travelled])
 
 
 class SmoothNoise:
@@ -159,12 +161,7 @@ def simulate_run(
     brain: Brain,
     loads: NDArray[np.float32],
     correlation: Floats,
-    *,
-    volumes: int,
-    repetition_time: float,
-    noise: float,
-    leak: float,
-    quantum: float,
+    settings: SynthSettings,
 ) -> tuple[NDArray[np.int16], pd.DataFrame]:
     """Make one run, volume by volume, and its confounds.
 
@@ -179,15 +176,7 @@ def simulate_run(
         Share of each voxel in each network, 0 to 1.
     correlation : (K, K) array
         Of the latent signals.
-    volumes : int
-    repetition_time : float
-        s.
-    noise : float
-        SD of the voxel noise, in units of a network's signal.
-    leak : float
-        Strength of motion and nuisance in the signal; 0 gives clean data.
-    quantum : float
-        Signal units per stored step (`scl_slope`).
+    settings : SynthSettings
 
     Returns
     -------
@@ -195,22 +184,24 @@ def simulate_run(
     confounds : pandas.DataFrame
         T rows.
     """
+    volumes, repetition_time = settings.volumes, settings.repetition_time
+    strength = settings.leak * UNIT
     latent = latent_series(rng, correlation, volumes, repetition_time) * AMPLITUDES * UNIT
-    nuisance = latent_series(rng, np.eye(1), volumes, repetition_time)[:, 0] * leak * UNIT
-    drift = rng.normal(0, 1.5, brain.baseline.shape) * leak * UNIT
+    nuisance = latent_series(rng, np.eye(1), volumes, repetition_time)[:, 0] * strength
+    drift = rng.normal(0, 1.5, brain.baseline.shape) * strength
     motion = head_motion(rng, volumes)
     displacement = framewise_displacement(motion)
-    burst = noise * UNIT * (1 + leak * np.nan_to_num(displacement))
+    burst = settings.noise * UNIT * (1 + settings.leak * np.nan_to_num(displacement))
     noises = SmoothNoise(rng, brain)
     where = tuple(brain.voxels.ijk.T)
     stored = np.zeros((*brain.voxels.grid.shape, volumes), dtype=np.int16, order="F")
     csf, whole = np.empty(volumes), np.empty(volumes)
     for t in range(volumes):
         signal = brain.baseline + loads @ latent[t] + burst[t] * noises.next()
-        signal += 0.5 * leak * (brain.motion @ motion[t])
+        signal += 0.5 * settings.leak * (brain.motion @ motion[t])
         signal += nuisance[t] * (1.0 + brain.ventricle) + drift * (t / volumes - 0.5)
         csf[t], whole[t] = signal[brain.ventricle].mean(), signal.mean()
-        stored[..., t][where] = np.round(signal / quantum)
+        stored[..., t][where] = np.round(signal / settings.quantum)
     table = pd.DataFrame(motion, columns=list(MOTION))
     derivatives = table.diff().add_suffix("_derivative")
     table["csf"], table["global_signal"] = csf, whole

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import gzip
 import json
-from dataclasses import asdict, dataclass
+from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
@@ -17,7 +17,6 @@ from numpy.typing import NDArray
 from seedaudit.errors import Problem, StudyError
 from seedaudit.space.grid import Grid
 from seedaudit.synth.atlas import (
-    AMPLITUDES,
     ARM_COUPLING,
     NAMES,
     Brain,
@@ -28,85 +27,12 @@ from seedaudit.synth.atlas import (
     network_at,
     network_loads,
 )
+from seedaudit.synth.settings import SynthSettings
 from seedaudit.synth.signals import personal_coupling, simulate_run
 from seedaudit.synth.truth import CLAIMS, SEED_RADIUS, planted_truth, seed_at
 
 MNI_SPACE = 4  # NIfTI-1 code for MNI-152 coordinates
 REPEATED = 3  # the participant, counted from 1, who has two runs
-
-
-@dataclass(frozen=True)
-class SynthSettings:
-    """What a synthetic study is like.
-
-    Parameters
-    ----------
-    participants : int
-        At least 4; the arms alternate.
-    voxel_size : float
-        mm, 1 to 8.
-    volumes : int
-        Per run, at least 20.
-    repetition_time : float
-        s, 0.25 to 6.
-    border_distance : float
-        mm from the reported seed to the planted border, 0 to 12.
-    border_sd : float
-        SD per axis of each participant's smooth border displacement, mm, 0 to 6.
-    coupling_sd : float
-        SD of each participant's network correlations about the planted ones, Fisher z, 0 to 0.5.
-    noise : float
-        SD of the voxel noise, relative to a network's signal, 0 to 10.
-    leak : float
-        Strength of head motion and nuisance in the signal, 0 (clean) to 5.
-    quantum : float
-        Signal units (grey matter is 900) per stored integer, 0.05 to 40; coarse steps make small
-        files.
-    random_state : int
-        0 or more; the same settings give the same bytes.
-
-    Raises
-    ------
-    StudyError
-        For values out of range; all of them at once.
-    """
-
-    participants: int = 12
-    voxel_size: float = 4.0
-    volumes: int = 120
-    repetition_time: float = 2.0
-    border_distance: float = 3.0
-    border_sd: float = 2.0
-    coupling_sd: float = 0.1
-    noise: float = 0.8
-    leak: float = 1.0
-    quantum: float = 1.0
-    random_state: int = 20
-
-    def __post_init__(self) -> None:
-        ranges = {
-            "participants": (4, 9999),
-            "voxel_size": (1, 8),
-            "volumes": (20, 30000),
-            "repetition_time": (0.25, 6),
-            "border_distance": (0, 12),
-            "border_sd": (0, 6),
-            "coupling_sd": (0, 0.5),
-            "noise": (0, 10),
-            "leak": (0, 5),
-            "quantum": (0.05, 40),
-            "random_state": (0, 2**63),
-        }
-        problems = [
-            Problem(name, str(getattr(self, name)), f"{low} to {high}")
-            for name, (low, high) in ranges.items()
-            if not low <= getattr(self, name) <= high
-        ]
-        if problems:
-            raise StudyError(*problems)
-
-
-DEMO = SynthSettings(voxel_size=5.0, volumes=75, repetition_time=3.0, quantum=30.0)
 
 
 def synth_study(folder: Path | str, settings: SynthSettings | None = None) -> Path:
@@ -193,15 +119,7 @@ def _write_participant(
     n_runs = 2 if number == REPEATED else 1
     for run in range(1, n_runs + 1):
         stored, confounds = simulate_run(
-            _generator(settings, number, run),
-            brain,
-            loads,
-            correlation,
-            volumes=settings.volumes,
-            repetition_time=settings.repetition_time,
-            noise=settings.noise,
-            leak=settings.leak,
-            quantum=settings.quantum,
+            _generator(settings, number, run), brain, loads, correlation, settings
         )
         stem = f"{label}_task-rest" + (f"_run-{run}" if n_runs > 1 else "")
         image = func / f"{stem}_bold.nii.gz"

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from itertools import product
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from seedaudit.synth.atlas import (
     AMPLITUDES,
@@ -26,6 +26,7 @@ from seedaudit.synth.atlas import (
 Floats = NDArray[np.float64]
 
 SEED_RADIUS = 6.0  # mm
+INSIDE, ACROSS = 12.0, -8.0  # mm in front of the border, of the points to compare with
 SIGN_FROM = 0.2  # latent correlations below it are called 0
 OCCIPITAL_TARGET = (14.0, -88.0, 6.0)  # mm, well inside the neighbour
 CLAIMS: tuple[dict[str, Any], ...] = (
@@ -56,12 +57,12 @@ def seed_at(border_distance: float) -> tuple[float, float, float]:
     return (SEED_XZ[0], BORDER_Y + border_distance, SEED_XZ[1])
 
 
-def border_distance(at: Sequence[float], warp: Warp) -> float | None:
+def border_distance(at: ArrayLike, warp: Warp) -> float | None:
     """Find how far behind a point a participant's own border lies.
 
     Parameters
     ----------
-    at : (3,) sequence
+    at : (3,) array
         mm.
     warp : Warp
 
@@ -71,13 +72,13 @@ def border_distance(at: Sequence[float], warp: Warp) -> float | None:
         mm towards posterior, negative when the point is already across; None beyond 20 mm.
     """
     steps = np.arange(-20, 20, 0.1)
-    line = np.array(at) - steps[:, None] * (0, 1, 0)
+    line = np.asarray(at) - steps[:, None] * (0, 1, 0)
     across = np.flatnonzero(network_at(warp(line)) == NAMES.index(NEIGHBOUR) + 1)
     return round(float(steps[across[0]]), 1) if len(across) else None
 
 
 def expected_correlations(
-    at: Sequence[float], radius: float, warps: Sequence[Warp], correlation: Floats
+    at: ArrayLike, radius: float, warps: Sequence[Warp], correlation: Floats
 ) -> Floats:
     """Correlation of a sphere's planted signal with every network, without noise.
 
@@ -86,7 +87,7 @@ def expected_correlations(
 
     Parameters
     ----------
-    at : (3,) sequence
+    at : (3,) array
         mm.
     radius : float
         mm.
@@ -103,7 +104,9 @@ def expected_correlations(
     ball = np.array([p for p in product(steps, repeat=3) if np.linalg.norm(p) <= radius])
     counts = np.zeros(len(NAMES) + 1)
     for warp in warps:
-        counts += np.bincount(network_at(warp(ball + at)).ravel(), minlength=len(counts))
+        counts += np.bincount(
+            network_at(warp(ball + np.asarray(at))).ravel(), minlength=len(counts)
+        )
     mix = counts[1:] * AMPLITUDES
     with np.errstate(invalid="ignore"):
         return np.asarray(correlation @ mix / np.sqrt(mix @ correlation @ mix))
@@ -116,64 +119,66 @@ def _network_rows(values: Floats) -> dict[str, dict[str, float | int]]:
     }
 
 
-def planted_truth(
-    distance: float, warps: dict[str, Warp], smallest_inside: float = 12.0
-) -> dict[str, Any]:
+def _points(distance: float, warps: Sequence[Warp]) -> dict[str, Any]:
+    """Say what to expect at the reported seed, deeper in its network, and across the border."""
+    pooled = np.mean([coupling(arm) for arm in ARM_COUPLING], axis=0)
+    places = {
+        "reported": (seed_at(distance), SEED_NETWORK),
+        "inside": (seed_at(INSIDE), SEED_NETWORK),
+        "across": (seed_at(ACROSS), NEIGHBOUR),
+    }
+    return {
+        name: {
+            "at": at,
+            "network": network,
+            "expected": _network_rows(expected_correlations(at, SEED_RADIUS, warps, pooled)),
+        }
+        for name, (at, network) in places.items()
+    }
+
+
+def _arm_difference() -> dict[str, Any]:
+    first, second = (NAMES.index(name) for name in ARM_CONNECTION)
+    return {
+        "connection": ARM_CONNECTION,
+        "latent_r": {arm: round(float(coupling(arm)[first, second]), 3) for arm in ARM_COUPLING},
+        "sign_rested_minus_restricted": 1,
+        "age_effect": 0,
+    }
+
+
+def planted_truth(distance: float, warps: Mapping[str, Warp]) -> dict[str, Any]:
     """Collect what the study was built to show.
 
     Parameters
     ----------
     distance : float
         mm from the reported seed to the planted border.
-    warps : dict of participant label to Warp
-    smallest_inside : float
-        mm in front of the border at which the inner comparison point stands.
+    warps : mapping of participant label to Warp
     """
-    reported = np.array(seed_at(distance))
-    points = {
-        "reported": (reported, SEED_NETWORK),
-        "inside": (np.array(seed_at(smallest_inside)), SEED_NETWORK),
-        "across": (np.array(seed_at(-8.0)), NEIGHBOUR),
-    }
-    pooled = (coupling("rested") + coupling("restricted")) / 2
-    drawn = list(warps.values())
+    at = seed_at(distance)
     return {
-        "units": "mm; r is the correlation of latent signals without noise",
-        "seed": {"name": "posterior", "at": reported.tolist(), "radius": SEED_RADIUS},
+        "units": "mm; r is the correlation of latent signals without noise, arms pooled",
+        "seed": {"name": "posterior", "at": at, "radius": SEED_RADIUS},
         "border": {
             "network": SEED_NETWORK,
             "neighbour": NEIGHBOUR,
             "distance": distance,
             "direction": "posterior",
-            "direction_vector": [0, -1, 0],
-            "nearest_point": [float(reported[0]), BORDER_Y, float(reported[2])],
+            "direction_vector": (0, -1, 0),
+            "nearest_point": seed_at(0),
             "distance_per_participant": {
-                label: border_distance(reported, warp) for label, warp in warps.items()
+                label: border_distance(at, warp) for label, warp in warps.items()
             },
         },
-        "points": {
-            name: {
-                "at": point.tolist(),
-                "network": network,
-                "expected": _network_rows(expected_correlations(point, SEED_RADIUS, drawn, pooled)),
-            }
-            for name, (point, network) in points.items()
-        },
+        "points": _points(distance, list(warps.values())),
         "latent_correlations": {
-            arm: {"networks": list(NAMES), "r": np.round(coupling(arm), 3).tolist()}
-            for arm in ARM_COUPLING
+            "networks": NAMES,
+            **{arm: np.round(coupling(arm), 3).tolist() for arm in ARM_COUPLING},
         },
-        "arm_difference": {
-            "connection": list(ARM_CONNECTION),
-            "latent_r": {
-                arm: round(float(coupling(arm)[tuple(map(NAMES.index, ARM_CONNECTION))]), 3)
-                for arm in ARM_COUPLING
-            },
-            "sign_rested_minus_restricted": 1,
-            "age_effect": 0,
-        },
+        "arm_difference": _arm_difference(),
         "claims": {
-            str(claim["claim"]): {"expected": claim["expected"], "reason": claim["reason"]}
+            claim["claim"]: {"expected": claim["expected"], "reason": claim["reason"]}
             for claim in CLAIMS
         },
     }

@@ -50,10 +50,15 @@ def test_labels_on_another_grid_are_read_at_world_positions(tmp_path, voxels):
     image = LABELS[np.random.default_rng(2).integers(0, 4, (9, 11, 12))]
     path = write(tmp_path, image, sform=other)
     regions = read_regions(path, voxels)
-    # Source: nilearn.image.resample_to_img, nearest neighbour, zero outside.
-    target = nib.Nifti1Image(np.zeros(SHAPE, np.int16), AFFINE)
+    # Source: nilearn.image.resample_to_img, nearest neighbour, zero outside. It ends an image at
+    # the centres of its edge voxels, so it gets a border of zeros to reach their outer faces.
+    border = nib.affines.from_matvec(other[:3, :3], (other @ [-1, -1, -1, 1])[:3])
     expected = resample_to_img(
-        nib.load(path), target, interpolation="nearest", copy_header=True, force_resample=True
+        nib.Nifti1Image(np.pad(image, 1).astype(np.int16), border),
+        nib.Nifti1Image(np.zeros(SHAPE, np.int16), AFFINE),
+        interpolation="nearest",
+        copy_header=True,
+        force_resample=True,
     ).get_fdata()[tuple(voxels.ijk.T)]
     assert (expected == 0).any()
     assert len(np.unique(expected)) == 4
