@@ -83,8 +83,8 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
 
     STUDY is a study file (TOML); a first try needs none, give --seed and --bold instead.
     """
-    from seedaudit.audit import audit
-    from seedaudit.plan import make_plan
+    from seedaudit.auditing import audit
+    from seedaudit.preflight import make_plan
     from seedaudit.progress import LiveProgress, PlainProgress
     from seedaudit.store import check_free, save
 
@@ -117,7 +117,7 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
     """
     from seedaudit.forecast import forecast
     from seedaudit.overview import overview, overview_text
-    from seedaudit.plan import make_plan
+    from seedaudit.preflight import make_plan
     from seedaudit.store import check_free
     from seedaudit.workers import available_cores
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from pathlib import PurePath
 
 
 @dataclass(frozen=True)
@@ -25,6 +26,11 @@ class Problem:
     found: str
     allowed: str = ""
     remedy: str = ""
+
+    @property
+    def brief(self) -> str:
+        """Where (a file by its name alone) and what, for tables that are handed on."""
+        return f"{PurePath(self.where).name}: {self.found}"
 
     def __str__(self) -> str:
         parts = [f"{self.where}: {self.found}"]

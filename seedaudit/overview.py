@@ -10,7 +10,6 @@ import pandas as pd
 
 from seedaudit.forecast import Forecast
 from seedaudit.plan import Plan
-from seedaudit.sweep.schedule import run_basis
 
 
 def overview(plan: Plan, needs: Forecast) -> dict[str, Any]:
@@ -25,7 +24,7 @@ def overview(plan: Plan, needs: Forecast) -> dict[str, Any]:
                 "voxel_mm": [round(float(edge), 3) for edge in run.header.grid.voxel_sizes],
                 "repetition_time_s": plan.cleaning.repetition_time or run.header.repetition_time,
                 "volumes": run.header.n_volumes,
-                "residual_df": run.header.n_volumes - run_basis(run, plan.cleaning)[0].shape[1],
+                "residual_df": run.residual_df,
             }
             for participant in plan.participants
             for run in participant.runs

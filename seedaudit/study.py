@@ -43,12 +43,14 @@ class Section(BaseModel):
 class Data(Section):
     """Where the images are."""
 
-    runs: str | None = None
-    """Table of runs (.tsv: participant_id, bold; maybe run, confounds, mask) or a file glob."""
+    runs: str | tuple[str, ...] | None = None
+    """Table of runs (.tsv: participant_id, bold; maybe run, confounds, mask), glob, or files."""
     bids: str | None = None
     """Or: a BIDS derivative data set."""
     select: dict[str, str] = Field(default_factory=dict)
     """BIDS entities that a run of `bids` must have."""
+    grid: str | None = None
+    """Image that runs are declared to be on the grid of, where their headers code no space."""
     mask: str | None = None
     """Analysis mask on the grid of the runs; without one: voxels present in every run."""
     regions: str | None = None
@@ -312,6 +314,7 @@ def _reason(error: Exception) -> str:
 def _missing_files(content: Mapping[str, Any], base: Path) -> Iterator[Problem]:
     """Look for the named files even when other keys are wrong, so that all is said at once."""
     named = [
+        ("data", "grid"),
         ("data", "mask"),
         ("data", "regions"),
         ("data", "bids"),

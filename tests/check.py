@@ -14,7 +14,7 @@ STEPS = {
     "format": ["ruff", "format", "--check", "."],
     "lint": ["ruff", "check", "."],
     "types": ["mypy"],
-    "layers": ["lint-imports", "--config", "setup.cfg"],
+    "layers": ["lint-imports", "setup.cfg"],
     "tests": ["pytest", "-q", "-n", "auto"],
 }
 

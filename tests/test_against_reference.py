@@ -7,10 +7,10 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from seedaudit.audit import audit, plan_folds
+from seedaudit.auditing import audit, plan_folds
 from seedaudit.inference.glm import orthonormal_design
 from seedaudit.inference.group import ThresholdRule, classifier, group_maps
-from seedaudit.plan import make_plan
+from seedaudit.preflight import make_plan
 from seedaudit.study import Study
 from seedaudit.sweep.moments import merged
 from seedaudit.sweep.participant import participant_blocks, single_participant_blocks
@@ -69,9 +69,7 @@ def in_order(case, values):
 def test_fisher_z_of_every_participant(case):
     plan = case.plan
     weights = plan.sweep_task(plan.design.matrix).weights
-    for participant, person in zip(
-        plan.participants, case.reference["participants"], strict=True
-    ):
+    for participant, person in zip(plan.participants, case.reference["participants"], strict=True):
         runs = [load_run(run, plan.cleaning, plan.voxels)[0] for run in participant.runs]
         blocks, _ = participant_blocks(runs, weights)
         parts = list(blocks)
@@ -191,9 +189,7 @@ def test_participants(arms_study, mean_study):
     for case in (arms_study, mean_study):
         table = case.result.table("participants")
         margin_rows = np.flatnonzero(~case.reference["excluded"])
-        for row, person in zip(
-            table.itertuples(), case.reference["participants"], strict=True
-        ):
+        for row, person in zip(table.itertuples(), case.reference["participants"], strict=True):
             own = margin_rows[~np.asarray(person["missing"])[margin_rows]]
             z = person["z"][:, own]
             r = [np.corrcoef(z[0], drawn)[0, 1] for drawn in z[1:]]

@@ -107,7 +107,7 @@ def test_lag_one_and_effective_n():
 
 
 def test_single_participant_score_matches_simulation():
-    """sd(z) of AR(1) pairs, a = .5, b = .3, T = 200: 0.08227 simulated (CHECKS 11; tolerance 3 %)."""
+    """sd(z) of AR(1) pairs, a = .5, b = .3, T = 200: 0.08227 simulated (CHECKS 11; 3 %)."""
     sd = first.combined_sd([first.effective_n(200, 0.5, 0.3)], [197.0])
     assert sd == pytest.approx(0.08227, rel=0.03)
     # Two equal runs halve the variance; weights pull the mean (by hand).
@@ -241,6 +241,8 @@ def test_reported_placement_is_no_draw_but_counts_in_the_conjunction():
     assert maps["negative"].tolist() == [0.0, 1.0]
     assert maps["safe"].tolist() == [0, -1]
     assert maps["contested"].tolist() == [True, False]
+    flipped = agreement_stage({"group": group, "rows": [0, 1]}, -classes, 0.95)
+    assert flipped["contested"].tolist() == [True, False]
     assert maps["conjunction"].tolist() == [pytest.approx(1.0), 0.0]
     np.testing.assert_allclose(maps["effect_mean"], [0.2, -0.3])
     np.testing.assert_allclose(maps["placement_to_sampling"], np.sqrt(0.02) / [0.5, 0.1])
@@ -260,15 +262,39 @@ def test_reference_follows_its_own_definitions_vectorised(audit):
     counts = np.stack([(drawn == k).sum(axis=0) for k in (-1, 0, 1)], axis=1)
     assert audit["kappa"] == pytest.approx(statsmodels_fleiss(counts), abs=1e-12)
     for i, one in enumerate(audit["similarity"], start=1):
-        theirs = 1 - scipy_dice(classes[0] == 1, classes[i] == 1)
-        assert one["dice_positive"] == pytest.approx(theirs)
-        expected = stats.pearsonr(effect[0, rows], effect[i, rows]).statistic
-        assert one["spatial_r"] == pytest.approx(expected, abs=1e-12)
+        assert one["dice_positive"] == pytest.approx(overlap(classes[0] == 1, classes[i] == 1))
+        assert one["dice_negative"] == pytest.approx(overlap(classes[0] == -1, classes[i] == -1))
+        a, b = effect[0, rows], effect[i, rows]
+        assert one["spatial_r"] == pytest.approx(stats.pearsonr(a, b).statistic, abs=1e-12)
+        moments = np.cov(a, b, ddof=0)
+        lin = 2 * moments[0, 1] / (np.trace(moments) + (a.mean() - b.mean()) ** 2)
+        assert one["concordance"] == pytest.approx(lin, abs=1e-12)
     assert len(audit["pairs"]) == SHORT_COUNT * (SHORT_COUNT - 1) // 2
     z = audit["participants"][4]["z"][:, rows]
     np.testing.assert_allclose(audit["participants"][4]["spatial_r"], np.corrcoef(z)[0], atol=1e-12)
     density = audit["sweep"][1]
+    magnitude = np.abs(t)
+    top = magnitude >= np.sort(magnitude, axis=1)[:, [-round(0.2 * len(rows))]]
+    for name, tail in (("positive", top & (t > 0)), ("negative", top & (t < 0))):
+        mean = np.nanmean([overlap(tail[0], one) for one in tail[1:]])
+        assert density[f"dice_{name}_mean"] == pytest.approx(mean)
+        assert density[f"n_{name}"] == tail[0].sum()
     assert density["n_positive"] + density["n_negative"] == round(0.2 * len(rows))
+
+
+def overlap(a, b):
+    """Give one minus scipy's Dice dissimilarity; NaN when both are empty."""
+    return 1 - scipy_dice(a, b) if (a | b).any() else NAN
+
+
+def chance_corrected(classes):
+    """Give AC1 of (raters, voxels) classes from the mean category shares (Gwet 2008)."""
+    n = len(classes)
+    counts = np.stack([(classes == k).sum(axis=0) for k in (-1, 0, 1)])
+    agreement = ((counts**2).sum(axis=0) - n).mean() / (n * (n - 1))
+    shares = counts.mean(axis=1) / n
+    chance = (1 - (shares**2).sum()) / 2
+    return (agreement - chance) / (1 - chance)
 
 
 def test_regions_vectorised(study, audit):
@@ -288,15 +314,16 @@ def test_regions_vectorised(study, audit):
             for b in audit["classes"][i + 2 :, inside]
         ]
         assert region["pairwise_agreement"] == pytest.approx(np.mean(pairs))
-        positive = audit["classes"][:, inside] == 1
-        overlap = [
-            1 - scipy_dice(positive[0], one) if (positive[0] | one).any() else NAN
-            for one in positive[1:]
-        ]
-        assert region["dice_positive_undefined"] == np.isnan(overlap).sum()
-        if not np.isnan(overlap).all():
-            expected = np.nanpercentile(overlap, 5)
-            assert region["dice_positive_p05"] == pytest.approx(expected)
+        stability = chance_corrected(audit["classes"][1:, inside])
+        assert region["stability"] == pytest.approx(stability, abs=1e-12)
+        for name, tail in (("positive", 1), ("negative", -1)):
+            passing = audit["classes"][:, inside] == tail
+            assert region[f"reported_{name}"] == pytest.approx(passing[0].mean())
+            values = [overlap(passing[0], one) for one in passing[1:]]
+            assert region[f"dice_{name}_undefined"] == np.isnan(values).sum()
+            if not np.isnan(values).all():
+                assert region[f"dice_{name}_mean"] == pytest.approx(np.nanmean(values))
+                assert region[f"dice_{name}_p05"] == pytest.approx(np.nanpercentile(values, 5))
 
 
 def test_single_participant(study):

@@ -187,6 +187,8 @@ def drop_small_clusters(
     """
     if neighbours not in _STRUCTURE_RANK:
         raise ValueError(f"neighbours is {neighbours}; use 6, 18 or 26")
+    if min_voxels <= 1:
+        return classes
     structure = ndimage.generate_binary_structure(3, _STRUCTURE_RANK[neighbours])
     i, j, k = np.asarray(ijk).T
     kept = classes.copy()

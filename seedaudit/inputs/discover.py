@@ -42,7 +42,7 @@ class Run:
 
 
 def find_runs(
-    runs: str | None,
+    runs: str | Sequence[str] | None,
     base: Path,
     bids: str | None = None,
     select: Mapping[str, str] | None = None,
@@ -51,9 +51,9 @@ def find_runs(
 
     Parameters
     ----------
-    runs : str, optional
+    runs : str or sequence of str, optional
         Table (.tsv) with the columns participant_id, bold and optionally run, confounds, mask
-        (paths relative to the table), or a file pattern such as ``sub-*_bold.nii.gz``.
+        (paths relative to the table), a file pattern such as ``sub-*_bold.nii.gz``, or files.
     base : Path
         Folder that relative paths and patterns start from.
     bids : str, optional
@@ -64,7 +64,7 @@ def find_runs(
     Returns
     -------
     tuple of Run
-        In table order, else sorted by path.
+        In the order of the table or the list, else sorted by path.
 
     Raises
     ------
@@ -73,10 +73,12 @@ def find_runs(
     DataError
         With every problem of the table and every missing or repeated file.
     """
-    if runs is not None and runs.endswith(".tsv"):
+    if isinstance(runs, str) and runs.endswith(".tsv"):
         found, problems = _from_table(base / runs)
-    elif runs is not None:
+    elif isinstance(runs, str):
         found, problems = _from_paths(_matching(runs, base)), []
+    elif runs is not None:
+        found, problems = _from_paths([base / path for path in runs]), []
     elif bids is not None:
         found, problems = _from_paths(_bids_files(base / bids, select or {})), []
     else:

@@ -57,12 +57,14 @@ class RunHeader:
     scaling: tuple[float, float] = (1.0, 0.0)
 
 
-def read_header(path: str | Path) -> RunHeader:
+def read_header(path: str | Path, declared: RunHeader | None = None) -> RunHeader:
     """Read and judge the header of a run; the voxel data are not touched.
 
     Parameters
     ----------
     path : path of a NIfTI-1 or NIfTI-2 file, plain or gzip
+    declared : RunHeader, optional
+        Image whose grid the run is declared to be on, used only where its own header codes none.
 
     Raises
     ------
@@ -70,7 +72,7 @@ def read_header(path: str | Path) -> RunHeader:
         With every problem of the header: not NIfTI, not 4-D, complex or RGB values, no coded
         affine, or a size that the file cannot hold.
     """
-    return _judged(Path(path), single=False)
+    return _judged(Path(path), single=False, declared=declared)
 
 
 def read_image_header(path: str | Path) -> RunHeader:
@@ -78,7 +80,7 @@ def read_image_header(path: str | Path) -> RunHeader:
     return _judged(Path(path), single=True)
 
 
-def _judged(path: Path, *, single: bool) -> RunHeader:
+def _judged(path: Path, *, single: bool, declared: RunHeader | None = None) -> RunHeader:
     where = str(path)
     header, compressed = _nifti_header(path)
     problems: list[Problem] = []
@@ -98,7 +100,10 @@ def _judged(path: Path, *, single: bool) -> RunHeader:
         allowed = "a 4-D run of at least two volumes"
         problems.append(Problem(where, "a 3-D image (one volume)", allowed))
     dtype = _dtype(header, where, problems)
-    affine, space_code = _affine(header, shape, where, problems, warnings)
+    if declared is not None and max(int(header["sform_code"]), int(header["qform_code"])) <= 0:
+        affine, space_code = _declared(declared, shape, where, problems, warnings)
+    else:
+        affine, space_code = _affine(header, shape, where, problems, warnings)
     offset, first_allowed = float(header["vox_offset"]), len(header.binaryblock) + 4
     if not offset.is_integer() or offset < first_allowed:
         found = f"the data start at byte {offset:g} (vox_offset)"
@@ -182,7 +187,8 @@ def _affine(
                 where,
                 "no affine is coded (sform_code and qform_code are 0)",
                 "one code above 0",
-                "set the affine of the image; nothing here guesses where the voxels are",
+                "set the affine of the image, or declare an image on the same grid (data.grid); "
+                "nothing here guesses where the voxels are",
             )
         )
     chosen = "sform" if codes["sform"] > 0 else "qform"
@@ -198,6 +204,26 @@ def _affine(
             )
             warnings.append(f"{both} disagree by up to {gap:.3g} mm at a corner; the sform is used")
     return usable[chosen].affine, codes[chosen]
+
+
+def _declared(
+    declared: RunHeader,
+    shape: tuple[int, int, int],
+    where: str,
+    problems: list[Problem],
+    warnings: list[str],
+) -> tuple[NDArray[np.float64], int]:
+    """The affine and code that the user declared for an image that codes none."""
+    if declared.grid.shape != shape:
+        problems.append(
+            Problem(
+                where,
+                f"codes no affine and has the shape {shape}",
+                f"the shape of the declared grid {declared.path.name}, {declared.grid.shape}",
+            )
+        )
+    warnings.append(f"codes no affine; on the grid of {declared.path.name}, as declared")
+    return declared.grid.affine, declared.space_code
 
 
 def _check_size(path: Path, size: int, compressed: bool) -> None:

@@ -152,11 +152,9 @@ def _dosenbach(
     coordinates = fetch_coords_dosenbach_2010(ordered_regions=False)
     names, number = np.unique(np.asarray(coordinates.networks, str), return_inverse=True)
     centres = np.asarray(coordinates.rois, np.float64)
-    distance, which = KDTree(centres).query(voxels.xyz, k=2)
-    # Of two centres at one distance the earlier row counts, whatever the search tree returns.
-    tied = distance[:, 1] - distance[:, 0] <= _SLACK
-    row = np.where(tied, which.min(axis=1), which[:, 0])
-    inside = distance[:, 0] <= _DOSENBACH_RADIUS + _SLACK
+    # Centres of different networks are more than 10 mm apart, so no tie between two can arise.
+    distance, row = KDTree(centres).query(voxels.xyz)
+    inside = distance <= _DOSENBACH_RADIUS + _SLACK
     labels = np.where(inside, number[row] + 1, 0).astype(np.int32)
     note = (
         f"regions: the six networks of Dosenbach et al. 2010 Science 329:1358, spheres of "

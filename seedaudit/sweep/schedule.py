@@ -1,8 +1,7 @@
 """Which worker does what: folds of participants, each swept by one thread.
 
-A fold is the unit of work. Its participants are added one after the other in a fixed order and
-the linear algebra of a worker is single-threaded, so that the digits do not depend on the number
-of workers.
+A fold is the unit of work. Its participants are added one after the other in a fixed order, so
+that the digits do not depend on the number of workers.
 """
 
 from __future__ import annotations
@@ -16,7 +15,6 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
-from threadpoolctl import threadpool_limits
 
 from seedaudit.errors import DataError, Problem
 from seedaudit.inputs.nuisance import censored_volumes, nuisance_basis, read_confounds
@@ -38,11 +36,20 @@ LEAST_RESIDUAL_DF = 4
 
 @dataclass(frozen=True)
 class RunTask:
-    """One run to read: its header, its confounds table and its own mask, if any."""
+    """One run to read: its header, its confounds table and its own mask, if any.
+
+    `nuisance_rank` is the number of independent nuisance columns, the intercept included.
+    """
 
     header: RunHeader
     confounds: Path | None = None
     mask: Path | None = None
+    nuisance_rank: int = 1
+
+    @property
+    def residual_df(self) -> int:
+        """Volumes minus independent nuisance columns."""
+        return self.header.n_volumes - self.nuisance_rank
 
 
 @dataclass(frozen=True)
@@ -166,21 +173,9 @@ def load_run(task: RunTask, recipe: CleaningRecipe, voxels: VoxelSet) -> tuple[C
     Raises
     ------
     DataError
-        For unreadable images or tables, and when too few volumes are left for the confounds.
+        For unreadable images or tables.
     """
-    n_volumes = task.header.n_volumes
     basis, n_censored = run_basis(task, recipe)
-    left = n_volumes - basis.shape[1]
-    if left < LEAST_RESIDUAL_DF:
-        raise DataError(
-            Problem(
-                task.header.path.name,
-                f"{n_volumes} volumes, {basis.shape[1]} independent nuisance columns: "
-                f"{left} residual degrees of freedom",
-                f"at least {LEAST_RESIDUAL_DF}",
-                "fewer confounds, a wider pass band, less censoring, or longer runs",
-            )
-        )
     data = read_run(task.header, voxels, smooth=recipe.smooth)
     finite = data.finite
     if task.mask is not None:
@@ -243,7 +238,7 @@ def sweep_participant(
         ]
         if not task.set_aside:
             raise DataError(*named) from error
-        reason = "; ".join(f"{problem.where}: {problem.found}" for problem in error.problems)
+        reason = "; ".join(problem.brief for problem in error.problems)
         return ParticipantRecord(
             participant.participant, participant.row, len(participant.runs), used=False,
             reason=reason,
@@ -332,7 +327,7 @@ def sweep(
             on_participant(records[-1])
         return moments, records
 
-    with threadpool_limits(limits=1), ThreadPoolExecutor(max_workers=workers) as pool:
+    with ThreadPoolExecutor(max_workers=workers) as pool:
         futures = [pool.submit(sweep_fold, fold) for fold in folds]
         try:
             wait(futures, return_when=FIRST_EXCEPTION)

@@ -48,7 +48,7 @@ class SynthSettings:
     volumes: int = 120
     repetition_time: float = 2.0
     border_distance: float = 3.0
-    border_sd: float = 2.0
+    border_sd: float = 1.5
     coupling_sd: float = 0.1
     noise: float = 0.8
     leak: float = 1.0
@@ -78,4 +78,4 @@ class SynthSettings:
             raise StudyError(*problems)
 
 
-DEMO = SynthSettings(voxel_size=5.0, volumes=75, repetition_time=3.0, quantum=30.0)
+DEMO = SynthSettings(voxel_size=5.0, volumes=72, repetition_time=3.0, quantum=30.0)

@@ -114,7 +114,7 @@ def expected_correlations(
 
 def _network_rows(values: Floats) -> dict[str, dict[str, float | int]]:
     return {
-        name: {"r": round(float(r), 3), "sign": int(np.sign(r)) if abs(r) >= SIGN_FROM else 0}
+        name: {"r": round(float(r), 3) + 0.0, "sign": int(np.sign(r)) if abs(r) >= SIGN_FROM else 0}
         for name, r in zip(NAMES, values, strict=True)
     }
 
@@ -174,7 +174,7 @@ def planted_truth(distance: float, warps: Mapping[str, Warp]) -> dict[str, Any]:
         "points": _points(distance, list(warps.values())),
         "latent_correlations": {
             "networks": NAMES,
-            **{arm: np.round(coupling(arm), 3).tolist() for arm in ARM_COUPLING},
+            **{arm: (np.round(coupling(arm), 3) + 0.0).tolist() for arm in ARM_COUPLING},
         },
         "arm_difference": _arm_difference(),
         "claims": {

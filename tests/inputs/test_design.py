@@ -147,6 +147,11 @@ def test_rows_follow_the_participants_and_sub_does_not_matter(table):
     assert design.matrix[:, 1].tolist() == expected
 
 
+def test_levels_that_are_numbers_are_sorted_as_numbers(table):
+    design = build_design(ids(table), table, "~ C(site)", "Intercept")
+    assert design.names == ("Intercept", "C(site)[T.2]", "C(site)[T.10]")
+
+
 def test_strata_are_the_cells_of_the_factors(table):
     design = build_design(ids(table), table, "~ arm + C(site) + age", "age")
     frame = pd.read_csv(table, sep="\t")

@@ -81,6 +81,13 @@ def test_same_run_twice(tmp_path):
     assert "2 files for run '1'" in str(problem)
 
 
+def test_one_file_under_two_names(tmp_path):
+    touch(tmp_path, "sub-1_bold.nii")
+    (tmp_path / "sub-2_bold.nii").symlink_to(tmp_path / "sub-1_bold.nii")
+    (problem,) = problems(DataError, "sub-*", tmp_path)
+    assert "listed 2 times (sub-1, sub-2)" in str(problem)
+
+
 def test_missing_columns_and_tables(tmp_path):
     table(tmp_path, ["participant", "bolt"], ["p1", "a.nii"])
     found = problems(DataError, "runs.tsv", tmp_path)

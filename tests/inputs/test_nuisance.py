@@ -115,6 +115,14 @@ def test_rank_counts_repeated_dependent_constant_and_offset_columns_once():
     assert same_span(basis, np.linalg.qr(np.column_stack([np.ones(T), np.arange(T), a, b]))[0])
 
 
+def test_a_small_variation_on_a_huge_mean_counts():
+    # float64 holds 1e11 + b to about 1e-5; beside the mean that is below any rank tolerance.
+    b = np.random.default_rng(8).normal(size=T)
+    basis = nuisance_basis(T, confounds=(1e11 + b)[:, None])
+    assert basis.shape[1] == 2
+    np.testing.assert_allclose(removed(basis, b), 0, atol=1e-4)
+
+
 def test_more_columns_than_volumes_leave_nothing():
     confounds = np.random.default_rng(4).normal(size=(10, 25))
     assert nuisance_basis(10, confounds=confounds).shape == (10, 10)

@@ -3,7 +3,7 @@ from __future__ import annotations
 import nibabel as nib
 import numpy as np
 import pytest
-from nilearn.datasets import load_mni152_brain_mask
+from nilearn.datasets import fetch_coords_dosenbach_2010, load_mni152_brain_mask
 from nilearn.image import resample_to_img
 
 from seedaudit.errors import DataError
@@ -161,8 +161,6 @@ def test_dosenbach(brain):
 
 def test_dosenbach_spheres_against_plain_distances(brain):
     # Source: all distances by brute force from nilearn's table in its other (ordered) form.
-    from nilearn.datasets import fetch_coords_dosenbach_2010
-
     table = fetch_coords_dosenbach_2010(ordered_regions=True)
     regions = read_regions("dosenbach2010", brain)
     centres = np.asarray(table.rois, float)
@@ -173,6 +171,14 @@ def test_dosenbach_spheres_against_plain_distances(brain):
         at_nearest = np.flatnonzero(distance[row] <= nearest[row] + 1e-6)
         names = {str(table.networks.iloc[i]) for i in at_nearest}
         assert regions.names[regions.labels[row] - 1] in names
+
+
+def test_dosenbach_spheres_of_two_networks_never_meet():
+    # Source: nilearn's table; so the nearest centre within 5 mm is always the only network.
+    table = fetch_coords_dosenbach_2010(ordered_regions=False)
+    centres, networks = np.asarray(table.rois, float), np.asarray(table.networks, str)
+    distance = np.linalg.norm(centres[:, None] - centres, axis=2)
+    assert distance[networks[:, None] != networks].min() > 10 + 1e-3
 
 
 def test_dosenbach_does_not_depend_on_storage(brain):

@@ -7,11 +7,14 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any, Protocol
 
+from threadpoolctl import threadpool_limits
+
 from seedaudit.conclusions import conclude_seed, group_state
 from seedaudit.errors import Problem, StudyError
 from seedaudit.inference.glm import orthonormal_design
 from seedaudit.inputs.anatomy import anatomy
-from seedaudit.plan import Plan, make_plan
+from seedaudit.plan import Plan
+from seedaudit.preflight import make_plan
 from seedaudit.provenance import provenance
 from seedaudit.results import Audit
 from seedaudit.study import Study
@@ -72,21 +75,23 @@ def audit(
     matrix, contrast = orthonormal_design(plan.design.matrix, plan.design.contrast)
     folds = plan_folds(plan)
     progress.stage("reading participants", len(plan.participants))
-    swept = sweep(
-        plan.sweep_task(matrix),
-        folds,
-        workers=workers,
-        on_participant=lambda record: progress.step(_label(record)),
-    )
-    swept_at = time.monotonic()
+    # single-threaded products, so that the digits depend on no number of cores
+    with threadpool_limits(limits=1):
+        swept = sweep(
+            plan.sweep_task(matrix),
+            folds,
+            workers=workers,
+            on_participant=lambda record: progress.step(_label(record)),
+        )
+        swept_at = time.monotonic()
 
-    group = group_state(plan, swept, matrix, contrast)
-    picture, source = anatomy(plan.first_run, template=plan.in_template_space)
-    progress.stage("drawing conclusions", len(plan.seeds))
-    seeds = []
-    for number, seed in enumerate(plan.seeds):
-        seeds.append(conclude_seed(plan, swept, group, number, picture))
-        progress.step(seed.seed.name)
+        group = group_state(plan, swept, matrix, contrast)
+        picture, source = anatomy(plan.first_run, template=plan.in_template_space)
+        progress.stage("drawing conclusions", len(plan.seeds))
+        seeds = []
+        for number, seed in enumerate(plan.seeds):
+            seeds.append(conclude_seed(plan, swept, group, number, picture))
+            progress.step(seed.seed.name)
 
     timings = {
         "pass over the data": swept_at - started,
@@ -132,7 +137,15 @@ def audit_images(
     **placements
         More keys of the section `placements`.
     """
-    raise NotImplementedError
+    content: dict[str, Any] = {
+        "data": {"runs": [str(Path(path).absolute()) for path in bold]},
+        "seed": [{"at": [float(value) for value in seed], "radius": radius, "space": space}],
+        "placements": {"within": within, **placements},
+    }
+    for key, path in {"mask": mask, "regions": regions}.items():
+        if path is not None:
+            content["data"][key] = str(path)
+    return audit(Study.from_mapping(content), workers=workers)
 
 
 def _label(record: ParticipantRecord) -> str:
