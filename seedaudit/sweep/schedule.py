@@ -93,6 +93,8 @@ class SweepTask:
         Leave out a participant whose data are bad, instead of stopping.
     single : bool
         One participant: keep the sampling variance of z.
+    keep_reported : bool
+        Keep each participant's z map of every reported placement (for permutation).
     """
 
     voxels: VoxelSet
@@ -103,6 +105,7 @@ class SweepTask:
     min_coverage: float = 0.5
     set_aside: bool = False
     single: bool = False
+    keep_reported: bool = False
 
     def empty_moments(self) -> Moments:
         """The neutral element for this task."""
@@ -114,7 +117,8 @@ class SweepTask:
 class ParticipantRecord:
     """What is kept of a participant beside the moments.
 
-    `coverage` (N,) is the smallest share of each sphere that varies in the participant's runs.
+    `coverage` (N,) is the smallest share of each sphere that varies in the participant's runs;
+    `reported_z` (clouds, V) is z of the reported placements, NaN where missing, if it was kept.
     """
 
     participant: str
@@ -127,6 +131,7 @@ class ParticipantRecord:
     digests: tuple[str, ...] = ()
     coverage: NDArray[np.float64] | None = None
     kept: tuple[Kept, ...] = ()
+    reported_z: NDArray[np.float32] | None = None
     used: bool = True
     reason: str = ""
 
@@ -244,12 +249,16 @@ def sweep_participant(
             reason=reason,
         )  # fmt: skip
     sums = [KeptSums(cloud) for cloud in task.clouds]
+    reported = [cloud.rows.start for cloud in task.clouds]
+    maps = np.full((len(reported), len(task.voxels)), np.nan, np.float32)
     n_missing = 0
     for block, variance in blocks:
         moments.add(task.design[participant.row], block.where, block.z, block.valid, variance)
         n_missing += int((~block.valid).sum())
         for part in sums:
             part.add(block)
+        if task.keep_reported:
+            maps[:, block.where] = np.where(block.valid, block.z[reported], np.nan)
     return ParticipantRecord(
         participant.participant,
         participant.row,
@@ -261,6 +270,7 @@ def sweep_participant(
         digests=tuple(digest for _, _, digest in loaded),
         coverage=coverage,
         kept=tuple(part.finish() for part in sums),
+        reported_z=maps if task.keep_reported else None,
     )
 
 
