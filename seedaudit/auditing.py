@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -18,7 +18,9 @@ from seedaudit.preflight import make_plan
 from seedaudit.provenance import provenance
 from seedaudit.results import Audit
 from seedaudit.study import Study
-from seedaudit.sweep.schedule import ParticipantRecord, ParticipantTask, assign_folds, sweep
+from seedaudit.sweep.checkpoint import Checkpoint
+from seedaudit.sweep.schedule import assign_folds, sweep, sweep_key
+from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
 from seedaudit.workers import available_cores
 
 
@@ -43,7 +45,11 @@ class Silence:
 
 
 def audit(
-    study: Study | Plan, *, workers: int | None = None, progress: Progress | None = None
+    study: Study | Plan,
+    *,
+    workers: int | None = None,
+    progress: Progress | None = None,
+    checkpoint: Checkpoint | None = None,
 ) -> Audit:
     """Does the seed-correlation result survive small shifts of its seed?
 
@@ -54,6 +60,8 @@ def audit(
     workers : int, optional
         Threads; default: the cores that this process may use.
     progress : Progress, optional
+    checkpoint : Checkpoint, optional
+        From `open_checkpoint`, entered: where the pass is kept on disk and gone on from.
 
     Returns
     -------
@@ -81,6 +89,7 @@ def audit(
             plan.sweep_task(matrix),
             folds,
             workers=workers,
+            checkpoint=checkpoint,
             on_participant=lambda record: progress.step(_label(record)),
         )
         swept_at = time.monotonic()
@@ -99,6 +108,15 @@ def audit(
     }
     told = provenance(plan, swept, group, timings=timings, workers=workers, anatomy=source)
     return Audit(plan.study.title, tuple(seeds), told)
+
+
+def open_checkpoint(
+    plan: Plan, folder: Path, *, fresh: bool = False, tell: Callable[[str], None] = print
+) -> Checkpoint:
+    """The progress of a plan in a folder, to be entered as a context until the result is safe."""
+    matrix, _ = orthonormal_design(plan.design.matrix, plan.design.contrast)
+    key = sweep_key(plan.sweep_task(matrix), plan_folds(plan))
+    return Checkpoint(folder, key, fresh=fresh, tell=tell)
 
 
 def plan_folds(plan: Plan) -> list[list[ParticipantTask]]:

@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import json
+import os
+import signal
 import sys
 import traceback
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -77,13 +80,15 @@ def app(debug: bool) -> None:
 @app.command(epilog=EPILOG_RUN)
 @_shared
 @click.option("--replace", is_flag=True, help="Put the result in the place of an earlier one.")
+@click.option("--fresh", is_flag=True, help="Ignore the progress of an interrupted run.")
 def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, replace: bool,
-        **asked: Any) -> int:  # fmt: skip
+        fresh: bool, **asked: Any) -> int:  # fmt: skip
     """Audit a study: check everything, read the data once, write the result folder.
 
     STUDY is a study file (TOML); a first try needs none, give --seed and --bold instead.
+    After an interruption the same command goes on where it was.
     """
-    from seedaudit.auditing import audit
+    from seedaudit.auditing import audit, open_checkpoint
     from seedaudit.preflight import make_plan
     from seedaudit.progress import LiveProgress, PlainProgress
     from seedaudit.store import check_free, save
@@ -94,9 +99,12 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
     plan = make_plan(study)
     console = Console(stderr=True)
     bar = LiveProgress(console) if console.is_terminal and not quiet else PlainProgress(quiet=quiet)
-    with bar as progress:
-        result = audit(plan, workers=workers, progress=progress)
-    save(result, folder, replace=replace)
+    kept = folder.with_name(f".{folder.name}.progress")
+    with _second_interrupt_ends(), open_checkpoint(plan, kept, fresh=fresh, tell=_say) as progress:
+        with bar as shown:
+            result = audit(plan, workers=workers, progress=shown, checkpoint=progress)
+        save(result, folder, replace=replace)
+        progress.finish()
     _print_warnings(result.provenance["warnings"], quiet)
     if as_json:
         _print_json(result.summary)
@@ -200,6 +208,26 @@ def _study(asked: dict[str, Any]) -> Any:
     return Study.from_mapping({**content, "seed": [content["seed"]]}, Path())
 
 
+def _say(text: str) -> None:
+    click.echo(text, err=True)
+
+
+@contextmanager
+def _second_interrupt_ends() -> Iterator[None]:
+    """The first Ctrl-C lets every worker end its participant; the second ends at once."""
+
+    def interrupted(*_: object) -> None:
+        signal.signal(signal.SIGINT, lambda *_: os._exit(INTERRUPTED))
+        _say("interrupted: ending the participants at work (again to end at once)")
+        raise KeyboardInterrupt
+
+    earlier = signal.signal(signal.SIGINT, interrupted)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, earlier)
+
+
 def _print_warnings(warnings: Sequence[str], quiet: bool) -> None:
     if warnings and not quiet:
         click.echo(f"{len(warnings)} warning(s):", err=True)
@@ -238,7 +266,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         error.show()
         return StudyError.exit_code
     except (KeyboardInterrupt, click.Abort):
-        click.echo("interrupted; nothing was written", err=True)
+        _say("interrupted; the same command goes on from here")
         return INTERRUPTED
     except Exception as error:
         if debug:

@@ -11,9 +11,9 @@ from scipy import sparse
 from seedaudit.inputs.design import Design
 from seedaudit.inputs.header import RunHeader
 from seedaudit.inputs.regions import Regions
-from seedaudit.placements import Cloud
+from seedaudit.placements import Cloud, uncertainty_sd
 from seedaudit.space.grid import VoxelSet
-from seedaudit.study import Seed, Study
+from seedaudit.study import Placements, Seed, Study
 from seedaudit.sweep.participant import CloudTargets
 from seedaudit.sweep.schedule import (
     CleaningRecipe,
@@ -21,6 +21,10 @@ from seedaudit.sweep.schedule import (
     ParticipantTask,
     SweepTask,
 )
+
+USUAL_WITHIN = 6.0
+CUT_OFF_SD = 3.0
+"""A normal cloud drawn from an uncertainty budget ends at this many standard deviations."""
 
 
 @dataclass(frozen=True)
@@ -116,3 +120,14 @@ class Plan:
             return sparse.csr_array((len(self.voxels), 0))
         members = self.regions.labels[:, None] == self.regions.index[None, :]
         return sparse.csr_array((members & analysis[:, None]).astype(np.float64))
+
+
+def cloud_size(asked: Placements) -> tuple[float, float | None]:
+    """Radius of the cloud and standard deviation of its draws, mm."""
+    if asked.uncertainty is not None:
+        sd = uncertainty_sd(asked.uncertainty)
+        return asked.within or CUT_OFF_SD * sd, sd
+    within = asked.within or (max(asked.distances) if asked.distances else USUAL_WITHIN)
+    if asked.draw == "normal":
+        return within, asked.sd or within / 2
+    return within, None

@@ -20,12 +20,12 @@ from seedaudit.inputs.discover import Run, find_runs
 from seedaudit.inputs.header import RunHeader, read_header, read_image_header
 from seedaudit.inputs.regions import Regions, read_regions
 from seedaudit.inputs.volumes import first_volume, read_mask
-from seedaudit.placements import build_cloud, uncertainty_sd
-from seedaudit.plan import Plan, SeedPlan
+from seedaudit.placements import build_cloud
+from seedaudit.plan import Plan, SeedPlan, cloud_size
 from seedaudit.space.grid import Grid, VoxelSet
 from seedaudit.space.spheres import cloud_exclusion
 from seedaudit.space.talairach import talairach_to_mni
-from seedaudit.study import Placements, Seed, Study
+from seedaudit.study import Seed, Study
 from seedaudit.sweep.schedule import (
     LEAST_RESIDUAL_DF,
     CleaningRecipe,
@@ -36,10 +36,6 @@ from seedaudit.sweep.schedule import (
 )
 
 Result = TypeVar("Result")
-
-USUAL_WITHIN = 6.0
-CUT_OFF_SD = 3.0
-"""A normal cloud drawn from an uncertainty budget ends at this many standard deviations."""
 
 WHOLE_FIELD = 0.95
 """A presence mask that fills more of the image than this has found no background."""
@@ -303,17 +299,6 @@ def _seed_plan(study: Study, seed: Seed, voxels: VoxelSet, inside: VoxelSet | No
             )
         )
     return SeedPlan(seed, at, cloud, within, sd, margin, ~spheres)
-
-
-def cloud_size(asked: Placements) -> tuple[float, float | None]:
-    """Radius of the cloud and standard deviation of its draws, mm."""
-    if asked.uncertainty is not None:
-        sd = uncertainty_sd(asked.uncertainty)
-        return asked.within or CUT_OFF_SD * sd, sd
-    within = asked.within or (max(asked.distances) if asked.distances else USUAL_WITHIN)
-    if asked.draw == "normal":
-        return within, asked.sd or within / 2
-    return within, None
 
 
 def _note_headers(study: Study, participants: list[ParticipantTask], findings: Findings) -> None:

@@ -6,12 +6,11 @@ All problems of a file are collected and raised together.
 
 from __future__ import annotations
 
-import difflib
 import json
 import tomllib
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any, Literal, Self, get_args
+from typing import Annotated, Any, Literal, Self
 
 from pydantic import (
     BaseModel,
@@ -24,6 +23,7 @@ from pydantic import (
 )
 
 from seedaudit.errors import Problem, StudyError
+from seedaudit.study_problems import problems_of
 
 PUBLISHED_REGIONS = ("dosenbach2010",)
 SAMPLE_NAME = r"^[A-Za-z0-9][A-Za-z0-9_-]*$"
@@ -43,7 +43,7 @@ class Section(BaseModel):
 class Data(Section):
     """Where the images are."""
 
-    runs: str | tuple[str, ...] | None = None
+    runs: str | Annotated[tuple[str, ...], Field(min_length=1)] | None = None
     """Table of runs (.tsv: participant_id, bold; maybe run, confounds, mask), glob, or files."""
     bids: str | None = None
     """Or: a BIDS derivative data set."""
@@ -95,7 +95,7 @@ class Cleaning(Section):
     @classmethod
     def _rising(cls, band: tuple[float, float] | None) -> tuple[float, float] | None:
         if band is not None and not 0 <= band[0] < band[1]:
-            raise ValueError("the pass band must be two rising frequencies, 0 <= low < high")
+            raise ValueError("two rising frequencies in Hz, 0 <= low < high")
         return band
 
 
@@ -142,7 +142,7 @@ class Placements(Section):
     @classmethod
     def _positive(cls, values: tuple[float, ...] | None) -> tuple[float, ...] | None:
         if values is not None and (not values or min(values) <= 0):
-            raise ValueError("must be one or more lengths above 0 mm")
+            raise ValueError("one or more lengths above 0 mm")
         return values
 
     @field_validator("uncertainty")
@@ -151,7 +151,7 @@ class Placements(Section):
         if budget is not None and (
             not budget or min(budget.values()) < 0 or max(budget.values()) <= 0
         ):
-            raise ValueError("needs standard deviations in mm, none negative, not all 0")
+            raise ValueError("standard deviations in mm, none negative, not all 0")
         return budget
 
     @model_validator(mode="after")
@@ -202,7 +202,9 @@ class Threshold(Section):
         if self.level is None:
             object.__setattr__(self, "level", usual.get(self.rule, 0.1))
         elif self.rule in ("p", "fdr", "bonferroni", "density") and self.level >= 1:
-            raise ValueError(f"`level` of rule {self.rule} is a share: above 0, below 1")
+            raise ValueError(
+                f"`level` = {self.level:g} of rule {self.rule} must be a share: above 0, below 1"
+            )
         return self
 
 
@@ -279,9 +281,16 @@ class Study(Section):
         path = Path(path)
         try:
             content = tomllib.loads(path.read_text(encoding="utf-8"))
-        except (OSError, UnicodeDecodeError) as error:
+        except OSError as error:
+            found = f"cannot be read ({error.strerror or error})"
             raise StudyError(
-                Problem(path.name, f"cannot be read ({_reason(error)})", "a TOML file")
+                Problem(str(path), found, "a study file (TOML)", "check the path")
+            ) from error
+        except UnicodeDecodeError as error:
+            raise StudyError(
+                Problem(
+                    path.name, "is not text in UTF-8", "a study file (TOML)", "save it as UTF-8"
+                )
             ) from error
         except tomllib.TOMLDecodeError as error:
             raise StudyError(
@@ -299,16 +308,12 @@ class Study(Section):
             # JSON is the strict mode in which a list may stand for a tuple but "6" not for 6
             study = cls.model_validate_json(json.dumps(content, default=str), strict=True)
         except ValidationError as error:
-            problems += [_translate(detail) for detail in _own_causes(error.errors())]
+            problems += problems_of(error, cls)
         problems += list(_missing_files(content, base))
         if problems or study is None:
             raise StudyError(*problems)
         study._base = base
         return study
-
-
-def _reason(error: Exception) -> str:
-    return getattr(error, "strerror", None) or str(error)
 
 
 def _missing_files(content: Mapping[str, Any], base: Path) -> Iterator[Problem]:
@@ -342,50 +347,3 @@ def _missing_files(content: Mapping[str, Any], base: Path) -> Iterator[Problem]:
                 f"a path relative to the study file{also}",
                 "correct the path",
             )
-
-
-def _own_causes(details: Sequence[Any]) -> Iterator[Any]:
-    """Leave out a container's complaint of being too short where its own items are the cause."""
-    for detail in details:
-        place = detail["loc"]
-        inner = any(len(d["loc"]) > len(place) and d["loc"][: len(place)] == place for d in details)
-        if not (inner and detail["type"] == "too_short"):
-            yield detail
-
-
-def _translate(detail: Any) -> Problem:
-    """One error of the validator in the words of this program."""
-    location = detail["loc"]
-    where = "".join(
-        f"[{part + 1}]" if isinstance(part, int) else f".{part}" for part in location
-    ).lstrip(".")
-    found = detail["input"]
-    match detail["type"]:
-        case "extra_forbidden":
-            keys = _keys_of(location[:-1])
-            near = difflib.get_close_matches(str(location[-1]), keys, n=1)
-            remedy = f"did you mean `{near[0]}`?" if near else "remove it"
-            return Problem(where, "is no key of the study file", ", ".join(keys), remedy)
-        case "missing":
-            return Problem(where, "is missing", "this key is needed", "add it")
-        case "value_error":
-            return Problem(where or "study", "does not fit", str(detail["ctx"]["error"]))
-        case _:
-            shown = repr(found)
-            shown = shown if len(shown) <= 60 else shown[:57] + "..."
-            return Problem(where, f"is {shown}", detail["msg"].replace("Input should be ", ""))
-
-
-def _keys_of(location: tuple[int | str, ...]) -> list[str]:
-    """The valid keys at a place of the study file."""
-    model: type[BaseModel] = Study
-    for part in location:
-        if isinstance(part, int):
-            continue
-        annotation = model.model_fields[part].annotation
-        inner = [annotation, *get_args(annotation)]
-        model = next(
-            (kind for kind in inner if isinstance(kind, type) and issubclass(kind, BaseModel)),
-            model,
-        )
-    return list(model.model_fields)

@@ -13,7 +13,7 @@ from seedaudit.inference.group import ThresholdRule, classifier, group_maps
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
 from seedaudit.sweep.moments import merged
-from seedaudit.sweep.participant import participant_blocks, single_participant_blocks
+from seedaudit.sweep.participant import participant_blocks
 from seedaudit.sweep.schedule import load_run, sweep
 from tests.reference import classes_stage, maps_stage, reference_audit, rows_of
 from tests.small_study import write_small_study
@@ -206,10 +206,10 @@ def test_single_participant_scores(tmp_path):
     )
     order = rows_of(reference["voxels"], plan.voxels.ijk)
     runs = [load_run(run, plan.cleaning, plan.voxels)[0] for run in plan.participants[0].runs]
-    blocks, _ = single_participant_blocks(runs, plan.sweep_task(np.ones((1, 1))).weights)
-    parts = list(blocks)
-    z = np.concatenate([part.z for part, _ in parts], axis=1)
-    variance = np.concatenate([v for _, v in parts], axis=1)
+    weights = plan.sweep_task(np.ones((1, 1))).weights
+    parts = list(participant_blocks(runs, weights, known_variance=True)[0])
+    z = np.concatenate([part.z for part in parts], axis=1)
+    variance = np.concatenate([part.variance for part in parts], axis=1)
     complete = reference["complete"][order]
     expected = reference["group"]["t"][:, order][:, complete]
     found = (z / np.sqrt(variance))[:, complete]

@@ -50,7 +50,13 @@ class RunData:
     digest: str
 
 
-def read_run(header: RunHeader, voxels: VoxelSet, smooth: float = 0.0) -> RunData:
+def read_run(
+    header: RunHeader,
+    voxels: VoxelSet,
+    smooth: float = 0.0,
+    *,
+    out: NDArray[np.float32] | None = None,
+) -> RunData:
     """Stream a run and keep the series of the voxels asked for.
 
     Scaling (scl_slope, scl_inter) is not applied: it is one affine map of all values, which a
@@ -65,6 +71,8 @@ def read_run(header: RunHeader, voxels: VoxelSet, smooth: float = 0.0) -> RunDat
     smooth : float
         FWHM in mm of a Gaussian applied to every volume, 0 for none. Values that are not finite
         count as 0 in it, and stay marked.
+    out : (T or more, V) float32, optional
+        Memory for the series: fresh pages cost as much time as decompression.
 
     Raises
     ------
@@ -77,26 +85,35 @@ def read_run(header: RunHeader, voxels: VoxelSet, smooth: float = 0.0) -> RunDat
     # Smoothing needs the neighbours outside the voxel list too.
     taken: Any = slice(None) if smooth > 0 else order
     zero = -header.scaling[1] / header.scaling[0]  # the stored value that stands for 0
-    series = np.empty((header.n_volumes, len(voxels)), np.float32)
+    if out is None:
+        out = np.empty((header.n_volumes, len(voxels)), np.float32)
+    series = out[: header.n_volumes]
     finite = np.ones(len(voxels), bool)
+    may_lack_values = header.dtype.kind == "f" or smooth > 0
 
     def at_voxels(values: NDArray[Any]) -> NDArray[Any]:
         return _smoothed(values, header.grid, smooth)[order] if smooth > 0 else values
 
     with opened(header.path) as stream, np.errstate(over="ignore", invalid="ignore"):
         for t, stored in enumerate(_volumes(header, stream)):
-            values = stored[taken].astype(work)
+            values = stored[taken]
             if smooth > 0:
+                values = values.astype(work)
                 bad = ~np.isfinite(values)
                 values[bad] = zero
                 finite &= ~bad[order]
             if t == 0:
-                first = values.copy()
-            series[t] = at_voxels(values - first)
-            finite &= np.isfinite(series[t])
+                first = values.astype(work)
+            if smooth > 0:
+                series[t] = at_voxels(values - first)
+            else:
+                np.subtract(values, first, out=series[t], casting="same_kind")
+            if may_lack_values:
+                finite &= np.isfinite(series[t])
         digest = stream.finish()
         background = at_voxels(first).astype(np.float32)
-    series[:, ~finite] = 0
+    if not finite.all():
+        series[:, ~finite] = 0
     return RunData(series, background, finite, digest)
 
 

@@ -1,1 +1,39 @@
 """From a result to what a person reads and prints."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from seedaudit.results import Audit
+
+
+def write_report(audit: Audit, folder: Path) -> None:
+    """Write the figure, its caption and the methods text of every seed.
+
+    Parameters
+    ----------
+    audit : Audit
+    folder : path
+        The result folder; with several seeds, each has a folder of its own in it.
+    """
+    # imported here: matplotlib is slow to load, and most commands draw nothing
+    from seedaudit.report.figures import save_figure
+    from seedaudit.report.methods import plain
+    from seedaudit.report.words import alternative_text, caption, methods_text
+    from seedaudit.store import seed_folder
+
+    for seed in audit.seeds:
+        own = seed_folder(audit, folder, seed.name)
+        own.mkdir(parents=True, exist_ok=True)
+        save_figure(seed, own)
+        texts = {
+            "figure_caption.md": (
+                f"## Caption\n\n{plain(caption(seed))}\n\n"
+                f"## Alternative text\n\n{plain(alternative_text(seed))}\n"
+            ),
+            "methods.md": methods_text(seed, audit),
+        }
+        for name, text in texts.items():
+            (own / name).write_text(text, encoding="utf-8", newline="\n")

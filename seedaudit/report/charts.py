@@ -21,6 +21,7 @@ from seedaudit.report.style import (
     TITLE,
     TYPE,
     Sheet,
+    crowding,
     fitted,
     plain_axes,
     text_width,
@@ -29,12 +30,12 @@ from seedaudit.results import SeedAudit
 
 FloatArray = NDArray[np.float64]
 
-ROW = 2.95
-"""Height of a region, mm: no less than a line of the smallest type."""
+ROW = 2.65
+"""Least height of a region, mm: a line of the smallest type."""
 ROW_AIRY = 4.2
 MOST_REGIONS = 40
 """So many rows fit on one page beside the other panels."""
-REGION_HEAD, REGION_FOOT = TITLE + LINE + 1.0, 9.5 + 2 * LINE
+REGION_HEAD, REGION_FOOT = TITLE + LINE + 1.0, 7.5 + 2 * LINE
 DECAY_FOOT = 9.0 + 3 * LINE
 
 MEASURES: dict[str, tuple[str, dict[str, Any], dict[str, Any]]] = {
@@ -67,6 +68,7 @@ def decay(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     distance = drawn["distance"].to_numpy(dtype=float)
     ax = sheet.place(8.5, TITLE + 1, sheet.width - 9.5, sheet.height - TITLE - 1 - DECAY_FOOT)
     plain_axes(ax)
+    shrink, many = crowding(len(drawn))
     handles: list[Artist] = []
     lowest = 0.0
     for name, (label, points, line) in MEASURES.items():
@@ -74,17 +76,18 @@ def decay(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
         defined = np.isfinite(values)
         points = {"linestyle": "none", "markersize": 3, "markeredgewidth": 0.6, **points}
         line = {"linewidth": 1.3, **line}
-        ax.plot(
-            distance[defined], values[defined], **points, alpha=0.75, rasterized=len(drawn) > 2000
-        )
-        ax.plot(*binned_medians(distance[defined], values[defined]), **line)
+        size = {"markersize": 3 * shrink, "markeredgewidth": 0.6 * shrink, "alpha": 0.75}
+        ax.plot(distance[defined], values[defined], **points | size, rasterized=many)
+        medians = binned_medians(distance[defined], values[defined])
+        ax.plot(*medians, color="white", linewidth=2.6, zorder=3)
+        ax.plot(*medians, **line, zorder=4)
         lowest = min(lowest, values[defined].min(initial=0.0))
         missing = int((~defined).sum())
         note = f" ({missing} of {len(drawn)} undefined)" if missing else ""
         handles.append(Line2D([], [], **points | line, label=f"{label}{note}"))
     ax.set_xlim(0, max(float(seed.summary["within_mm"]), distance.max(initial=0.0)) * 1.04)
     ax.set_ylim(np.floor(lowest * 10) / 10 - (0.02 if lowest == 0 else 0), 1.03)
-    ax.xaxis.set_major_locator(MaxNLocator(6))
+    ax.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
     ax.yaxis.set_major_locator(MaxNLocator(5))
     ax.set_xlabel("shift distance, mm", fontsize=TYPE, labelpad=1.5)
     ax.set_ylabel("similarity", fontsize=TYPE, labelpad=2)
@@ -102,11 +105,11 @@ def binned_medians(distance: FloatArray, values: FloatArray) -> tuple[FloatArray
     Returns
     -------
     distance, value : (B,)
-        One for each of the distances where these are few, else of `BINS` bins with equal numbers
-        of placements (fewer where there are fewer than three for each).
+        One for each distance where there are few of them, else for `BINS` bins of as many
+        placements each (fewer bins where there would be fewer than three placements in one).
     """
     levels, which = np.unique(np.round(distance, 6), return_inverse=True)
-    if len(levels) > BINS:
+    if len(levels) > min(BINS, len(distance) // 2):
         count = max(1, min(BINS, len(distance) // 3))
         order = np.argsort(distance, kind="stable")
         which = np.empty(len(distance), dtype=np.intp)
@@ -115,14 +118,12 @@ def binned_medians(distance: FloatArray, values: FloatArray) -> tuple[FloatArray
     return frame["distance"].to_numpy(), frame["value"].to_numpy()
 
 
-def regions(
-    seed: SeedAudit, sheet: Sheet, letter: str = "", most: int = MOST_REGIONS, why_none: str = ""
-) -> None:
+def regions(seed: SeedAudit, sheet: Sheet, letter: str = "", most: int = MOST_REGIONS) -> None:
     """Panel of regions: effect and range, stability score, and state, a row for each."""
     table = seed.tables["regions"]
     sheet.title("Network regions", letter)
     if not len(table):
-        sheet.write(0, TITLE, why_none or "No regions were given, so there is no table of regions.")
+        sheet.write(0, TITLE, "The study named no regions, so there is nothing to show here.")
         return
     room = sheet.height - REGION_HEAD - REGION_FOOT
     shown = shown_regions(table, min(most, max(1, int(room / ROW + 1e-6))))
@@ -233,15 +234,18 @@ def _not_available(ax: Axes, rows: NDArray[np.int_]) -> None:
         ax.text(
             0.5, row, "n/a", transform=ax.get_yaxis_transform(), fontsize=TYPE, color=SOFT,
             ha="center", va="center_baseline",
+            bbox={"facecolor": "white", "edgecolor": "none", "pad": 0.8},
         )  # fmt: skip
 
 
 def _region_legend(table: pd.DataFrame) -> list[Artist]:
     handles: list[Artist] = [
-        Line2D([], [], **_POINT, label="reported, or score over placements"),
-        Line2D([], [], **_POINT | {"markerfacecolor": "white"}, label="score of a silent region"),
+        Line2D([], [], **_POINT, label="effect as reported; stability score"),
         Patch(facecolor=PALE, label="range over placements"),
     ]
+    if (table["state"] == "silent").any():
+        hollow = _POINT | {"markerfacecolor": "white"}
+        handles.append(Line2D([], [], **hollow, label="score of a silent region"))
     if table[["reported_low", "stability_low"]].notna().any(axis=None):
         line = Line2D([], [], color=INK, linewidth=0.9, label="95 % interval over participants")
         handles.append(line)

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
@@ -30,8 +31,10 @@ WIDTH = 180.0
 MARGIN = 3.0
 CLOUD_WIDTH = 108.0
 BETWEEN = 5.0
-SLICE_HEIGHT = 44.0
-"""Most that an axial slice takes, mm."""
+PAGE = 257.0
+"""Most that the figure may be high, mm: an A4 page with 20 mm above and below."""
+SLICE_HEIGHTS = 30.0, 44.0
+"""Least and most that an axial slice takes, mm; what lies between depends on the regions."""
 
 PANELS: dict[str, Callable[..., None]] = {
     "cloud": cloud,
@@ -103,13 +106,11 @@ def panel_heights(seed: SeedAudit) -> dict[str, float]:
     low, high = body_frame(seed)
     extent = high - low
     room = (WIDTH - 2 * MARGIN - GAP * (COLUMNS - 1)) / COLUMNS
-    slices = min(SLICE_HEIGHT, room * extent[1] / extent[0])
-    return {
-        "cloud": first,
-        "decay": first,
-        "agreement": TITLE + SLICE_TITLE + slices + AGREEMENT_FOOT,
-        "regions": region_heights(len(seed.tables["regions"])),
-    }
+    last = region_heights(len(seed.tables["regions"]))
+    around = TITLE + SLICE_TITLE + AGREEMENT_FOOT
+    left = PAGE - first - last - around - 2 * BETWEEN - 2 * MARGIN
+    slices = min(float(np.clip(left, *SLICE_HEIGHTS)), room * extent[1] / extent[0])
+    return {"cloud": first, "decay": first, "agreement": around + slices, "regions": last}
 
 
 def _decay_width() -> float:

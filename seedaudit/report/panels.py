@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 from matplotlib.artist import Artist
@@ -24,7 +25,7 @@ from seedaudit.report.slices import (
     step_of,
     whole_plane,
 )
-from seedaudit.report.style import ANATOMY, DIVERGING, INK, LINE, PALE, TITLE, TYPE, Sheet
+from seedaudit.report.style import ANATOMY, DIVERGING, INK, LINE, PALE, TITLE, TYPE, Sheet, crowding
 from seedaudit.report.words import number, point
 from seedaudit.results import SeedAudit
 
@@ -34,11 +35,11 @@ FULL_INK = 0.1
 COLUMNS = 4
 GAP = 3.0
 """Between slices, mm."""
-LEAST_WINDOW = 26.0
+LEAST_WINDOW = 36.0
 """Half the width of the windows of the cloud, mm."""
 
 CLOUD_FOOT = 2 * LINE + 1.5
-AGREEMENT_FOOT = 2 * LINE + 7.0
+AGREEMENT_FOOT = 2 * LINE + 5.8
 SLICE_TITLE = 2 * LINE + 0.5
 
 
@@ -49,7 +50,7 @@ def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     side = min((sheet.width - 2 * GAP) / 3, sheet.height - top - CLOUD_FOOT)
     at = np.asarray(seed.summary["at_mm"], dtype=float)
     reach = float(seed.summary["radius_mm"]) + float(seed.summary["within_mm"])
-    half = max(LEAST_WINDOW, 1.8 * reach)
+    half = max(LEAST_WINDOW, 2.5 * reach)
     for position, kind in enumerate(DIRECTIONS):
         left = position * (side + GAP)
         plane = near_plane(kind, at, half, step_of(seed))
@@ -69,32 +70,36 @@ def _placements(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
     centres = table[["x", "y", "z"]].to_numpy(dtype=float)[:, [along, up]]
     drawn = table["kind"].to_numpy() != "reported"
     used = table["used"].to_numpy(dtype=bool)
-    many = len(table) > 2000  # then thousands of vector marks would swell the file
-    for shown, style in ((drawn & used, _USED), (drawn & ~used, _ASIDE)):
-        ax.plot(*centres[shown].T, **style, rasterized=many, clip_on=True)
+    shrink, many = crowding(len(table))
+    for shown, style in ((drawn & ~used, _ASIDE), (drawn & used, _USED)):
+        size = {"markersize": style["markersize"] * shrink}
+        ax.plot(*centres[shown].T, **style | size, rasterized=many)
     at = np.asarray(seed.summary["at_mm"], dtype=float)[[along, up]]
     radius = float(seed.summary["radius_mm"])
-    ax.add_patch(Circle((at[0], at[1]), radius, fill=False, edgecolor="white", linewidth=2.0))
-    ax.add_patch(Circle((at[0], at[1]), radius, fill=False, edgecolor=INK, linewidth=0.9))
-    ax.plot(*at, **_REPORTED)
+    for colour, width in (("white", 1.8), (INK, 0.8)):
+        circle = Circle(
+            (at[0], at[1]), radius, fill=False, edgecolor=colour, linewidth=width, zorder=3
+        )
+        ax.add_patch(circle)
+    ax.plot(*at, **_REPORTED, zorder=4)
 
 
-_USED = {
+_USED: dict[str, Any] = {
     "linestyle": "none",
     "marker": "o",
-    "markersize": 2.6,
+    "markersize": 2.2,
     "markerfacecolor": "#e59a4c",
     "markeredgecolor": INK,
     "markeredgewidth": 0.35,
 }
-_ASIDE = {
+_ASIDE: dict[str, Any] = {
     "linestyle": "none",
     "marker": "x",
     "markersize": 3.2,
     "markeredgecolor": INK,
     "markeredgewidth": 0.8,
 }
-_REPORTED = {
+_REPORTED: dict[str, Any] = {
     "linestyle": "none",
     "marker": "D",
     "markersize": 4.2,
@@ -136,13 +141,16 @@ def agreement(seed: SeedAudit, sheet: Sheet, letter: str = "", places: int = 3) 
     for column, (label, at) in enumerate(shown):
         left = column * (room + GAP)
         sheet.write(left, TITLE, f"{label}\n{point(at)} mm", linespacing=1.2)
-        ax = sheet.place(left + (room - width) / 2, top, width, height)
+        ax = sheet.place(left, top, width, height)
         plane = whole_plane("axial", at, frame, step_of(seed))
         _picture(ax, seed, plane, overlay=True)
         _frame(ax, plane)
         _zone(ax, seed, plane)
         _reported_outline(ax, seed, plane)
-        _cross(ax, at[0], at[1], 0.06 * extent[0])
+        if column:
+            _cross(ax, at[0], at[1], 0.06 * extent[0])
+        else:
+            ax.plot(at[0], at[1], **_REPORTED)
     if not found:
         left = room + GAP
         sheet.write(left, TITLE, "No voxel is contested.")
@@ -227,8 +235,8 @@ def _cross(ax: Axes, x: float, y: float, arm: float) -> None:
 
 def _agreement_key(sheet: Sheet, top: float) -> None:
     """Colour bar of both tails, and what lines and hatching mean."""
-    width = min(70.0, 0.42 * sheet.width)
-    ax = sheet.place(2, top, width, 2.6)
+    left, width = 6.0, min(66.0, 0.38 * sheet.width)
+    ax = sheet.place(left, top, width, 2.6)
     share = np.linspace(-1, 1, 401)
     ground = np.broadcast_to(ANATOMY(0.6)[:3], (1, share.size, 3))
     bar = _blend(ground, np.clip(share, 0, 1)[None], np.clip(-share, 0, 1)[None])
@@ -238,8 +246,8 @@ def _agreement_key(sheet: Sheet, top: float) -> None:
     ax.xaxis.set_minor_locator(FixedLocator([-0.95, -0.05, 0.05, 0.95]))
     ax.tick_params(pad=1.5, labelsize=TYPE)
     below = top + 2.6 + 1.2 + LINE
-    sheet.write(2, below, "of placements in class −")
-    sheet.write(2 + width, below, "of placements in class +", ha="right")
+    sheet.write(left, below, "of placements in class −")
+    sheet.write(left + width, below, "of placements in class +", ha="right")
     line = {"color": INK, "linewidth": 0.8}
     handles: Sequence[Artist] = (
         Line2D([], [], **line, label="class + as reported"),
@@ -248,7 +256,7 @@ def _agreement_key(sheet: Sheet, top: float) -> None:
             facecolor="none", edgecolor=INK, linewidth=0.5, linestyle="dotted", hatch="//////",
             label="not analysed: spheres and margin",
         ),
-        Line2D([], [], linestyle="none", marker="+", markersize=6, color=INK,
-               label="the place in the title"),
+        Line2D([], [], **_REPORTED, label="reported centre"),
+        Line2D([], [], linestyle="none", marker="+", markersize=6, color=INK, label="contested"),
     )  # fmt: skip
-    sheet.legend(width + 9, top, handles, 2)
+    sheet.legend(left + width + 10, top, handles, 2)

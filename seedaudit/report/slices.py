@@ -120,7 +120,7 @@ def body_frame(seed: SeedAudit, pad: float = 4.0) -> FloatArray:
     image = seed.maps["analysis_mask"]
     grid = grid_of(image)
     voxels = np.argwhere(np.asanyarray(image.dataobj) > 0)
-    xyz = grid.to_world(voxels) if len(voxels) else grid.corners
+    xyz = grid.to_world(voxels) if len(voxels) else grid.corners()
     half = np.abs(grid.affine[:3, :3]).sum(axis=1) / 2
     at = np.asarray(seed.summary["at_mm"], dtype=float)
     radius = float(seed.summary["radius_mm"])

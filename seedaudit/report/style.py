@@ -20,7 +20,7 @@ from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties
 from matplotlib.legend import Legend
 from matplotlib.text import Text
-from matplotlib.textpath import TextPath
+from matplotlib.textpath import text_to_path
 
 MM_PER_INCH = 25.4
 MM_PER_POINT = MM_PER_INCH / 72
@@ -40,7 +40,8 @@ DIVERGING = LinearSegmentedColormap.from_list(
 """Indigo to rust through a neutral middle: apart for every common kind of colour vision."""
 
 ANATOMY = LinearSegmentedColormap.from_list(
-    "seedaudit-anatomy", [(0.0, "#ffffff"), (0.06, "#808080"), (1.0, "#f0f0f0")]
+    "seedaudit-anatomy",
+    [(0.0, "#ffffff"), (0.05, "#6c6c6c"), (0.4, "#8c8c8c"), (1.0, "#f4f4f4")],
 )
 """Light greys under dark ink; what is empty stays the white of the paper."""
 
@@ -148,10 +149,9 @@ class Sheet:
 
 def text_width(text: str, size: float = TYPE) -> float:
     """Width of one line of text, mm."""
-    if not text.strip():
-        return 0.0
     prop = FontProperties(family="DejaVu Sans", size=size)
-    return float(TextPath((0, 0), text, prop=prop).get_extents().width * MM_PER_POINT)
+    width, _, _ = text_to_path.get_text_width_height_descent(text, prop, ismath=False)
+    return float(width * MM_PER_POINT)
 
 
 def fitted(text: str, width: float, size: float = TYPE) -> str:
@@ -175,6 +175,14 @@ def fitted(text: str, width: float, size: float = TYPE) -> str:
 def _without_middle(text: str, kept: int) -> str:
     end = kept // 2
     return f"{text[: kept - end].rstrip()}…{text[len(text) - end :].lstrip()}"
+
+
+def crowding(count: int) -> tuple[float, bool]:
+    """Factor for the size of so many markers, and whether to keep them as pixels in vector files.
+
+    Thousands of vector marks make a file that viewers choke on.
+    """
+    return min(1.0, max(0.35, (200 / max(count, 1)) ** 0.5)), count > 2000
 
 
 def plain_axes(ax: Axes) -> None:

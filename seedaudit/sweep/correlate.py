@@ -58,14 +58,16 @@ class CleanRun:
 class ZBlock:
     """Fisher z of all placements at the voxels `where`.
 
-    `z` is (N, B) float32 and 0 where not `valid` (B,); `lag_one` (B,) is the first-order
-    autocorrelation of the voxel residuals where it was asked for.
+    `z` is (N, B) float32 and 0 where not `valid` (B,). Where they were asked for, `lag_one` (B,)
+    is the first-order autocorrelation of the voxel residuals and `variance` (N, B) the sampling
+    variance of z.
     """
 
     where: slice
     z: NDArray[np.float32]
     valid: NDArray[np.bool_]
     lag_one: NDArray[np.float64] | None = None
+    variance: NDArray[np.float64] | None = None
 
 
 def residuals(series: NDArray[np.float64], basis: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -130,8 +132,8 @@ def z_blocks(
     ------
     ZBlock
     """
-    seeds32 = seeds.astype(np.float32)
-    basis32 = run.basis.astype(np.float32)
+    # seeds and nuisance columns in one product, so that a block is read once
+    rows = np.concatenate([seeds, run.basis.T]).astype(np.float32)
     n_voxels = run.series.shape[1]
     for start in range(0, n_voxels, block):
         where = slice(start, min(start + block, n_voxels))
@@ -139,9 +141,9 @@ def z_blocks(
         # the basis holds the intercept: centring changes nothing but the digits that are kept
         series = stored - stored.mean(axis=0)
         total = np.einsum("tv,tv->v", series, series)
-        explained = basis32.T @ series
+        products = rows @ series
+        r, explained = products[: len(seeds)], products[len(seeds) :]
         left = total - np.einsum("qv,qv->v", explained, explained)
-        r = seeds32 @ series
         valid = run.finite[where] & (total > 0)
         steep = np.maximum(r.max(axis=0), -r.min(axis=0)) > STEEP * np.sqrt(np.maximum(left, 0))
         risky = valid & (steep | (left < CANCELLING * total) | lag_one)

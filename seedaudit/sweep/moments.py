@@ -13,6 +13,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from seedaudit.sweep.correlate import ZBlock
+
 
 @dataclass
 class Moments:
@@ -52,36 +54,24 @@ class Moments:
             known,
         )
 
-    def add(
-        self,
-        x: NDArray[np.float64],
-        where: slice,
-        z: NDArray[np.float32],
-        valid: NDArray[np.bool_],
-        variance: NDArray[np.float64] | None = None,
-    ) -> None:
-        """Add one participant's z at the voxels `where`.
+    def add(self, x: NDArray[np.float64], block: ZBlock) -> None:
+        """Add one participant's z at the voxels of a block.
 
         Parameters
         ----------
         x : (p,)
             The participant's row of the design matrix.
-        where : slice
-            B voxels.
-        z : (N, B)
-            0 where not `valid`.
-        valid : (B,) bool
-        variance : (N, B), optional
-            Sampling variance of z.
+        block : ZBlock
         """
-        z = z.astype(np.float64)
-        self.count[where] += valid
-        self.xtx[:, :, where] += np.multiply.outer(np.outer(x, x), valid)
+        where, z = block.where, block.z.astype(np.float64)
+        self.count[where] += block.valid
+        self.xtx[:, :, where] += np.multiply.outer(np.outer(x, x), block.valid)
         for j, value in enumerate(x):
             self.xtz[j, :, where] += value * z
-        self.zz[:, where] += z * z
-        if self.variance is not None and variance is not None:
-            self.variance[:, where] += variance
+        z *= z
+        self.zz[:, where] += z
+        if self.variance is not None and block.variance is not None:
+            self.variance[:, where] += block.variance
 
     def __iadd__(self, other: Moments) -> Moments:
         for mine, theirs in zip(self._arrays(), other._arrays(), strict=True):
@@ -107,9 +97,13 @@ class Moments:
         """Memory of the state in bytes."""
         return sum(array.nbytes for array in self._arrays())
 
+    def named_arrays(self) -> list[tuple[str, NDArray[Any]]]:
+        """The arrays of the state by name, those that are kept."""
+        pairs = ((field.name, getattr(self, field.name)) for field in fields(self))
+        return [(name, value) for name, value in pairs if value is not None]
+
     def _arrays(self) -> list[NDArray[Any]]:
-        values = (getattr(self, field.name) for field in fields(self))
-        return [value for value in values if value is not None]
+        return [value for _, value in self.named_arrays()]
 
 
 def merged(parts: Iterable[Moments]) -> Moments:

@@ -90,7 +90,11 @@ class KeptSums:
 
 
 def participant_blocks(
-    runs: Sequence[CleanRun], weights: sparse.csr_array, *, block: int = BLOCK
+    runs: Sequence[CleanRun],
+    weights: sparse.csr_array,
+    *,
+    known_variance: bool = False,
+    block: int = BLOCK,
 ) -> tuple[Iterator[ZBlock], NDArray[np.float64]]:
     """Fisher z of one participant: the mean over runs weighted by (residual df - 3).
 
@@ -102,6 +106,9 @@ def participant_blocks(
         Each with more than 3 residual degrees of freedom.
     weights : (N, V) sparse
         Spheres of the placements.
+    known_variance : bool
+        Also give the sampling variance of z: 1 / (n_eff - 3) for a run, n_eff being the effective
+        number of volumes of each pair of seed and voxel, and that of the weighted mean.
     block : int
         Voxels in a block.
 
@@ -115,47 +122,42 @@ def participant_blocks(
     share = run_weights(runs)
 
     def blocks() -> Iterator[ZBlock]:
-        streams = [z_blocks(run, s, block=block) for run, s in zip(runs, seeds, strict=True)]
-        for parts in zip(*streams, strict=True):
-            valid = np.logical_and.reduce([part.valid for part in parts])
-            if len(parts) == 1:
-                z = parts[0].z
-            else:
-                z = sum(w * part.z for w, part in zip(share, parts, strict=True)) * valid
-            yield ZBlock(parts[0].where, z.astype(np.float32, copy=False), valid)
-
-    return blocks(), np.minimum.reduce(coverages)
-
-
-def single_participant_blocks(
-    runs: Sequence[CleanRun], weights: sparse.csr_array, *, block: int = BLOCK
-) -> tuple[Iterator[tuple[ZBlock, NDArray[np.float64]]], NDArray[np.float64]]:
-    """As `participant_blocks`, with the sampling variance (N, B) of z beside each block.
-
-    The variance of a run's z is 1 / (n_eff - 3), n_eff being the effective number of volumes of
-    each pair of seed and voxel; that of the weighted mean follows.
-    """
-    seeds, coverages = zip(*(seed_series(run, weights) for run in runs), strict=True)
-    seed_lags = [lag_one_autocorrelation(s) for s in seeds]
-    share = run_weights(runs)
-
-    def blocks() -> Iterator[tuple[ZBlock, NDArray[np.float64]]]:
         streams = [
-            z_blocks(run, s, lag_one=True, block=block) for run, s in zip(runs, seeds, strict=True)
+            z_blocks(run, own, lag_one=known_variance, block=block)
+            for run, own in zip(runs, seeds, strict=True)
         ]
         for parts in zip(*streams, strict=True):
             valid = np.logical_and.reduce([part.valid for part in parts])
-            z = sum(w * part.z for w, part in zip(share, parts, strict=True)) * valid
-            variance = np.zeros(z.shape)
-            for w, run, a, part in zip(share, runs, seed_lags, parts, strict=True):
-                assert part.lag_one is not None
-                volumes = effective_volumes(run.residual_df + 1, a, part.lag_one)
-                # at 3 effective volumes or fewer there is no information: infinite variance
-                with np.errstate(divide="ignore"):
-                    variance += w**2 / np.maximum(volumes - 3, 0)
-            yield ZBlock(parts[0].where, z.astype(np.float32), valid), variance
+            z = parts[0].z if len(parts) == 1 else _weighted_mean(share, parts) * valid
+            variance = _variance(share, runs, seeds, parts) if known_variance else None
+            yield ZBlock(parts[0].where, z.astype(np.float32, copy=False), valid, variance=variance)
 
     return blocks(), np.minimum.reduce(coverages)
+
+
+def _weighted_mean(share: NDArray[np.float64], parts: Sequence[ZBlock]) -> NDArray[np.float64]:
+    mean = np.zeros(parts[0].z.shape)
+    for weight, part in zip(share, parts, strict=True):
+        mean += weight * part.z
+    return mean
+
+
+def _variance(
+    share: NDArray[np.float64],
+    runs: Sequence[CleanRun],
+    seeds: Sequence[NDArray[np.float64]],
+    parts: Sequence[ZBlock],
+) -> NDArray[np.float64]:
+    """Sampling variance (N, B) of the weighted mean of z over runs."""
+    variance = np.zeros(parts[0].z.shape)
+    for weight, run, own, part in zip(share, runs, seeds, parts, strict=True):
+        assert part.lag_one is not None
+        lag_one = lag_one_autocorrelation(own)
+        volumes = effective_volumes(run.residual_df + 1, lag_one, part.lag_one)
+        # at 3 effective volumes or fewer there is no information: infinite variance
+        with np.errstate(divide="ignore"):
+            variance += weight**2 / np.maximum(volumes - 3, 0)
+    return variance
 
 
 def run_weights(runs: Sequence[CleanRun]) -> NDArray[np.float64]:

@@ -9,131 +9,31 @@ from __future__ import annotations
 import threading
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_EXCEPTION, ThreadPoolExecutor, wait
-from dataclasses import dataclass, replace
-from pathlib import Path
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
-from seedaudit.errors import DataError, Problem
-from seedaudit.inputs.nuisance import censored_volumes, nuisance_basis, read_confounds
-from seedaudit.inputs.volumes import RunHeader, read_mask, read_run
-from seedaudit.space.grid import VoxelSet
-from seedaudit.sweep.correlate import CleanRun
+from seedaudit._version import __version__
+from seedaudit.sweep.checkpoint import Checkpoint, FoldProgress, digest
 from seedaudit.sweep.moments import Moments
-from seedaudit.sweep.participant import (
-    CloudTargets,
-    Kept,
-    KeptSums,
-    participant_blocks,
-    single_participant_blocks,
+from seedaudit.sweep.task import (
+    LEAST_RESIDUAL_DF,
+    Buffers,
+    CleaningRecipe,
+    ParticipantRecord,
+    ParticipantTask,
+    RunTask,
+    SweepTask,
+    load_run,
+    run_basis,
+    sweep_participant,
 )
 
-LEAST_RESIDUAL_DF = 4
-"""A run's weight is its residual degrees of freedom minus 3."""
-
-
-@dataclass(frozen=True)
-class RunTask:
-    """One run to read: its header, its confounds table and its own mask, if any.
-
-    `nuisance_rank` is the number of independent nuisance columns, the intercept included.
-    """
-
-    header: RunHeader
-    confounds: Path | None = None
-    mask: Path | None = None
-    nuisance_rank: int = 1
-
-    @property
-    def residual_df(self) -> int:
-        """Volumes minus independent nuisance columns."""
-        return self.header.n_volumes - self.nuisance_rank
-
-
-@dataclass(frozen=True)
-class ParticipantTask:
-    """One participant: the label, the row of the design matrix, and the runs."""
-
-    participant: str
-    row: int
-    runs: tuple[RunTask, ...]
-
-
-@dataclass(frozen=True)
-class CleaningRecipe:
-    """The nuisance columns of a run; `censor` is (column, above, before, after)."""
-
-    drift: int = 0
-    band: tuple[float, float] | None = None
-    confounds: tuple[str, ...] = ()
-    censor: tuple[str, float, int, int] | None = None
-    smooth: float = 0.0
-    repetition_time: float | None = None
-
-
-@dataclass(frozen=True)
-class SweepTask:
-    """All that a worker needs to know.
-
-    Parameters
-    ----------
-    voxels : VoxelSet
-        Mask voxels.
-    weights : (N, V) sparse
-        Spheres of all placements of all seeds.
-    clouds : tuple of CloudTargets
-        One for each seed.
-    design : (n, p)
-    cleaning : CleaningRecipe
-    min_coverage : float
-        Share of a reported sphere that must vary in every run.
-    set_aside : bool
-        Leave out a participant whose data are bad, instead of stopping.
-    single : bool
-        One participant: keep the sampling variance of z.
-    keep_reported : bool
-        Keep each participant's z map of every reported placement (for permutation).
-    """
-
-    voxels: VoxelSet
-    weights: sparse.csr_array
-    clouds: tuple[CloudTargets, ...]
-    design: NDArray[np.float64]
-    cleaning: CleaningRecipe
-    min_coverage: float = 0.5
-    set_aside: bool = False
-    single: bool = False
-    keep_reported: bool = False
-
-    def empty_moments(self) -> Moments:
-        """The neutral element for this task."""
-        n_placements, n_voxels = self.weights.shape
-        return Moments.empty(self.design.shape[1], n_placements, n_voxels, variance=self.single)
-
-
-@dataclass(frozen=True)
-class ParticipantRecord:
-    """What is kept of a participant beside the moments.
-
-    `coverage` (N,) is the smallest share of each sphere that varies in the participant's runs;
-    `reported_z` (clouds, V) is z of the reported placements, NaN where missing, if it was kept.
-    """
-
-    participant: str
-    row: int
-    n_runs: int
-    n_volumes: int = 0
-    n_censored: int = 0
-    residual_df: int = 0
-    n_missing_voxels: int = 0
-    digests: tuple[str, ...] = ()
-    coverage: NDArray[np.float64] | None = None
-    kept: tuple[Kept, ...] = ()
-    reported_z: NDArray[np.float32] | None = None
-    used: bool = True
-    reason: str = ""
+__all__ = [
+    "LEAST_RESIDUAL_DF", "CleaningRecipe", "ParticipantRecord", "ParticipantTask", "RunTask",
+    "SweepTask", "Swept", "assign_folds", "load_run", "run_basis", "sweep", "sweep_key",
+]  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -165,137 +65,28 @@ def assign_folds(strata: NDArray[np.int_], folds: int) -> list[NDArray[np.int_]]
     return [np.sort(dealt[start::n_folds]) for start in range(n_folds)]
 
 
-def load_run(task: RunTask, recipe: CleaningRecipe, voxels: VoxelSet) -> tuple[CleanRun, int, str]:
-    """Read one run and build its nuisance basis.
-
-    Returns
-    -------
-    run : CleanRun
-    n_censored : int
-    digest : str
-        SHA-256 of the stored file.
-
-    Raises
-    ------
-    DataError
-        For unreadable images or tables.
-    """
-    basis, n_censored = run_basis(task, recipe)
-    data = read_run(task.header, voxels, smooth=recipe.smooth)
-    finite = data.finite
-    if task.mask is not None:
-        inside, _ = read_mask(task.mask, voxels.grid)
-        finite = finite & inside[tuple(voxels.ijk.T)]
-    return CleanRun(data.series, basis, finite), n_censored, data.digest
-
-
-def run_basis(task: RunTask, recipe: CleaningRecipe) -> tuple[NDArray[np.float64], int]:
-    """Orthonormal nuisance basis (T, q) of a run, and its number of censored volumes."""
-    n_volumes = task.header.n_volumes
-    values, censored = None, None
-    if task.confounds is not None:
-        if recipe.confounds:
-            values, _ = read_confounds(task.confounds, recipe.confounds, n_volumes)
-        if recipe.censor is not None:
-            column, above, before, after = recipe.censor
-            censored = censored_volumes(task.confounds, column, above, before, after, n_volumes)
-    elif recipe.confounds or recipe.censor is not None:
-        raise DataError(
-            Problem(
-                task.header.path.name,
-                "has no confounds table",
-                "[cleaning] names confounds or censoring",
-                "add a `confounds` column to the runs table, or leave them out of [cleaning]",
-            )
-        )
-    basis = nuisance_basis(
-        n_volumes,
-        drift=recipe.drift,
-        band=recipe.band,
-        repetition_time=recipe.repetition_time or task.header.repetition_time,
-        confounds=values,
-        censored=censored,
-    )
-    return basis, 0 if censored is None else int(censored.sum())
-
-
-def sweep_participant(
-    task: SweepTask, participant: ParticipantTask, moments: Moments
-) -> ParticipantRecord:
-    """Read one participant's runs and add them to the moments of the fold.
-
-    Nothing is added when the data are bad.
-
-    Raises
-    ------
-    DataError
-        Unless the task sets bad participants aside; the record then says why.
-    """
-    try:
-        loaded = [load_run(run, task.cleaning, task.voxels) for run in participant.runs]
-        runs = [run for run, _, _ in loaded]
-        blocks, coverage = _blocks(task, runs)
-        _check_reported(task, participant, coverage)
-    except DataError as error:
-        named = [
-            replace(problem, where=f"participant {participant.participant}, {problem.where}")
-            for problem in error.problems
-        ]
-        if not task.set_aside:
-            raise DataError(*named) from error
-        reason = "; ".join(problem.brief for problem in error.problems)
-        return ParticipantRecord(
-            participant.participant, participant.row, len(participant.runs), used=False,
-            reason=reason,
-        )  # fmt: skip
-    sums = [KeptSums(cloud) for cloud in task.clouds]
-    reported = [cloud.rows.start for cloud in task.clouds]
-    maps = np.full((len(reported), len(task.voxels)), np.nan, np.float32)
-    n_missing = 0
-    for block, variance in blocks:
-        moments.add(task.design[participant.row], block.where, block.z, block.valid, variance)
-        n_missing += int((~block.valid).sum())
-        for part in sums:
-            part.add(block)
-        if task.keep_reported:
-            maps[:, block.where] = np.where(block.valid, block.z[reported], np.nan)
-    return ParticipantRecord(
-        participant.participant,
-        participant.row,
-        n_runs=len(runs),
-        n_volumes=sum(run.basis.shape[0] for run in runs),
-        n_censored=sum(censored for _, censored, _ in loaded),
-        residual_df=sum(run.residual_df for run in runs),
-        n_missing_voxels=n_missing,
-        digests=tuple(digest for _, _, digest in loaded),
-        coverage=coverage,
-        kept=tuple(part.finish() for part in sums),
-        reported_z=maps if task.keep_reported else None,
-    )
-
-
-def _blocks(task: SweepTask, runs: Sequence[CleanRun]):  # type: ignore[no-untyped-def]
-    if task.single:
-        return single_participant_blocks(runs, task.weights)
-    blocks, coverage = participant_blocks(runs, task.weights)
-    return ((block, None) for block in blocks), coverage
-
-
-def _check_reported(
-    task: SweepTask, participant: ParticipantTask, coverage: NDArray[np.float64]
-) -> None:
-    reported = coverage[[cloud.rows.start for cloud in task.clouds]]
-    if reported.min() < task.min_coverage:
-        names = ", ".join(run.header.path.name for run in participant.runs)
-        raise DataError(
-            Problem(
-                names,
-                f"only {reported.min():.0%} of a reported seed sphere has a signal that varies",
-                f"at least {task.min_coverage:.0%} (min_coverage)",
-                "look at the run's coverage, correct the mask or the seed, or set "
-                'on_bad_run = "set-aside"',
-            )
-        )
+def sweep_key(task: SweepTask, folds: Sequence[Sequence[ParticipantTask]]) -> dict[str, str]:
+    """Digests of exactly the settings that change the numbers of the pass, by name."""
+    weights, recipe = task.weights, task.cleaning
+    runs = [run for fold in folds for participant in fold for run in participant.runs]
+    return {
+        "program": __version__,
+        "mask": digest(task.voxels.ijk, task.voxels.grid.affine, task.voxels.grid.shape),
+        "placements": digest(weights.indptr, weights.indices, weights.data),
+        "analysis voxels and regions": digest(
+            *(part for cloud in task.clouds for part in (
+                str(cloud.rows), cloud.analysis, cloud.targets.indptr, cloud.targets.indices,
+                cloud.targets.data,
+            ))
+        ),
+        "group design": digest(task.design),
+        "participants and folds": digest(
+            [[(p.participant, p.row, [r.header.path.name for r in p.runs]) for p in fold]
+             for fold in folds]
+        ),
+        "cleaning": digest(recipe, *(run_basis(run, recipe)[0] for run in runs)),
+        "options": digest(task.min_coverage, task.set_aside, task.single, task.keep_reported),
+    }  # fmt: skip
 
 
 def sweep(
@@ -303,6 +94,7 @@ def sweep(
     folds: Sequence[Sequence[ParticipantTask]],
     *,
     workers: int = 2,
+    checkpoint: Checkpoint | None = None,
     on_participant: Callable[[ParticipantRecord], None] = lambda record: None,
 ) -> Swept:
     """The pass over the data.
@@ -314,6 +106,8 @@ def sweep(
     workers : int
         Threads, each with one fold at a time; reading, decompression and products run outside
         the interpreter lock.
+    checkpoint : Checkpoint, optional
+        Where progress is kept; earlier progress is gone on from.
     on_participant : callable
         Told of every finished participant, from the worker's thread.
 
@@ -326,31 +120,42 @@ def sweep(
     DataError
         The first bad participant, unless the task sets them aside.
     """
-    stop = threading.Event()
+    stop, memory = threading.Event(), threading.local()
 
-    def sweep_fold(fold: Sequence[ParticipantTask]) -> tuple[Moments, list[ParticipantRecord]]:
-        moments, records = task.empty_moments(), []
-        for participant in fold:
+    def sweep_fold(number: int) -> FoldProgress:
+        if not hasattr(memory, "buffers"):
+            memory.buffers = Buffers()
+        progress = checkpoint.load(number, folds[number]) if checkpoint else None
+        progress = progress or FoldProgress(task.empty_moments())
+        done = {record.participant for record in progress.records}
+        for record in progress.records:
+            on_participant(record)
+        left = [participant for participant in folds[number] if participant.participant not in done]
+        for participant in left:
             if stop.is_set():
                 break
-            records.append(sweep_participant(task, participant, moments))
-            on_participant(records[-1])
-        return moments, records
+            record = sweep_participant(task, participant, progress.moments, memory.buffers)
+            progress.records.append(record)
+            on_participant(record)
+            if checkpoint:
+                finished = participant is left[-1]
+                checkpoint.note(number, progress, finished=finished, now=stop.is_set())
+        return progress
 
     with ThreadPoolExecutor(max_workers=workers) as pool:
-        futures = [pool.submit(sweep_fold, fold) for fold in folds]
+        futures = [pool.submit(sweep_fold, number) for number in range(len(folds))]
         try:
             wait(futures, return_when=FIRST_EXCEPTION)
             failed = [f for f in futures if f.done() and f.exception() is not None]
             if failed:
                 failed[0].result()
-            results = [future.result() for future in futures]
+            parts = [future.result() for future in futures]
         finally:
+            # also on Ctrl-C: every worker ends its participant and keeps its progress
             stop.set()
             pool.shutdown(wait=True, cancel_futures=True)
-    records = sorted((r for _, part in results for r in part), key=lambda r: r.row)
     return Swept(
-        tuple(moments for moments, _ in results),
-        tuple(sum(record.used for record in part) for _, part in results),
-        tuple(records),
+        tuple(part.moments for part in parts),
+        tuple(sum(record.used for record in part.records) for part in parts),
+        tuple(sorted((r for part in parts for r in part.records), key=lambda r: r.row)),
     )

@@ -10,6 +10,7 @@ import statsmodels.api as sm
 from scipy import stats
 
 from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
 
 
@@ -23,7 +24,7 @@ def stream(x, y, contrast, valid=None, needed=None):
         for row in rows:
             keep = np.ones(y.shape[1], bool) if valid is None else valid[row]
             # float64 input: these reference data have more digits than float32 holds
-            part.add(working[row], slice(None), np.where(keep, y[row], 0)[None], keep)
+            part.add(working[row], ZBlock(slice(None), np.where(keep, y[row], 0)[None], keep))
         folds.append(part)
     total = merged(folds)
     model = solve_model(total, c, n if needed is None else needed)

@@ -8,6 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
 
 N, V = 3, 11
@@ -18,8 +19,8 @@ def moments_of(x, z, rows, valid=None) -> Moments:
     for row in rows:
         keep = np.ones(V, bool) if valid is None else valid[row]
         for where in (slice(0, 4), slice(4, V)):
-            block = np.where(keep[where], z[row][:, where], 0).astype(np.float32)
-            total.add(x[row], where, block, keep[where])
+            kept = np.where(keep[where], z[row][:, where], 0).astype(np.float32)
+            total.add(x[row], ZBlock(where, kept, keep[where]))
     return total
 
 

@@ -1,0 +1,144 @@
+"""The methods text: what was done and what was not, from the provenance of a result."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Mapping
+from functools import cache
+from inspect import signature
+from typing import Any
+
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from seedaudit.consensus.regional import CALL_SHARE
+from seedaudit.consensus.resampling import SMALLEST_STRATUM, bootstrap_interval
+from seedaudit.plan import cloud_size
+from seedaudit.report.words import number, percent, plural, point, similarity
+from seedaudit.results import Audit, SeedAudit
+from seedaudit.study import Cleaning, Placements
+
+REFERENCES = {
+    "lancaster": "Lancaster J.L. et al. (2007) *Hum. Brain Mapp.* 28:1194–1205.",
+    "owen": "Owen A.B. (1998) *J. Complexity* 14:466–489.",
+    "hallquist": "Hallquist M.N. et al. (2013) *NeuroImage* 82:208–225.",
+    "lindquist": "Lindquist M.A. et al. (2019) *Hum. Brain Mapp.* 40:2358–2376.",
+    "bartlett": "Bartlett M.S. (1946) *Suppl. J. R. Stat. Soc.* 8:27–41.",
+    "dosenbach": "Dosenbach N.U.F. et al. (2010) *Science* 329:1358–1361.",
+    "benjamini": "Benjamini Y. & Hochberg Y. (1995) *J. R. Stat. Soc. B* 57:289–300.",
+    "nichols": "Nichols T. et al. (2005) *NeuroImage* 25:653–660.",
+    "dice": "Dice L.R. (1945) *Ecology* 26:297–302.",
+    "lin": "Lin L.I. (1989) *Biometrics* 45:255–268.",
+    "gwet": "Gwet K.L. (2008) *Br. J. Math. Stat. Psychol.* 61:29–48.",
+    "fleiss": "Fleiss J.L. (1971) *Psychol. Bull.* 76:378–382.",
+    "busing": "Busing F.M.T.A., Meijer E. & van der Leeden R. (1999) *Stat. Comput.* 9:3–8.",
+    "efron": "Efron B. & Tibshirani R.J. (1993) *An Introduction to the Bootstrap*, ch. 12.",
+}
+"""In the order of the list of references; only those that apply are listed."""
+
+_DANGER = re.compile(r"([\\`*_\[\]|~$])")
+_TAG = re.compile(r"<(?=[A-Za-z/!?])")
+_ENTITY = re.compile(r"&(?=#?\w+;)")
+
+
+def code(text: Any) -> Markup:
+    """A name that a user chose, as a Markdown code span: nothing in it means anything."""
+    line = " ".join(str(text).split())
+    longest = max((len(run) for run in re.findall("`+", line)), default=0)
+    fence = "`" * (longest + 1)
+    space = " " if line.startswith("`") or line.endswith("`") else ""
+    return Markup(f"{fence}{space}{line}{space}{fence}") if line else Markup("(empty)")
+
+
+def plain(text: Any) -> Markup:
+    """A sentence that may hold names a user chose, with whatever Markdown would act on defused.
+
+    Ordinary text stays as it is: an entity is written only for a sign that would open a tag or
+    another entity.
+    """
+    line = " ".join(str(text).split())
+    line = _DANGER.sub(r"\\\1", _ENTITY.sub("&amp;", line))
+    return Markup(_TAG.sub("&lt;", line))
+
+
+def one_line(text: Markup) -> Markup:
+    """A paragraph of a template on one line, however the template is broken into lines."""
+    return Markup(" ".join(text.split()))
+
+
+@cache
+def templates() -> Environment:
+    """The templates of this package, every one with automatic escaping."""
+    environment = Environment(
+        loader=PackageLoader("seedaudit.report"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    environment.filters.update(
+        code=code, plain=plain, number=number, percent=percent, point=point, similarity=similarity,
+        plural=plural, one_line=one_line,
+    )  # fmt: skip
+    return environment
+
+
+def render_methods(seed: SeedAudit, audit: Audit) -> str:
+    """See `seedaudit.report.words.methods_text`."""
+    told = audit.provenance
+    study = told["study"]
+    asked = next(entry for entry in study["seed"] if entry["name"] == seed.name)
+    # the provenance leaves out what was not set; the models of the study file have it as None
+    placements = Placements.model_validate(study["placements"])
+    cleaning = Cleaning.model_validate(study["cleaning"]) if "cleaning" in study else None
+    within, sd = cloud_size(placements)
+    regions = seed.tables["regions"]
+    freedom = told["group"]["residual_df"]
+    facts: dict[str, Any] = {
+        "name": seed.name,
+        "numbers": seed.summary,
+        "asked": asked,
+        "placements": placements.model_dump(),
+        "within": within,
+        "sd": sd,
+        "cleaning": cleaning.model_dump() if cleaning else None,
+        "group": study["group"],
+        "threshold": study["threshold"],
+        "safe": study["consensus"]["safe"],
+        "data": told["data"],
+        "cohort": told["group"],
+        "freedom": (min(freedom), max(freedom)),
+        "atlas": told["regions"],
+        "single": seed.summary["n_participants"] == 1,
+        "intervals": seed.summary["stability_low"] is not None,
+        "regional_intervals": bool(regions["reported_low"].notna().any()),
+        "has_ceiling": bool(regions["ceiling"].notna().any()) or "ceiling" in seed.summary,
+        "has_tolerance": "tolerance_mm" in seed.summary,
+        "has_claims": "claims" in seed.summary,
+        "has_steadier": "steadier" in seed.tables,
+        "call_share": CALL_SHARE,
+        "smallest_stratum": SMALLEST_STRATUM,
+        "replicates": signature(bootstrap_interval).parameters["replicates"].default,
+        "choices": told["choices"],
+        "versions": {"seedaudit": told["seedaudit"], "Python": told["python"], **told["libraries"]},
+    }
+    facts["references"] = [REFERENCES[key] for key in REFERENCES if key in set(_cited(facts))]
+    return templates().get_template("methods.md.jinja").render(facts)
+
+
+def _cited(facts: Mapping[str, Any]) -> Iterator[str]:
+    """Keys of the references that the text of these facts cites."""
+    yield from ("dice", "lin", "gwet", "fleiss", "nichols")
+    conditions = {
+        "lancaster": facts["asked"]["space"] == "talairach",
+        "owen": facts["placements"]["draw"] in ("ball", "normal"),
+        "hallquist": facts["cleaning"] is not None,
+        "lindquist": facts["cleaning"] is not None,
+        "bartlett": facts["single"],
+        "dosenbach": facts["atlas"]["source"] == "dosenbach2010",
+        "benjamini": facts["threshold"]["rule"] == "fdr",
+        "busing": facts["intervals"],
+        "efron": facts["regional_intervals"],
+    }
+    yield from (key for key, cited in conditions.items() if cited)

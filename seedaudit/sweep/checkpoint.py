@@ -1,0 +1,265 @@
+"""Progress of the pass on disk: what one can trust after a kill, a full disk or a power cut.
+
+A fold's state is written to a temporary file, flushed and renamed. Progress is used again only
+under the same key (digests of exactly the settings that change numbers) and for the same inputs
+(digests of the runs that were added). Finished folds are kept until the whole pass is done.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import shutil
+import threading
+import time
+import zipfile
+import zlib
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any, Self
+
+import numpy as np
+from filelock import FileLock, Timeout
+from numpy.typing import NDArray
+
+from seedaudit.errors import DataError, Problem, StudyError
+from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.participant import Kept
+from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
+
+EVERY = 30.0
+"""Seconds of work that may be lost, if a participant does not take longer."""
+
+FORMAT = 1
+
+UNREADABLE = (OSError, ValueError, KeyError, EOFError, zipfile.BadZipFile, zlib.error)
+SCALARS = (
+    "participant", "row", "n_runs", "n_volumes", "n_censored", "residual_df",
+    "n_missing_voxels", "used", "reason",
+)  # fmt: skip
+
+
+@dataclass
+class FoldProgress:
+    """State of a fold after the participants recorded so far."""
+
+    moments: Moments
+    records: list[ParticipantRecord] = field(default_factory=list)
+
+
+class Checkpoint:
+    """The progress folder of one run; used as a context, in which no second run may enter.
+
+    Parameters
+    ----------
+    folder : Path
+        Made when it is missing; removed by `finish`.
+    key : mapping of str to str
+        Digests of the settings, by what they are called.
+    every : float
+        Seconds between writes.
+    fresh : bool
+        Ignore earlier progress.
+    tell : callable
+        Told what became of earlier progress.
+    """
+
+    def __init__(
+        self,
+        folder: Path,
+        key: Mapping[str, str],
+        *,
+        every: float = EVERY,
+        fresh: bool = False,
+        tell: Callable[[str], None] = lambda text: None,
+    ) -> None:
+        self._folder, self._key, self._every, self._tell = folder, dict(key), every, tell
+        self._fresh = fresh
+        self._guard = threading.Lock()
+        self._pending: dict[int, FoldProgress] = {}
+        self._saved: dict[int, float] = {}
+        self._lock = FileLock(folder / "lock")
+
+    def __enter__(self) -> Self:
+        try:
+            self._folder.mkdir(parents=True, exist_ok=True)
+            self._lock.acquire(timeout=0)
+        except Timeout:
+            raise StudyError(
+                Problem(
+                    self._folder.name,
+                    "another run is at work on this output",
+                    "one run at a time",
+                    "wait for it, or choose another folder with --out",
+                )
+            ) from None
+        except OSError as error:
+            raise self._refused(error) from error
+        try:
+            self._adopt()
+        except OSError as error:
+            self._lock.release()
+            raise self._refused(error) from error
+        self._began = time.monotonic()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._lock.release()
+
+    def _adopt(self) -> None:
+        """Keep earlier progress only under the same key; say what has changed."""
+        content = {"format": str(FORMAT), **self._key}
+        path = self._folder / "key.json"
+        kept = sorted(self._folder.glob("fold-*.npz"))
+        if kept:
+            try:
+                earlier = json.loads(path.read_text(encoding="utf-8"))
+            except UNREADABLE:
+                earlier = {}
+            changed = [name for name in content if earlier.get(name) != content[name]]
+            if self._fresh or changed:
+                why = "--fresh" if self._fresh else "changed: " + ", ".join(changed)
+                self._tell(f"earlier progress is not used ({why})")
+                for fold in kept:
+                    fold.unlink()
+            else:
+                self._tell("going on from earlier progress")
+        _write_whole(path, json.dumps(content, indent=1).encode())
+
+    def load(self, fold: int, participants: Sequence[ParticipantTask]) -> FoldProgress | None:
+        """Progress of a fold, if there is any that can be used."""
+        path = self._path(fold)
+        if not path.exists():
+            return None
+        try:
+            progress = _read(path)
+        except UNREADABLE:
+            self._tell(f"{path.name} is damaged and is made again")
+            return None
+        tasks = {task.participant: task for task in participants}
+        for record in progress.records:
+            for run, digest in zip(tasks[record.participant].runs, record.digests, strict=False):
+                if _file_digest(run.header.path) != digest:
+                    self._tell(f"{run.header.path.name} has changed since; its fold is made again")
+                    return None
+        return progress
+
+    def note(self, fold: int, progress: FoldProgress, *, finished: bool, now: bool) -> None:
+        """Called by a fold's worker after each participant: write what is due.
+
+        Raises
+        ------
+        DataError
+            If the disk refuses: progress that cannot be kept is not silently given up.
+        """
+        with self._guard:
+            if finished:
+                self._pending[fold] = progress
+            due = time.monotonic() - self._saved.get(fold, self._began) >= self._every
+            if not (due or now):
+                return
+            writes = {**self._pending, fold: progress}
+            try:
+                for number, part in writes.items():
+                    _write(self._path(number), part)
+                    self._saved[number] = time.monotonic()
+            except OSError as error:
+                raise self._refused(error) from error
+            self._pending.clear()
+
+    def finish(self) -> None:
+        """The pass is done and its result is safe: remove the progress."""
+        shutil.rmtree(self._folder, ignore_errors=True)
+
+    def _path(self, fold: int) -> Path:
+        return self._folder / f"fold-{fold:03d}.npz"
+
+    def _refused(self, error: OSError) -> DataError:
+        return DataError(
+            Problem(
+                f"progress folder {self._folder.name}",
+                f"cannot be written ({error.strerror or error})",
+                "a writable disk with enough space beside the output",
+                "free some space and say the same command again, or choose another --out",
+            )
+        )
+
+
+def _write(path: Path, progress: FoldProgress) -> None:
+    arrays: dict[str, NDArray[Any]] = {
+        f"moments_{name}": value for name, value in progress.moments.named_arrays()
+    }
+    rows = []
+    for i, record in enumerate(progress.records):
+        row = {name: getattr(record, name) for name in SCALARS}
+        rows.append({**row, "digests": list(record.digests), "clouds": len(record.kept)})
+        for name in ("coverage", "reported_z"):
+            if (value := getattr(record, name)) is not None:
+                arrays[f"{i}_{name}"] = value
+        for c, kept in enumerate(record.kept):
+            arrays[f"{i}_{c}_similarity"] = kept.similarity
+            arrays[f"{i}_{c}_targets"] = kept.target_means
+    arrays["records"] = np.frombuffer(json.dumps(rows).encode(), np.uint8)
+    partial = path.with_suffix(".partial")
+    with open(partial, "wb") as file:
+        np.savez(file, allow_pickle=False, **arrays)
+        file.flush()
+        os.fsync(file.fileno())
+    os.replace(partial, path)
+
+
+def _read(path: Path) -> FoldProgress:
+    with np.load(path, allow_pickle=False) as stored:
+        arrays = {name: stored[name] for name in stored.files}
+    rows = json.loads(arrays["records"].tobytes())
+    records = []
+    for i, row in enumerate(rows):
+        clouds, digests = row.pop("clouds"), tuple(row.pop("digests"))
+        kept = tuple(
+            Kept(arrays[f"{i}_{c}_similarity"], arrays[f"{i}_{c}_targets"]) for c in range(clouds)
+        )
+        records.append(
+            ParticipantRecord(
+                **row,
+                digests=digests,
+                coverage=arrays.get(f"{i}_coverage"),
+                kept=kept,
+                reported_z=arrays.get(f"{i}_reported_z"),
+            )
+        )
+    prefix = "moments_"
+    state = {n.removeprefix(prefix): a for n, a in arrays.items() if n.startswith(prefix)}
+    # those set aside are tried again: nothing of them is in the state
+    return FoldProgress(Moments(**state), [record for record in records if record.used])
+
+
+def _write_whole(path: Path, content: bytes) -> None:
+    partial = path.with_suffix(".partial")
+    with open(partial, "wb") as file:
+        file.write(content)
+        file.flush()
+        os.fsync(file.fileno())
+    os.replace(partial, path)
+
+
+def _file_digest(path: Path) -> str:
+    try:
+        with open(path, "rb") as file:
+            return hashlib.file_digest(file, "sha256").hexdigest()
+    except OSError:
+        return "unreadable"
+
+
+def digest(*parts: Any) -> str:
+    """SHA-256 of arrays, texts and numbers, in order."""
+    total = hashlib.sha256()
+    for part in parts:
+        if isinstance(part, np.ndarray):
+            total.update(f"{part.dtype.str}{part.shape}".encode())
+            total.update(np.ascontiguousarray(part).tobytes())
+        else:
+            total.update(repr(part).encode())
+        total.update(b"\0")
+    return total.hexdigest()

@@ -1,0 +1,284 @@
+"""What a worker is asked, and its work on one participant: read, clean, correlate, add up."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from seedaudit.errors import DataError, Problem
+from seedaudit.inputs.nuisance import censored_volumes, nuisance_basis, read_confounds
+from seedaudit.inputs.volumes import RunHeader, read_mask, read_run
+from seedaudit.space.grid import VoxelSet
+from seedaudit.sweep.correlate import CleanRun
+from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.participant import CloudTargets, Kept, KeptSums, participant_blocks
+
+LEAST_RESIDUAL_DF = 4
+"""A run's weight is its residual degrees of freedom minus 3."""
+
+
+@dataclass(frozen=True)
+class RunTask:
+    """One run to read: its header, its confounds table and its own mask, if any.
+
+    `nuisance_rank` is the number of independent nuisance columns, the intercept included.
+    """
+
+    header: RunHeader
+    confounds: Path | None = None
+    mask: Path | None = None
+    nuisance_rank: int = 1
+
+    @property
+    def residual_df(self) -> int:
+        """Volumes minus independent nuisance columns."""
+        return self.header.n_volumes - self.nuisance_rank
+
+
+@dataclass(frozen=True)
+class ParticipantTask:
+    """One participant: the label, the row of the design matrix, and the runs."""
+
+    participant: str
+    row: int
+    runs: tuple[RunTask, ...]
+
+
+@dataclass(frozen=True)
+class CleaningRecipe:
+    """The nuisance columns of a run; `censor` is (column, above, before, after)."""
+
+    drift: int = 0
+    band: tuple[float, float] | None = None
+    confounds: tuple[str, ...] = ()
+    censor: tuple[str, float, int, int] | None = None
+    smooth: float = 0.0
+    repetition_time: float | None = None
+
+
+@dataclass(frozen=True)
+class SweepTask:
+    """All that a worker needs to know.
+
+    Parameters
+    ----------
+    voxels : VoxelSet
+        Mask voxels.
+    weights : (N, V) sparse
+        Spheres of all placements of all seeds.
+    clouds : tuple of CloudTargets
+        One for each seed.
+    design : (n, p)
+    cleaning : CleaningRecipe
+    min_coverage : float
+        Share of a reported sphere that must vary in every run.
+    set_aside : bool
+        Leave out a participant whose data are bad, instead of stopping.
+    single : bool
+        One participant: keep the sampling variance of z.
+    keep_reported : bool
+        Keep each participant's z map of every reported placement (for permutation).
+    """
+
+    voxels: VoxelSet
+    weights: sparse.csr_array
+    clouds: tuple[CloudTargets, ...]
+    design: NDArray[np.float64]
+    cleaning: CleaningRecipe
+    min_coverage: float = 0.5
+    set_aside: bool = False
+    single: bool = False
+    keep_reported: bool = False
+
+    def empty_moments(self) -> Moments:
+        """The neutral element for this task."""
+        n_placements, n_voxels = self.weights.shape
+        return Moments.empty(self.design.shape[1], n_placements, n_voxels, variance=self.single)
+
+
+@dataclass(frozen=True)
+class ParticipantRecord:
+    """What is kept of a participant beside the moments.
+
+    `coverage` (N,) is the smallest share of each sphere that varies in the participant's runs;
+    `reported_z` (clouds, V) is z of the reported placements, NaN where missing, if it was kept.
+    """
+
+    participant: str
+    row: int
+    n_runs: int
+    n_volumes: int = 0
+    n_censored: int = 0
+    residual_df: int = 0
+    n_missing_voxels: int = 0
+    digests: tuple[str, ...] = ()
+    coverage: NDArray[np.float64] | None = None
+    kept: tuple[Kept, ...] = ()
+    reported_z: NDArray[np.float32] | None = None
+    used: bool = True
+    reason: str = ""
+
+
+class Buffers:
+    """Memory for voxel series, used again for every participant of a worker.
+
+    Fresh pages of memory cost about as much time as decompressing what goes into them.
+    """
+
+    def __init__(self) -> None:
+        self._arrays: list[NDArray[np.float32]] = []
+
+    def get(self, number: int, n_volumes: int, n_voxels: int) -> NDArray[np.float32]:
+        """The buffer for the run of that number, of at least (n_volumes, n_voxels)."""
+        while len(self._arrays) <= number:
+            self._arrays.append(np.empty((0, n_voxels), np.float32))
+        if len(self._arrays[number]) < n_volumes:
+            self._arrays[number] = np.empty((n_volumes, n_voxels), np.float32)
+        return self._arrays[number]
+
+
+def load_run(
+    task: RunTask,
+    recipe: CleaningRecipe,
+    voxels: VoxelSet,
+    out: NDArray[np.float32] | None = None,
+) -> tuple[CleanRun, int, str]:
+    """Read one run, into `out` if given, and build its nuisance basis.
+
+    Returns
+    -------
+    run : CleanRun
+    n_censored : int
+    digest : str
+        SHA-256 of the stored file.
+
+    Raises
+    ------
+    DataError
+        For unreadable images or tables.
+    """
+    basis, n_censored = run_basis(task, recipe)
+    data = read_run(task.header, voxels, recipe.smooth, out=out)
+    finite = data.finite
+    if task.mask is not None:
+        inside, _ = read_mask(task.mask, voxels.grid)
+        finite = finite & inside[tuple(voxels.ijk.T)]
+    return CleanRun(data.series, basis, finite), n_censored, data.digest
+
+
+def run_basis(task: RunTask, recipe: CleaningRecipe) -> tuple[NDArray[np.float64], int]:
+    """Orthonormal nuisance basis (T, q) of a run, and its number of censored volumes."""
+    n_volumes = task.header.n_volumes
+    values, censored = None, None
+    if task.confounds is not None:
+        if recipe.confounds:
+            values, _ = read_confounds(task.confounds, recipe.confounds, n_volumes)
+        if recipe.censor is not None:
+            column, above, before, after = recipe.censor
+            censored = censored_volumes(task.confounds, column, above, before, after, n_volumes)
+    elif recipe.confounds or recipe.censor is not None:
+        raise DataError(
+            Problem(
+                task.header.path.name,
+                "has no confounds table",
+                "[cleaning] names confounds or censoring",
+                "add a `confounds` column to the runs table, or leave them out of [cleaning]",
+            )
+        )
+    basis = nuisance_basis(
+        n_volumes,
+        drift=recipe.drift,
+        band=recipe.band,
+        repetition_time=recipe.repetition_time or task.header.repetition_time,
+        confounds=values,
+        censored=censored,
+    )
+    return basis, 0 if censored is None else int(censored.sum())
+
+
+def sweep_participant(
+    task: SweepTask,
+    participant: ParticipantTask,
+    moments: Moments,
+    buffers: Buffers | None = None,
+) -> ParticipantRecord:
+    """Read one participant's runs and add them to the moments of the fold.
+
+    Nothing is added when the data are bad.
+
+    Raises
+    ------
+    DataError
+        Unless the task sets bad participants aside; the record then says why.
+    """
+    buffers = buffers or Buffers()
+    try:
+        loaded = [
+            load_run(
+                run,
+                task.cleaning,
+                task.voxels,
+                buffers.get(number, run.header.n_volumes, len(task.voxels)),
+            )
+            for number, run in enumerate(participant.runs)
+        ]
+        runs = [run for run, _, _ in loaded]
+        blocks, coverage = participant_blocks(runs, task.weights, known_variance=task.single)
+        _check_reported(task, participant, coverage)
+    except DataError as error:
+        named = [
+            replace(problem, where=f"participant {participant.participant}, {problem.where}")
+            for problem in error.problems
+        ]
+        if not task.set_aside:
+            raise DataError(*named) from error
+        reason = "; ".join(problem.brief for problem in error.problems)
+        return ParticipantRecord(
+            participant.participant, participant.row, len(participant.runs), used=False,
+            reason=reason,
+        )  # fmt: skip
+    sums = [KeptSums(cloud) for cloud in task.clouds]
+    reported = [cloud.rows.start for cloud in task.clouds]
+    maps = np.full((len(reported), len(task.voxels)), np.nan, np.float32)
+    n_missing = 0
+    for block in blocks:
+        moments.add(task.design[participant.row], block)
+        n_missing += int((~block.valid).sum())
+        for part in sums:
+            part.add(block)
+        if task.keep_reported:
+            maps[:, block.where] = np.where(block.valid, block.z[reported], np.nan)
+    return ParticipantRecord(
+        participant.participant,
+        participant.row,
+        n_runs=len(runs),
+        n_volumes=sum(run.basis.shape[0] for run in runs),
+        n_censored=sum(censored for _, censored, _ in loaded),
+        residual_df=sum(run.residual_df for run in runs),
+        n_missing_voxels=n_missing,
+        digests=tuple(digest for _, _, digest in loaded),
+        coverage=coverage,
+        kept=tuple(part.finish() for part in sums),
+        reported_z=maps if task.keep_reported else None,
+    )
+
+
+def _check_reported(
+    task: SweepTask, participant: ParticipantTask, coverage: NDArray[np.float64]
+) -> None:
+    reported = coverage[[cloud.rows.start for cloud in task.clouds]]
+    if reported.min() < task.min_coverage:
+        names = ", ".join(run.header.path.name for run in participant.runs)
+        raise DataError(
+            Problem(
+                names,
+                f"only {reported.min():.0%} of a reported seed sphere has a signal that varies",
+                f"at least {task.min_coverage:.0%} (min_coverage)",
+                "look at the run's coverage, correct the mask or the seed, or set "
+                'on_bad_run = "set-aside"',
+            )
+        )
