@@ -1,0 +1,246 @@
+"""Nothing is lost: kills, damage, changed inputs, a full disk and two runs at once."""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import nibabel as nib
+import numpy as np
+import pytest
+
+from seedaudit.auditing import audit, open_checkpoint
+from seedaudit.errors import DataError, StudyError
+from seedaudit.preflight import make_plan
+from seedaudit.study import Study
+from seedaudit.sweep import checkpoint as checkpoint_module
+from tests.small_study import write_small_study
+
+ROOT = Path(__file__).resolve().parents[2]
+
+# A run whose participants take long enough to be killed between and within them, and that keeps
+# its progress after each of them.
+SLOW_RUN = """
+import sys, time
+from seedaudit.sweep import checkpoint, schedule
+whole = schedule.sweep_participant
+def slow(*arguments):
+    time.sleep(0.04)
+    return whole(*arguments)
+schedule.sweep_participant = slow
+checkpoint.Checkpoint.__init__.__kwdefaults__["every"] = 0.0
+from seedaudit.cli import main
+sys.exit(main(sys.argv[1:]))
+"""
+
+
+@pytest.fixture(scope="module")
+def study(tmp_path_factory):
+    folder = tmp_path_factory.mktemp("study")
+    small = write_small_study(folder, participants=6)
+    text = small.study_file.read_text().replace("folds = 4", "folds = 3")
+    small.study_file.write_text(text)
+    return small.study_file
+
+
+@pytest.fixture(scope="module")
+def undisturbed(study):
+    return result_bytes(study.parent / run_to_end(study, "undisturbed"))
+
+
+def start(study: Path, out: str, *options: str) -> subprocess.Popen:
+    return subprocess.Popen(
+        [sys.executable, "-c", SLOW_RUN, "run", str(study), "--out", str(study.parent / out),
+         "--workers", "2", *options],
+        cwd=study.parent, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+        env={**os.environ, "PYTHONPATH": str(ROOT)},
+    )  # fmt: skip
+
+
+def run_to_end(study: Path, out: str, *options: str, code: int = 0) -> str:
+    process = start(study, out, *options)
+    _, messages = process.communicate(timeout=120)
+    assert process.returncode == code, messages
+    return out
+
+
+def result_bytes(folder: Path) -> dict[str, bytes]:
+    """Every table and map of a result."""
+    return {
+        str(path.relative_to(folder)): path.read_bytes()
+        for part in ("tables", "maps")
+        for path in sorted((folder / part).iterdir())
+    }
+
+
+def progress_of(study: Path, out: str) -> Path:
+    return study.parent / f".{out}.progress"
+
+
+def wait_for_progress(study: Path, out: str, process: subprocess.Popen) -> None:
+    """Until the first participants are on disk, so that the kill has something to spoil."""
+    limit = time.monotonic() + 60
+    while not list(progress_of(study, out).glob("fold-*.npz")):
+        assert process.poll() is None, process.stderr.read()
+        assert time.monotonic() < limit
+        time.sleep(0.005)
+
+
+def test_twenty_kills_at_random_moments(study, undisturbed):
+    """kill -9, again and again; the same command goes on and ends with the same bytes."""
+    rng = np.random.default_rng(7)
+    kills = 0
+    for round_number in range(8):
+        out = f"killed-{round_number}"
+        for _ in range(3):
+            process = start(study, out)
+            wait_for_progress(study, out, process)
+            time.sleep(rng.uniform(0, 0.25))
+            alive = process.poll() is None
+            process.send_signal(signal.SIGKILL)
+            process.communicate()
+            kills += alive
+            assert not alive or not (study.parent / out).exists()
+            if not alive:
+                break
+        if not (study.parent / out).exists():
+            run_to_end(study, out)
+        assert result_bytes(study.parent / out) == undisturbed
+        assert not progress_of(study, out).exists()
+    assert kills >= 20
+
+
+def test_interrupt_keeps_progress_and_says_how_to_go_on(study, undisturbed):
+    out = "interrupted"
+    process = start(study, out)
+    wait_for_progress(study, out, process)
+    process.send_signal(signal.SIGINT)
+    _, messages = process.communicate(timeout=60)
+    assert process.returncode == 130
+    assert "the same command goes on" in messages
+    assert not (study.parent / out).exists()
+    assert list(progress_of(study, out).glob("fold-*.npz"))
+    process = start(study, out)
+    _, messages = process.communicate(timeout=60)
+    assert "going on from earlier progress" in messages
+    assert result_bytes(study.parent / out) == undisturbed
+
+
+def test_second_interrupt_ends_at_once_and_leaves_usable_progress(study, undisturbed):
+    out = "interrupted-twice"
+    process = start(study, out)
+    wait_for_progress(study, out, process)
+    process.send_signal(signal.SIGINT)
+    time.sleep(0.02)
+    process.send_signal(signal.SIGINT)
+    process.communicate(timeout=10)
+    assert process.returncode == 130
+    run_to_end(study, out)
+    assert result_bytes(study.parent / out) == undisturbed
+
+
+def kept_progress(study: Path, folder: Path) -> list[Path]:
+    """A plan swept to its end with its progress kept, as after a crash while the result is made."""
+    with open_checkpoint(make_plan(Study.load(study)), folder, tell=str) as progress:
+        progress._every = 0.0
+        audit(make_plan(Study.load(study)), checkpoint=progress)
+    return sorted(folder.glob("fold-*.npz"))
+
+
+def messages_of(study: Path, folder: Path, **options) -> list[str]:
+    said: list[str] = []
+    plan = make_plan(Study.load(study))
+    with open_checkpoint(plan, folder, tell=said.append, **options) as progress:
+        audit(plan, checkpoint=progress)
+    return said
+
+
+@pytest.mark.parametrize("damage", ["truncated", "flipped", "empty"])
+def test_a_damaged_progress_file_is_made_again(study, undisturbed, tmp_path, damage):
+    folder = tmp_path / "progress"
+    file = kept_progress(study, folder)[1]
+    content = bytearray(file.read_bytes())
+    if damage == "truncated":
+        content = content[: len(content) // 2]
+    elif damage == "flipped":
+        content[len(content) // 3] ^= 0xFF
+    else:
+        content = bytearray()
+    file.write_bytes(content)
+    assert any("damaged" in text for text in messages_of(study, folder))
+
+
+def test_a_changed_setting_makes_progress_unusable_and_is_named(tmp_path):
+    small = write_small_study(tmp_path / "study", participants=4)
+    folder = tmp_path / "progress"
+    kept_progress(small.study_file, folder)
+    text = small.study_file.read_text()
+    for old, new, word in [
+        ("count = 12", "count = 11", "placements"),
+        ("drift = 1", "drift = 2", "cleaning"),
+        ("folds = 4", "folds = 2", "participants and folds"),
+    ]:
+        small.study_file.write_text(text.replace(old, new))
+        said = messages_of(small.study_file, folder)
+        assert any("not used" in line and word in line for line in said), (old, said)
+        small.study_file.write_text(text)
+        kept_progress(small.study_file, folder)
+    # a threshold changes no number of the pass
+    small.study_file.write_text(text.replace("level = 0.05", "level = 0.01"))
+    assert messages_of(small.study_file, folder) == ["going on from earlier progress"]
+    assert any("--fresh" in line for line in messages_of(small.study_file, folder, fresh=True))
+
+
+def test_a_changed_run_makes_its_fold_again(tmp_path):
+    small = write_small_study(tmp_path / "study", participants=4)
+    folder = tmp_path / "progress"
+    kept_progress(small.study_file, folder)
+    path = small.bold_files["sub-02", "1"]
+    image = nib.Nifti1Image.from_filename(path)
+    data = image.get_fdata()
+    data[..., 0] += 50
+    changed = nib.Nifti1Image(data, image.affine, image.header)
+    nib.save(changed, path)
+    said = messages_of(small.study_file, folder)
+    assert any(path.name in line and "changed" in line for line in said)
+
+
+def test_a_full_disk_stops_the_run_with_a_clear_error(study, tmp_path, monkeypatch):
+    """A checkpoint that cannot be written is not silently given up."""
+    folder = tmp_path / "progress"
+    plan = make_plan(Study.load(study))
+
+    def full(*_: object, **__: object) -> None:
+        raise OSError(28, "No space left on device")
+
+    with open_checkpoint(plan, folder, tell=str) as progress:
+        progress._every = 0.0
+        monkeypatch.setattr(checkpoint_module, "_write", full)
+        with pytest.raises(DataError, match=r"progress folder.*No space left.*free some space"):
+            audit(plan, checkpoint=progress)
+    monkeypatch.undo()
+    assert messages_of(study, folder) == []
+
+
+def test_a_second_run_into_one_folder_refuses(study, tmp_path):
+    plan = make_plan(Study.load(study))
+    folder = tmp_path / ".audit.progress"
+    with (
+        open_checkpoint(plan, folder, tell=str),
+        pytest.raises(StudyError, match="another run is at work"),
+        open_checkpoint(plan, folder, tell=str),
+    ):
+        pass
+
+
+def test_progress_holds_no_pickle_and_no_path(study, tmp_path):
+    folder = tmp_path / "progress"
+    for file in kept_progress(study, folder):
+        with np.load(file, allow_pickle=False) as stored:
+            assert str(study.parent) not in stored["records"].tobytes().decode()
+            json.loads(stored["records"].tobytes())
