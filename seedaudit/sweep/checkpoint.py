@@ -7,7 +7,6 @@ under the same key (digests of exactly the settings that change numbers) and for
 
 from __future__ import annotations
 
-import hashlib
 import json
 import os
 import shutil
@@ -16,7 +15,6 @@ import time
 import zipfile
 import zlib
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Self
 
@@ -25,6 +23,8 @@ from filelock import FileLock, Timeout
 from numpy.typing import NDArray
 
 from seedaudit.errors import DataError, Problem, StudyError
+from seedaudit.sweep.digests import file_digest
+from seedaudit.sweep.fold import FoldProgress
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.participant import Kept
 from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
@@ -39,14 +39,6 @@ SCALARS = (
     "participant", "row", "n_runs", "n_volumes", "n_censored", "residual_df",
     "n_missing_voxels", "used", "reason",
 )  # fmt: skip
-
-
-@dataclass
-class FoldProgress:
-    """State of a fold after the participants recorded so far."""
-
-    moments: Moments
-    records: list[ParticipantRecord] = field(default_factory=list)
 
 
 class Checkpoint:
@@ -141,7 +133,7 @@ class Checkpoint:
         tasks = {task.participant: task for task in participants}
         for record in progress.records:
             for run, digest in zip(tasks[record.participant].runs, record.digests, strict=False):
-                if _file_digest(run.header.path) != digest:
+                if file_digest(run.header.path) != digest:
                     self._tell(f"{run.header.path.name} has changed since; its fold is made again")
                     return None
         return progress
@@ -242,24 +234,3 @@ def _write_whole(path: Path, content: bytes) -> None:
         file.flush()
         os.fsync(file.fileno())
     os.replace(partial, path)
-
-
-def _file_digest(path: Path) -> str:
-    try:
-        with open(path, "rb") as file:
-            return hashlib.file_digest(file, "sha256").hexdigest()
-    except OSError:
-        return "unreadable"
-
-
-def digest(*parts: Any) -> str:
-    """SHA-256 of arrays, texts and numbers, in order."""
-    total = hashlib.sha256()
-    for part in parts:
-        if isinstance(part, np.ndarray):
-            total.update(f"{part.dtype.str}{part.shape}".encode())
-            total.update(np.ascontiguousarray(part).tobytes())
-        else:
-            total.update(repr(part).encode())
-        total.update(b"\0")
-    return total.hexdigest()

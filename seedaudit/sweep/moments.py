@@ -11,7 +11,7 @@ from dataclasses import dataclass, fields
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import DTypeLike, NDArray
 
 from seedaudit.sweep.correlate import ZBlock
 
@@ -20,7 +20,9 @@ from seedaudit.sweep.correlate import ZBlock
 class Moments:
     """Sufficient statistics of participants for N placements, V voxels and p design columns.
 
-    Accumulated in float64: the residual sum of squares is a difference of large sums.
+    Accumulated in float64: the residual sum of squares is a difference of large sums. When memory
+    is short a fold's part may be float32, which costs a relative error of t of about 1e-7 times
+    (mean/SD)² for the few participants of a fold; parts are merged in float64.
 
     Parameters
     ----------
@@ -43,15 +45,22 @@ class Moments:
     variance: NDArray[np.float64] | None = None
 
     @classmethod
-    def empty(cls, p: int, n_placements: int, n_voxels: int, *, variance: bool = False) -> Moments:
+    def empty(
+        cls,
+        p: int,
+        n_placements: int,
+        n_voxels: int,
+        *,
+        variance: bool = False,
+        dtype: DTypeLike = np.float64,
+    ) -> Moments:
         """The neutral element."""
-        known = np.zeros((n_placements, n_voxels)) if variance else None
         return cls(
             np.zeros(n_voxels, np.int32),
             np.zeros((p, p, n_voxels)),
-            np.zeros((p, n_placements, n_voxels)),
-            np.zeros((n_placements, n_voxels)),
-            known,
+            np.zeros((p, n_placements, n_voxels), dtype),
+            np.zeros((n_placements, n_voxels), dtype),
+            np.zeros((n_placements, n_voxels), dtype) if variance else None,
         )
 
     def add(self, x: NDArray[np.float64], block: ZBlock) -> None:
@@ -106,10 +115,14 @@ class Moments:
         return [value for _, value in self.named_arrays()]
 
 
+def _wide(array: NDArray[Any]) -> DTypeLike:
+    return np.float64 if array.dtype.kind == "f" else array.dtype
+
+
 def merged(parts: Iterable[Moments]) -> Moments:
-    """Sum of the parts, in the order given, so that the digits are always the same."""
+    """Sum of the parts in float64, in the order given, so that the digits are always the same."""
     first, *others = parts
-    total = Moments(*(array.copy() for array in first._arrays()))
+    total = Moments(*(array.astype(_wide(array)) for array in first._arrays()))
     for part in others:
         total += part
     return total

@@ -15,7 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from seedaudit._version import __version__
-from seedaudit.sweep.checkpoint import Checkpoint, FoldProgress, digest
+from seedaudit.sweep.checkpoint import Checkpoint
+from seedaudit.sweep.cluster import folds_on_cluster
+from seedaudit.sweep.digests import digest
+from seedaudit.sweep.fold import FoldProgress, run_fold
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.task import (
     LEAST_RESIDUAL_DF,
@@ -27,12 +30,12 @@ from seedaudit.sweep.task import (
     SweepTask,
     load_run,
     run_basis,
-    sweep_participant,
 )
 
 __all__ = [
     "LEAST_RESIDUAL_DF", "CleaningRecipe", "ParticipantRecord", "ParticipantTask", "RunTask",
-    "SweepTask", "Swept", "assign_folds", "load_run", "run_basis", "sweep", "sweep_key",
+    "SweepTask", "Swept", "assign_folds", "load_run", "run_basis", "run_fold", "sweep",
+    "sweep_key",
 ]  # fmt: skip
 
 
@@ -85,7 +88,9 @@ def sweep_key(task: SweepTask, folds: Sequence[Sequence[ParticipantTask]]) -> di
              for fold in folds]
         ),
         "cleaning": digest(recipe, *(run_basis(run, recipe)[0] for run in runs)),
-        "options": digest(task.min_coverage, task.set_aside, task.single, task.keep_reported),
+        "options": digest(
+            task.min_coverage, task.set_aside, task.single, task.keep_reported, task.precision
+        ),
     }  # fmt: skip
 
 
@@ -94,6 +99,7 @@ def sweep(
     folds: Sequence[Sequence[ParticipantTask]],
     *,
     workers: int = 2,
+    cluster: str | None = None,
     checkpoint: Checkpoint | None = None,
     on_participant: Callable[[ParticipantRecord], None] = lambda record: None,
 ) -> Swept:
@@ -106,6 +112,8 @@ def sweep(
     workers : int
         Threads, each with one fold at a time; reading, decompression and products run outside
         the interpreter lock.
+    cluster : str, optional
+        Address of a Dask scheduler whose workers do the folds instead.
     checkpoint : Checkpoint, optional
         Where progress is kept; earlier progress is gone on from.
     on_participant : callable
@@ -120,42 +128,51 @@ def sweep(
     DataError
         The first bad participant, unless the task sets them aside.
     """
-    stop, memory = threading.Event(), threading.local()
-
-    def sweep_fold(number: int) -> FoldProgress:
-        if not hasattr(memory, "buffers"):
-            memory.buffers = Buffers()
-        progress = checkpoint.load(number, folds[number]) if checkpoint else None
-        progress = progress or FoldProgress(task.empty_moments())
-        done = {record.participant for record in progress.records}
-        for record in progress.records:
-            on_participant(record)
-        left = [participant for participant in folds[number] if participant.participant not in done]
-        for participant in left:
-            if stop.is_set():
-                break
-            record = sweep_participant(task, participant, progress.moments, memory.buffers)
-            progress.records.append(record)
-            on_participant(record)
-            if checkpoint:
-                finished = participant is left[-1]
-                checkpoint.note(number, progress, finished=finished, now=stop.is_set())
-        return progress
-
-    with ThreadPoolExecutor(max_workers=workers) as pool:
-        futures = [pool.submit(sweep_fold, number) for number in range(len(folds))]
-        try:
-            wait(futures, return_when=FIRST_EXCEPTION)
-            failed = [f for f in futures if f.done() and f.exception() is not None]
-            if failed:
-                failed[0].result()
-            parts = [future.result() for future in futures]
-        finally:
-            # also on Ctrl-C: every worker ends its participant and keeps its progress
-            stop.set()
-            pool.shutdown(wait=True, cancel_futures=True)
+    earlier = [checkpoint.load(n, fold) if checkpoint else None for n, fold in enumerate(folds)]
+    for record in (r for progress in earlier if progress for r in progress.records):
+        on_participant(record)
+    if cluster is None:
+        parts = _on_threads(task, folds, earlier, workers, checkpoint, on_participant)
+    else:
+        parts = folds_on_cluster(cluster, task, folds, earlier, checkpoint, on_participant)
     return Swept(
         tuple(part.moments for part in parts),
         tuple(sum(record.used for record in part.records) for part in parts),
         tuple(sorted((r for part in parts for r in part.records), key=lambda r: r.row)),
     )
+
+
+def _on_threads(
+    task: SweepTask,
+    folds: Sequence[Sequence[ParticipantTask]],
+    earlier: Sequence[FoldProgress | None],
+    workers: int,
+    checkpoint: Checkpoint | None,
+    on_participant: Callable[[ParticipantRecord], None],
+) -> list[FoldProgress]:
+    stop, memory = threading.Event(), threading.local()
+
+    def work(number: int) -> FoldProgress:
+        if not hasattr(memory, "buffers"):
+            memory.buffers = Buffers()
+
+        def after(progress: FoldProgress, last: bool) -> bool:
+            on_participant(progress.records[-1])
+            if checkpoint:
+                checkpoint.note(number, progress, finished=last, now=stop.is_set())
+            return not stop.is_set()
+
+        return run_fold(task, folds[number], earlier[number], buffers=memory.buffers, after=after)
+
+    with ThreadPoolExecutor(max_workers=workers) as pool:
+        futures = [pool.submit(work, number) for number in range(len(folds))]
+        try:
+            wait(futures, return_when=FIRST_EXCEPTION)
+            failed = [f for f in futures if f.done() and f.exception() is not None]
+            if failed:
+                failed[0].result()
+            return [future.result() for future in futures]
+        finally:
+            # also on Ctrl-C: every worker ends its participant and keeps its progress
+            stop.set()
+            pool.shutdown(wait=True, cancel_futures=True)

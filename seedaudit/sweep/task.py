@@ -16,6 +16,7 @@ from seedaudit.space.grid import VoxelSet
 from seedaudit.sweep.correlate import CleanRun
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.participant import CloudTargets, Kept, KeptSums, participant_blocks
+from seedaudit.sweep.prepared import PreparedRuns
 
 LEAST_RESIDUAL_DF = 4
 """A run's weight is its residual degrees of freedom minus 3."""
@@ -82,6 +83,10 @@ class SweepTask:
         One participant: keep the sampling variance of z.
     keep_reported : bool
         Keep each participant's z map of every reported placement (for permutation).
+    prepared : Path or None
+        Folder where decompressed runs are kept and found again.
+    precision : str
+        Type of the state: float64, or float32 to halve its memory.
     """
 
     voxels: VoxelSet
@@ -93,11 +98,19 @@ class SweepTask:
     set_aside: bool = False
     single: bool = False
     keep_reported: bool = False
+    prepared: Path | None = None
+    precision: str = "float64"
 
     def empty_moments(self) -> Moments:
         """The neutral element for this task."""
         n_placements, n_voxels = self.weights.shape
-        return Moments.empty(self.design.shape[1], n_placements, n_voxels, variance=self.single)
+        return Moments.empty(
+            self.design.shape[1],
+            n_placements,
+            n_voxels,
+            variance=self.single,
+            dtype=np.dtype(self.precision),
+        )
 
 
 @dataclass(frozen=True)
@@ -145,9 +158,11 @@ def load_run(
     task: RunTask,
     recipe: CleaningRecipe,
     voxels: VoxelSet,
+    *,
     out: NDArray[np.float32] | None = None,
+    prepared: PreparedRuns | None = None,
 ) -> tuple[CleanRun, int, str]:
-    """Read one run, into `out` if given, and build its nuisance basis.
+    """Read one run, into `out` or from where it was prepared, and build its nuisance basis.
 
     Returns
     -------
@@ -162,7 +177,10 @@ def load_run(
         For unreadable images or tables.
     """
     basis, n_censored = run_basis(task, recipe)
-    data = read_run(task.header, voxels, recipe.smooth, out=out)
+    if prepared is not None:
+        data = prepared.run(task.header, out)
+    else:
+        data = read_run(task.header, voxels, recipe.smooth, out=out)
     finite = data.finite
     if task.mask is not None:
         inside, _ = read_mask(task.mask, voxels.grid)
@@ -215,14 +233,17 @@ def sweep_participant(
     DataError
         Unless the task sets bad participants aside; the record then says why.
     """
-    buffers = buffers or Buffers()
+    buffers, prepared = buffers or Buffers(), None
+    if task.prepared is not None:
+        prepared = PreparedRuns(task.prepared, task.voxels, task.cleaning.smooth)
     try:
         loaded = [
             load_run(
                 run,
                 task.cleaning,
                 task.voxels,
-                buffers.get(number, run.header.n_volumes, len(task.voxels)),
+                out=buffers.get(number, run.header.n_volumes, len(task.voxels)),
+                prepared=prepared,
             )
             for number, run in enumerate(participant.runs)
         ]

@@ -27,12 +27,12 @@ ROOT = Path(__file__).resolve().parents[2]
 # its progress after each of them.
 SLOW_RUN = """
 import sys, time
-from seedaudit.sweep import checkpoint, schedule
-whole = schedule.sweep_participant
+from seedaudit.sweep import checkpoint, fold
+whole = fold.sweep_participant
 def slow(*arguments):
     time.sleep(0.04)
     return whole(*arguments)
-schedule.sweep_participant = slow
+fold.sweep_participant = slow
 checkpoint.Checkpoint.__init__.__kwdefaults__["every"] = 0.0
 from seedaudit.cli import main
 sys.exit(main(sys.argv[1:]))

@@ -1,4 +1,4 @@
-"""Correlation, cleaning and Fisher z of one run, against float64 brute force and handbook values."""
+"""Correlation, cleaning and Fisher z of one run, against brute force and handbook values."""
 
 from __future__ import annotations
 
@@ -81,7 +81,7 @@ def test_float32_does_not_lose_digits_under_a_large_drift(drift_size):
 
 
 def test_first_levels_of_the_fisher_table():
-    """z(0.5) = ln(3)/2, z(0.6) = ln 2, z(0.8) = ln 3 (Fisher & Yates, Statistical Tables; exact)."""
+    """z(0.5) = ln(3)/2, z(0.6) = ln 2, z(0.8) = ln 3 (Fisher & Yates, z table; exact)."""
     rng = np.random.default_rng(3)
     a, b = residuals(rng.standard_normal((T, 2)), np.full((T, 1), T**-0.5)).T
     a /= np.linalg.norm(a)
