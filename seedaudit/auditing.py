@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -50,6 +51,8 @@ def audit(
     workers: int | None = None,
     progress: Progress | None = None,
     checkpoint: Checkpoint | None = None,
+    cluster: str | None = None,
+    prepared: Path | None = None,
 ) -> Audit:
     """Does the seed-correlation result survive small shifts of its seed?
 
@@ -62,6 +65,10 @@ def audit(
     progress : Progress, optional
     checkpoint : Checkpoint, optional
         From `open_checkpoint`, entered: where the pass is kept on disk and gone on from.
+    cluster : str, optional
+        Address of a Dask scheduler whose workers do the pass.
+    prepared : Path, optional
+        Folder where decompressed runs are kept and found again.
 
     Returns
     -------
@@ -86,9 +93,10 @@ def audit(
     # single-threaded products, so that the digits depend on no number of cores
     with threadpool_limits(limits=1):
         swept = sweep(
-            plan.sweep_task(matrix),
+            replace(plan.sweep_task(matrix), prepared=prepared),
             folds,
             workers=workers,
+            cluster=cluster,
             checkpoint=checkpoint,
             on_participant=lambda record: progress.step(_label(record)),
         )

@@ -10,6 +10,7 @@ import traceback
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -17,7 +18,7 @@ import click
 from rich.console import Console
 
 from seedaudit._version import __version__
-from seedaudit.errors import Problem, SeedAuditError, StudyError
+from seedaudit.errors import Findings, Problem, SeedAuditError, StudyError
 
 CAUTION = (
     "Research use. A seed that feeds stimulation or surgical targeting, or any decision on a "
@@ -26,22 +27,41 @@ CAUTION = (
 
 DONE, FAULT, SET_ASIDE, INTERRUPTED = 0, 1, 4, 130
 
-EPILOG_RUN = """\b
+EPILOG_RUN = f"""\b
 Examples:
   seedaudit run study.toml
   seedaudit run study.toml --out audit-2 --workers 4
   seedaudit run --seed 0 -52 26 --radius 6 --within 6 --bold 'sub-*_bold.nii.gz' \\
       --mask mask.nii.gz --regions atlas.nii.gz --out audit
+
+Lengths and coordinates are in mm. {CAUTION}
+"""
+
+EPILOG_CHECK = f"""\b
+Examples:
+  seedaudit check study.toml
+  seedaudit check study.toml --json
+  seedaudit check --seed 0 -52 26 --bold 'sub-*_bold.nii.gz' --mask mask.nii.gz
+
+Lengths and coordinates are in mm. {CAUTION}
+"""
+
+EPILOG_SYNTH = f"""\b
+Examples:
+  seedaudit synth tide-study
+  seedaudit synth large --participants 40 --voxel-size 2 --random-state 7
+
+{CAUTION}
 """
 
 
 def _shared(command: Callable[..., Any]) -> Callable[..., Any]:
     """Options that `run` and `check` share."""
     options = [
-        click.argument("study", required=False, type=click.Path(path_type=Path)),
+        click.argument("study", nargs=-1, type=click.Path(path_type=Path), metavar="[STUDY]"),
         click.option("--seed", type=float, nargs=3, metavar="X Y Z", help="Seed centre, mm."),
-        click.option("--radius", type=float, metavar="MM", help="Sphere radius (default 6)."),
-        click.option("--within", type=float, metavar="MM", help="Cloud radius (default 6)."),
+        click.option("--radius", type=float, metavar="MM", help="Sphere radius (default 6 mm)."),
+        click.option("--within", type=float, metavar="MM", help="Cloud radius (default 6 mm)."),
         click.option("--count", type=int, metavar="N", help="Placements to draw (default 100)."),
         click.option(
             "--space",
@@ -81,28 +101,40 @@ def app(debug: bool) -> None:
 @_shared
 @click.option("--replace", is_flag=True, help="Put the result in the place of an earlier one.")
 @click.option("--fresh", is_flag=True, help="Ignore the progress of an interrupted run.")
+@click.option("--cluster", metavar="ADDRESS", help="Dask scheduler whose workers do the pass.")
+@click.option(
+    "--keep-prepared",
+    type=click.Path(path_type=Path),
+    metavar="DIR",
+    help="Keep decompressed runs there for the next seed.",
+)
 def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, replace: bool,
-        fresh: bool, **asked: Any) -> int:  # fmt: skip
+        fresh: bool, cluster: str | None, keep_prepared: Path | None,
+        **asked: Any) -> int:  # fmt: skip
     """Audit a study: check everything, read the data once, write the result folder.
 
     STUDY is a study file (TOML); a first try needs none, give --seed and --bold instead.
     After an interruption the same command goes on where it was.
     """
     from seedaudit.auditing import audit, open_checkpoint
-    from seedaudit.preflight import make_plan
     from seedaudit.progress import LiveProgress, PlainProgress
-    from seedaudit.store import check_free, save
+    from seedaudit.store import save
 
-    study = _study(asked)
-    folder = out or study.base / study.output
-    check_free(folder, replace=replace)
-    plan = make_plan(study)
+    plan, folder = _ready(asked, out, replace=replace)
+    _print_warnings(plan.warnings, quiet)
     console = Console(stderr=True)
     bar = LiveProgress(console) if console.is_terminal and not quiet else PlainProgress(quiet=quiet)
     kept = folder.with_name(f".{folder.name}.progress")
     with _second_interrupt_ends(), open_checkpoint(plan, kept, fresh=fresh, tell=_say) as progress:
         with bar as shown:
-            result = audit(plan, workers=workers, progress=shown, checkpoint=progress)
+            result = audit(
+                plan,
+                workers=workers,
+                progress=shown,
+                checkpoint=progress,
+                cluster=cluster,
+                prepared=keep_prepared,
+            )
         save(result, folder, replace=replace)
         progress.finish()
     _print_warnings(result.provenance["warnings"], quiet)
@@ -115,7 +147,7 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
     return SET_ASIDE if result.provenance["group"]["set_aside"] else DONE
 
 
-@app.command(epilog="\b\nExamples:\n  seedaudit check study.toml\n")
+@app.command(epilog=EPILOG_CHECK)
 @_shared
 def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **asked: Any) -> int:
     """Check a study without running it: runs, placements, regions, design, predicted needs.
@@ -125,13 +157,9 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
     """
     from seedaudit.forecast import forecast
     from seedaudit.overview import overview, overview_text
-    from seedaudit.preflight import make_plan
-    from seedaudit.store import check_free
     from seedaudit.workers import available_cores
 
-    study = _study(asked)
-    plan = make_plan(study)
-    check_free(out or study.base / study.output, replace=False)
+    plan, _ = _ready(asked, out, replace=False)
     found = overview(plan, forecast(plan, workers or available_cores()))
     _print_warnings(plan.warnings, quiet)
     if as_json:
@@ -141,14 +169,17 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
     return DONE
 
 
-@app.command(
-    epilog="\b\nExamples:\n  seedaudit synth tide-study\n"
-    "  seedaudit synth large --participants 40 --voxel-size 2 --random-state 7\n"
-)
+@app.command(epilog=EPILOG_SYNTH)
 @click.argument("folder", type=click.Path(path_type=Path))
-@click.option("--participants", type=click.IntRange(2), metavar="N", help="Participants.")
-@click.option("--voxel-size", type=click.FloatRange(1), metavar="MM", help="Edge of a voxel.")
-@click.option("--volumes", type=click.IntRange(20), metavar="N", help="Volumes of a run.")
+@click.option(
+    "--participants", type=click.IntRange(4), metavar="N", help="Participants, 4 or more."
+)
+@click.option(
+    "--voxel-size", type=click.FloatRange(1, 8), metavar="MM", help="Edge of a voxel, 1 to 8 mm."
+)
+@click.option(
+    "--volumes", type=click.IntRange(20), metavar="N", help="Volumes of a run, 20 or more."
+)
 @click.option("--random-state", type=click.IntRange(0), metavar="N", help="Seed of the chance.")
 def synth(folder: Path, **asked: Any) -> int:
     """Write a synthetic study into FOLDER; truth.json there says what an audit must find."""
@@ -156,21 +187,46 @@ def synth(folder: Path, **asked: Any) -> int:
 
     from seedaudit.synth import DEMO, synth_study
 
-    if folder.exists() and any(folder.iterdir()):
-        raise StudyError(
-            Problem(str(folder), "is not empty", "a new or empty folder", "choose another")
-        )
+    if folder.exists() and not (folder.is_dir() and not any(folder.iterdir())):
+        found = "is not empty" if folder.is_dir() else "is a file"
+        raise StudyError(Problem(str(folder), found, "a new or empty folder", "choose another"))
     settings = replace(DEMO, **{key: value for key, value in asked.items() if value is not None})
     synth_study(folder, settings)
     click.echo(f"Synthetic study: {folder}\nNext: seedaudit run {folder / 'study.toml'}")
     return DONE
 
 
+def _ready(asked: dict[str, Any], out: Path | None, *, replace: bool) -> tuple[Any, Path]:
+    """The plan of what is asked and the folder of its result, every problem of both at once."""
+    from seedaudit.preflight import make_plan
+    from seedaudit.store import check_free
+
+    study, findings = _study(asked), Findings()
+    folder = out or study.base / study.output
+    findings.attempt(_check_writable, folder)
+    findings.attempt(partial(check_free, replace=replace), folder)
+    plan = findings.attempt(make_plan, study)
+    findings.raise_if_any()
+    return plan, folder
+
+
+def _check_writable(folder: Path) -> None:
+    """Refuse what could only fail after the work: the nearest folder that is there must let us."""
+    there = next(parent for parent in folder.absolute().parents if parent.exists())
+    if not (there.is_dir() and os.access(there, os.W_OK | os.X_OK)):
+        found = f"cannot be made in {there}, which is " + (
+            "not writable" if there.is_dir() else "a file"
+        )
+        raise StudyError(
+            Problem(f"output {folder.name}", found, "a writable folder", "choose another --out")
+        )
+
+
 def _study(asked: dict[str, Any]) -> Any:
     """The study of a study file, or of options alone."""
     from seedaudit.study import Study
 
-    path = asked.pop("study")
+    path, images = _split(asked.pop("study"))
     given = {key: value for key, value in asked.items() if value is not None}
     if path is not None:
         if given:
@@ -191,7 +247,7 @@ def _study(asked: dict[str, Any]) -> Any:
             )
         )
     content: dict[str, dict[str, Any]] = {
-        "data": {"runs": given["bold"]},
+        "data": {"runs": [given["bold"], *images] if images else given["bold"]},
         "seed": {"at": given["seed"]},
         "placements": {},
     }
@@ -228,6 +284,21 @@ def _second_interrupt_ends() -> Iterator[None]:
         signal.signal(signal.SIGINT, earlier)
 
 
+def _split(named: Sequence[Path]) -> tuple[Path | None, list[str]]:
+    """The study file, and the images that a shell made of an unquoted pattern of --bold."""
+    images = [str(path) for path in named if path.name.endswith((".nii", ".nii.gz"))]
+    others = [path for path in named if str(path) not in images]
+    if len(others) > 1:
+        names = ", ".join(map(str, others))
+        raise StudyError(Problem("command line", f"names {names}", "one study file"))
+    if others and images:
+        raise StudyError(
+            Problem(images[0], "given beside a study file", "one or the other",
+                    "put it into the study file")
+        )  # fmt: skip
+    return (others[0] if others else None), images
+
+
 def _print_warnings(warnings: Sequence[str], quiet: bool) -> None:
     if warnings and not quiet:
         click.echo(f"{len(warnings)} warning(s):", err=True)
@@ -251,6 +322,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Run the command line and return its exit code."""
     arguments = list(sys.argv[1:] if arguments is None else arguments)
     debug = "--debug" in arguments
+    # said at the end, after a command that failed, as well as in front
+    arguments = [text for text in arguments if text != "--debug"]
     try:
         code = app.main(args=arguments, prog_name="seedaudit", standalone_mode=False)
         return code if isinstance(code, int) else DONE
@@ -268,6 +341,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except (KeyboardInterrupt, click.Abort):
         _say("interrupted; the same command goes on from here")
         return INTERRUPTED
+    except BrokenPipeError:  # the reader of the output, such as `head`, has seen enough
+        sys.stdout = open(os.devnull, "w")  # noqa: SIM115 - so that closing it does not fail too
+        return DONE
     except Exception as error:
         if debug:
             traceback.print_exc()

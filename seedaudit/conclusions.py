@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -9,23 +10,39 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from seedaudit.consensus.cloud import CloudConsensus, GroupDesign, Space, conclude
+from seedaudit.consensus.cloud import (
+    CloudConsensus,
+    Controls,
+    GroupDesign,
+    Space,
+    conclude,
+)
 from seedaudit.errors import DataError, Problem
 from seedaudit.inference.group import ThresholdRule
+from seedaudit.inputs.nuisance import column_mean
 from seedaudit.plan import Plan, SeedPlan
 from seedaudit.report.words import verdict
-from seedaudit.results import SeedAudit, frozen_table, map_image, read_only
+from seedaudit.results import SeedAudit, map_image, read_only
+from seedaudit.space.spheres import cloud_exclusion
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.schedule import ParticipantRecord, Swept
+from seedaudit.tabulation import Found, summary, tables
+from seedaudit.worth import judge_claims, reach, settled_rule
+
+MOTION = "framewise_displacement"
+"""Column of the confounds that tells of motion; else the column that censors volumes."""
 
 
 @dataclass(frozen=True)
 class GroupState:
-    """What all seeds share after the pass: who is used, and the working design."""
+    """What all seeds share after the pass: who is used, the working design, and mean motion of
+    those used, in the column's unit; NaN where no table tells it.
+    """
 
     used: tuple[ParticipantRecord, ...]
     set_aside: tuple[ParticipantRecord, ...]
     design: GroupDesign
+    motion: NDArray[np.float64]
 
 
 def group_state(
@@ -55,7 +72,24 @@ def group_state(
         )
     least = n if plan.study.group.missing == "intersection" else max(p + 1, (n + 1) // 2)
     strata = plan.design.strata[[record.row for record in used]]
-    return GroupState(used, set_aside, GroupDesign(rows, contrast, strata, least))
+    motion = np.array([_mean_motion(plan, record) for record in used])
+    return GroupState(used, set_aside, GroupDesign(rows, contrast, strata, least), motion)
+
+
+def _mean_motion(plan: Plan, record: ParticipantRecord) -> float:
+    """Mean motion over a participant's runs, each weighted by its volumes."""
+    censor = None if plan.study.cleaning is None else plan.study.cleaning.censor
+    runs = plan.participants[record.row].runs
+    for column in (MOTION, *(() if censor is None else (censor.column,))):
+        means = [
+            np.nan
+            if run.confounds is None
+            else column_mean(run.confounds, column, run.header.n_volumes)
+            for run in runs
+        ]
+        if np.isfinite(means).all():
+            return float(np.average(means, weights=[run.header.n_volumes for run in runs]))
+    return float("nan")
 
 
 def conclude_seed(
@@ -67,29 +101,64 @@ def conclude_seed(
 ) -> SeedAudit:
     """Everything about the seed of that number, frozen."""
     seed = plan.seeds[number]
-    placements, kept_rows = _seen_everywhere(plan, group, number)
+    placements, kept_rows, control_rows = _seen_everywhere(plan, group, number)
     start = sum(len(other.used) for other in plan.seeds[:number])
     folds = [_of_placements(fold, start + kept_rows) for fold in swept.folds]
-    regions = plan.regions
+    controls = [fold.placements(start + control_rows) for fold in swept.folds]
+    means = np.array([record.kept[number].target_means[kept_rows] for record in group.used])
+    regions, grid = plan.regions, plan.voxels.grid
     labels = np.zeros(len(plan.voxels), np.int32) if regions is None else regions.labels
     index = np.zeros(0, int) if regions is None else regions.index
+    space = Space(plan.voxels.ijk, grid.shape, grid.voxel_sizes, seed.analysis, labels, index)
+    reported_z = _reported_maps(group, number, seed.analysis)
+    settings: dict[str, Any] = {
+        "rearrangements": plan.study.threshold.rearrangements,
+        "random_state": plan.study.placements.random_state,
+    }
+    rule, critical = settled_rule(
+        threshold_rule(plan), reported_z, group.design.matrix, group.design.contrast, **settings
+    )
     found = conclude(
         folds,
         swept.fold_sizes,
         group.design,
-        Space(plan.voxels.ijk, plan.voxels.grid.shape, seed.analysis, labels, index),
-        threshold_rule(plan),
-        np.array([record.kept[number].target_means[0] for record in group.used]),
+        space,
+        rule,
+        means[:, :, : plan.n_regions],
+        _controls(plan, seed, controls, control_rows),
         safe=plan.study.consensus.safe,
         random_state=plan.study.placements.random_state,
     )
-    tables = _tables(plan, group, number, placements, kept_rows, found)
+    shifts = placements[["dx", "dy", "dz"]].to_numpy()[seed.used[kept_rows]]
+    distance = np.linalg.norm(shifts, axis=1)
+    claims = judge_claims(
+        plan, seed, means[:, :, plan.n_regions :], distance, group.design, found, folds,
+        threshold_rule(plan), reported_z,
+    )  # fmt: skip
+    all_found = Found(
+        seed, placements, kept_rows, control_rows, found, claims,
+        reach(seed, found, shifts[1:]), means[:, 1:, : plan.n_regions], critical,
+    )  # fmt: skip
+    made = tables(plan, group, number, all_found, threshold_words(plan))
+    numbers = summary(plan, group, all_found, made, threshold_words(plan))
     return SeedAudit(
         seed.seed.name,
-        read_only(_summary(plan, group, seed, found, tables)),
-        read_only(tables),
+        read_only({**numbers, "sentence": verdict(numbers)}),
+        read_only(made),
         read_only(_maps(plan, found, labels, anatomy)),
+        found.placement_maps,
     )
+
+
+def _reported_maps(
+    group: GroupState, number: int, analysis: NDArray[np.bool_]
+) -> NDArray[np.float32] | None:
+    """Maps (n, A) of the reported placement, on the analysis voxels that everybody has."""
+    kept = [record.reported_z for record in group.used]
+    if any(maps is None for maps in kept):
+        return None
+    maps = np.array([maps[number] for maps in kept if maps is not None])
+    return np.asarray(maps[:, analysis & np.isfinite(maps).all(axis=0)])
 
 
 def threshold_rule(plan: Plan) -> ThresholdRule:
@@ -115,10 +184,10 @@ def threshold_words(plan: Plan) -> str:
 
 def _seen_everywhere(
     plan: Plan, group: GroupState, number: int
-) -> tuple[pd.DataFrame, NDArray[np.int_]]:
+) -> tuple[pd.DataFrame, NDArray[np.int_], NDArray[np.int_]]:
     """The placement table, with those set aside whose sphere has too little signal in someone.
 
-    Also the rows, among those swept for this seed, that stay.
+    Also the rows, among those swept for this seed, that stay: of the cloud, and of the controls.
     """
     seed = plan.seeds[number]
     start = sum(len(other.used) for other in plan.seeds[:number])
@@ -132,7 +201,8 @@ def _seen_everywhere(
         table.loc[row, "used"] = False
         flags = [*filter(None, str(table.loc[row, "flags"]).split(";")), "missing_in_data"]
         table.loc[row, "flags"] = ";".join(sorted(flags))
-    kept = np.flatnonzero(~low)
+    control = table["kind"].to_numpy()[seed.used] == "control"
+    kept = np.flatnonzero(~low & ~control)
     if len(kept) < 3:
         raise DataError(
             Problem(
@@ -142,7 +212,20 @@ def _seen_everywhere(
                 "look at the coverage of the runs, a smaller cloud, or a lower min_coverage",
             )
         )
-    return table, kept
+    return table, kept, np.flatnonzero(~low & control)
+
+
+def _controls(
+    plan: Plan, seed: SeedPlan, folds: Sequence[Moments], rows: NDArray[np.int_]
+) -> Controls:
+    """The control seeds of those rows, each with the voxels outside its own widened sphere."""
+    own = seed.cloud.table.iloc[seed.used[rows]]
+    keep = np.ones((len(rows), len(plan.voxels)), bool)
+    for kept, (x, y, z, radius) in zip(
+        keep, own[["x", "y", "z", "radius"]].to_numpy(dtype=float), strict=True
+    ):
+        kept[:] = ~cloud_exclusion(plan.voxels, [[x, y, z]], [radius], seed.margin)
+    return Controls(folds, keep)
 
 
 def _of_placements(moments: Moments, rows: NDArray[np.int_]) -> Moments:
@@ -150,127 +233,6 @@ def _of_placements(moments: Moments, rows: NDArray[np.int_]) -> Moments:
     if len(rows) == rows[-1] - rows[0] + 1:
         return moments.placements(slice(int(rows[0]), int(rows[-1]) + 1))
     return moments.placements(rows)
-
-
-def _tables(
-    plan: Plan,
-    group: GroupState,
-    number: int,
-    placements: pd.DataFrame,
-    kept_rows: NDArray[np.int_],
-    found: CloudConsensus,
-) -> dict[str, pd.DataFrame]:
-    seed = plan.seeds[number]
-    row_of = seed.used[kept_rows]
-    names = placements["placement"].to_numpy()[row_of]
-    distance = placements["distance"].to_numpy()[row_of]
-    head = {"seed": seed.seed.name}
-    regions = [] if plan.regions is None else list(plan.regions.names)
-    pairs = {k: v for k, v in found.pairs.items() if k not in "ab"}
-    return {
-        "placements": frozen_table("placements", dict(placements)),
-        "similarity": frozen_table(
-            "similarity",
-            {
-                **head,
-                "placement": names,
-                "distance": distance,
-                "threshold": threshold_words(plan),
-                **found.similarity,
-            },
-        ),
-        "pairs": frozen_table(
-            "pairs",
-            {
-                **head,
-                "placement_a": names[found.pairs["a"]],
-                "placement_b": names[found.pairs["b"]],
-                **pairs,
-            },
-        ),
-        "regions": frozen_table(
-            "regions", {"seed": [seed.seed.name] * len(regions), "region": regions, **found.regions}
-        ),
-        "thresholds": frozen_table("thresholds", {**head, **found.thresholds}),
-        "participants": _participants(group, number, kept_rows),
-    }
-
-
-def _participants(group: GroupState, number: int, kept_rows: NDArray[np.int_]) -> pd.DataFrame:
-    rows = []
-    for record in (*group.used, *group.set_aside):
-        row: dict[str, Any] = {
-            "participant_id": record.participant,
-            "n_runs": record.n_runs,
-            "n_volumes": record.n_volumes,
-            "n_censored": record.n_censored,
-            "residual_df": record.residual_df,
-            "n_missing_voxels": record.n_missing_voxels,
-            "median_spatial_r": np.nan,
-            "min_spatial_r": np.nan,
-            "used": record.used,
-            "reason": record.reason,
-        }
-        if record.used:
-            drawn = record.kept[number].similarity[kept_rows[1:]]
-            row["median_spatial_r"] = float(np.median(drawn))
-            row["min_spatial_r"] = float(drawn.min())
-        rows.append(row)
-    return frozen_table("participants", pd.DataFrame(rows).to_dict("series"))
-
-
-def _summary(
-    plan: Plan,
-    group: GroupState,
-    seed: SeedPlan,
-    found: CloudConsensus,
-    tables: dict[str, pd.DataFrame],
-) -> dict[str, Any]:
-    drawn = tables["similarity"].iloc[1:]
-    states = tables["regions"]["state"].value_counts()
-    numbers: dict[str, Any] = {
-        "name": seed.seed.name,
-        "at_mm": [round(float(value), 3) for value in seed.at],
-        "radius_mm": seed.seed.radius,
-        "within_mm": round(seed.within, 3),
-        "draw": plan.study.placements.draw,
-        "exclude_margin_mm": round(float(seed.margin), 3),
-        "n_participants": len(group.used),
-        "n_placements_used": len(drawn),
-        "n_placements_set_aside": int((~tables["placements"]["used"]).sum()),
-        "n_analysis_voxels": int(found.voxels.sum()),
-        "n_reported_positive": int(tables["similarity"]["n_positive"].iloc[0]),
-        "n_reported_negative": int(tables["similarity"]["n_negative"].iloc[0]),
-        "threshold": threshold_words(plan),
-        "statistic": "t" if np.isfinite(found.df) else "z",
-        "df": found.df if np.isfinite(found.df) else None,
-        "stability": found.stability[0],
-        "stability_low": found.stability[1],
-        "stability_high": found.stability[2],
-        "fleiss_kappa": found.kappa,
-        "safe_share": _share(found.maps["safe"] != 0),
-        "contested_share": _share(found.maps["contested"]),
-        "spatial_r_median": float(drawn["spatial_r"].median()),
-    }
-    for tail in ("positive", "negative"):
-        overlap = drawn[f"dice_{tail}"].dropna()
-        numbers[f"dice_{tail}_median"] = float(overlap.median()) if len(overlap) else None
-        numbers[f"dice_{tail}_p05"] = float(overlap.quantile(0.05)) if len(overlap) else None
-        numbers[f"dice_{tail}_undefined"] = len(drawn) - len(overlap)
-    numbers["regions"] = {str(state): int(count) for state, count in states.items()}
-    numbers = {key: _json_number(value) for key, value in numbers.items()}
-    return {**numbers, "sentence": verdict(numbers)}
-
-
-def _share(chosen: NDArray[Any]) -> float:
-    return float(np.mean(chosen != 0)) if len(chosen) else float("nan")
-
-
-def _json_number(value: Any) -> Any:
-    """Numbers rounded to six digits for reading; a missing number is null in JSON."""
-    if isinstance(value, float):
-        return float(f"{value:.6g}") if np.isfinite(value) else None
-    return value
 
 
 def _maps(

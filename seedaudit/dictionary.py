@@ -40,6 +40,114 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
         "spatial_r": ("spatial Pearson correlation of the effect maps", "-1 to 1"),
         "concordance": ("Lin's concordance of the effect maps", "-1 to 1"),
         "rms_difference": ("root mean square difference of the effect maps", Z),
+        "ceiling_relative": (
+            "spatial correlation of the placement's map in one half of the participants with the "
+            "reported map in the other half, over that of the reported map with itself",
+            "ratio",
+        ),
+    },
+    "controls": {
+        "seed": ("name of the seed", ""),
+        "placement": ("number of the control seed, which is unrelated to the reported one", ""),
+        "distance": ("distance from the reported centre", MM),
+        "n_positive": ("voxels of the control's map in class +", COUNT),
+        "n_negative": ("voxels of the control's map in class -", COUNT),
+        "dice_positive": (
+            "Dice with the reported map, class +, outside the control's own sphere and margin",
+            SHARE,
+        ),
+        "dice_negative": ("the same for class -", SHARE),
+        "spatial_r": ("spatial Pearson correlation with the reported effect map there", "-1 to 1"),
+    },
+    "ceiling": {
+        "seed": ("name of the seed", ""),
+        "region": ("name of the region; n/a for the whole map", ""),
+        "measure": ("spatial_r, ac1 (Gwet's AC1 of two maps), dice_positive or dice_negative", ""),
+        "n_splits": ("half-splits of the participants behind it", COUNT),
+        "same": ("ceiling: the reported map in one half with itself in the other half", ""),
+        "same_low": ("lower end of its 95 % delete-a-fold jackknife interval", ""),
+        "same_high": ("upper end of that interval", ""),
+        "shifted": (
+            "the reported map in one half with a drawn placement's map in the other half, mean "
+            "over placements",
+            "",
+        ),
+        "shifted_low": ("lower end of its 95 % interval", ""),
+        "shifted_high": ("upper end of that interval", ""),
+        "relative": (
+            "ceiling-relative stability, shifted over same: 1 where moving the seed costs nothing "
+            "beyond sampling; n/a where the ceiling is below 0.05",
+            "ratio",
+        ),
+        "relative_low": ("lower end of its 95 % interval", "ratio"),
+        "relative_high": ("upper end of that interval", "ratio"),
+    },
+    "decay": {
+        "seed": ("name of the seed", ""),
+        "measure": ("dice_positive, dice_negative, spatial_r or ceiling_relative", ""),
+        "direction": (
+            "all, or the axis sector of the shifts: left, right, anterior, posterior, superior, "
+            "inferior",
+            "",
+        ),
+        "distance": ("length of the shift; the last row is the farthest placement", MM),
+        "fitted": ("falling isotonic fit of the similarity with the reported placement", ""),
+        "n": ("placements behind the fit", COUNT),
+        "ceiling": ("similarity of the reported placement to itself across halves", ""),
+        "floor": ("median similarity of the control seeds to the reported placement", ""),
+        "geometry": (
+            "spatial correlation that overlap and smoothness alone would give two spheres at that "
+            "distance",
+            "",
+        ),
+    },
+    "tolerance": {
+        "seed": ("name of the seed", ""),
+        "measure": ("dice_positive, dice_negative or ceiling_relative", ""),
+        "target": ("similarity that the fit must keep", ""),
+        "direction": ("all, or an axis sector, as in the table of decay", ""),
+        "tolerance": ("distance at which the fit falls below the target", MM),
+        "censored": ("true: it does not within the cloud; read `tolerance` as at least", ""),
+        "n": ("placements behind the fit", COUNT),
+        "farthest": ("farthest of them", MM),
+    },
+    "claims": {
+        "seed": ("name of the seed", ""),
+        "claim": ("name of the claim", ""),
+        "target": ("region, or coordinate and radius in mm", ""),
+        "direction": ("positive, negative, or the contrast that is claimed to be above 0", ""),
+        "n_voxels": ("analysis voxels of the target", COUNT),
+        "reported_effect": ("effect on the mean over the target as reported", Z),
+        "reported_low": ("lower end of its 95 % bootstrap interval over participants", Z),
+        "reported_high": ("upper end of that interval", Z),
+        "reported_t": ("its test statistic", "t"),
+        "passes_reported": ("true: passes the rule at the reported placement", ""),
+        "share_passing": (
+            "share of drawn placements where the mean over the target reaches, in the claimed "
+            "direction, what the rule asks of a voxel of that placement's map",
+            SHARE,
+        ),
+        "first_failure_mm": ("smallest shift at which it does not; n/a when it always does", MM),
+        "effect_min": ("smallest effect over drawn placements", Z),
+        "effect_max": ("largest effect over drawn placements", Z),
+        "largest_difference": (
+            "effect minus that as reported, where the claim weakens most (among the placements "
+            "where it fails, if any, and of these among the significant ones)",
+            Z,
+        ),
+        "difference_p": (
+            "family-wise p of that paired difference over all drawn placements, by the maximum "
+            "statistic over sign flips or permutations of the participants",
+            "",
+        ),
+        "difference_p_holm": ("the same, adjusted for all claims about the seed (Holm)", ""),
+        "equivalent": (
+            "true: two one-sided tests put the difference within the smallest effect of interest "
+            "at the safe share of drawn placements",
+            "",
+        ),
+        "verdict": ("holds, breaks or open", ""),
+        "note": ("what else must be said", ""),
     },
     "pairs": {
         "seed": ("name of the seed", ""),
@@ -74,8 +182,17 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
         "stability": ("stability score: Gwet's AC1 over the region's voxels", "at most 1"),
         "stability_low": ("lower end of its 95 % delete-a-fold jackknife interval", ""),
         "stability_high": ("upper end of that interval", ""),
-        "ceiling": ("stability of the reported placement across halves of participants", ""),
-        "ceiling_relative": ("cross-half similarity, shifted over same", ""),
+        "ceiling": (
+            "Gwet's AC1 of the reported map in one half of the participants with itself in the "
+            "other half",
+            "at most 1",
+        ),
+        "ceiling_relative": ("the same with shifted maps in the other half, over it", "ratio"),
+        "placement_share": (
+            "share of the variance of the region's effect that comes from where the seed was put, "
+            "the rest from who was scanned",
+            SHARE,
+        ),
         "state": (
             "held (connected as reported), silent (never connected), lost, gained, contested, "
             "or n/a without analysis voxels",
@@ -100,12 +217,22 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
         "n_censored": ("censored volumes", COUNT),
         "residual_df": ("residual degrees of freedom of all runs", COUNT),
         "n_missing_voxels": ("mask voxels without a varying signal in every run", COUNT),
+        "mean_motion": (
+            "mean over the volumes of framewise_displacement or, without it, of the column that "
+            "censors volumes; n/a without either",
+            "as in the confounds table",
+        ),
         "median_spatial_r": (
             "median over drawn placements of the spatial correlation with the reported "
             "placement's map, in this participant",
             "-1 to 1",
         ),
         "min_spatial_r": ("smallest of these", "-1 to 1"),
+        "influence": (
+            "relative change of the mean (over regions) spread of the group effect over "
+            "placements when the participant comes in; above 0, it adds instability",
+            "ratio",
+        ),
         "used": ("false: set aside", ""),
         "reason": ("why set aside", ""),
     },
@@ -130,6 +257,12 @@ MAPS: dict[str, tuple[str, str]] = {
     "region_labels": ("label of the network region of each mask voxel, 0 for none", "label"),
     "anatomy": ("picture under the figures, 0 to 1", ""),
 }
+
+PLACEMENT_COMPONENTS = (
+    "effect maps of all used placements in little space: volume 0 is their mean, the others are "
+    "components; values are 8-bit codes from 1 to 255, 0 outside the analysis voxels, and a map is "
+    "the sum over volumes of (code - 128) * step * weight, where the weight of the mean is 1"
+)
 
 INTEGER_MAPS = ("contested", "analysis_mask")
 """Stored as uint8; all others as float32, missing voxels as NaN."""

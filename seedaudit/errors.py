@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import PurePath
+from typing import TypeVar
+
+Result = TypeVar("Result")
 
 
 @dataclass(frozen=True)
@@ -66,3 +70,47 @@ class DataError(SeedAuditError):
     """The data are wrong."""
 
     exit_code = 3
+
+
+class Findings:
+    """Problems, warnings and choices, gathered while the plan is made."""
+
+    def __init__(self) -> None:
+        self.problems: list[tuple[type[SeedAuditError], Problem]] = []
+        self.warnings: list[str] = []
+        self.choices: list[str] = []
+
+    def attempt(self, step: Callable[..., Result], *args: object) -> Result | None:
+        """Run one step; its problems are kept, so that the next step is checked as well."""
+        try:
+            return step(*args)
+        except SeedAuditError as error:
+            self.problems += [(type(error), problem) for problem in error.problems]
+            return None
+
+    def wrong(self, problem: Problem, kind: type[SeedAuditError] = DataError) -> None:
+        """Add one problem."""
+        self.problems.append((kind, problem))
+
+    def raise_if_any(self) -> None:
+        """Raise all problems as one error: of the study if any of them is, else of the data."""
+        if self.problems:
+            kinds = {kind for kind, _ in self.problems}
+            kind = StudyError if StudyError in kinds else DataError
+            raise kind(*_together(problem for _, problem in self.problems))
+
+
+def _together(problems: Iterable[Problem]) -> list[Problem]:
+    """Each cause once: what is met on several ways, and what is wrong alike with many files."""
+    places: dict[tuple[str, str, str], dict[str, None]] = {}
+    for problem in problems:
+        key = (problem.found, problem.allowed, problem.remedy)
+        places.setdefault(key, {})[problem.where] = None
+    return [Problem(listed(list(where)), *rest) for rest, where in places.items()]
+
+
+def listed(places: Sequence[str], most: int = 10) -> str:
+    """The first place in full, more of them by their names, and how many are left."""
+    names = [places[0], *(PurePath(place).name for place in places[1:most])]
+    more = f" and {len(places) - most} more" if len(places) > most else ""
+    return ", ".join(names) + more

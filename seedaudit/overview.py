@@ -54,7 +54,7 @@ def overview(plan: Plan, needs: Forecast) -> dict[str, Any]:
 def _seed(plan: Plan, number: int) -> dict[str, Any]:
     seed = plan.seeds[number]
     table = seed.cloud.table
-    drawn = table[table["kind"] != "reported"]
+    drawn = table[table["kind"].isin(["jitter", "lattice"])]
     return {
         "name": seed.seed.name,
         "at_mm": [round(float(value), 2) for value in seed.at],

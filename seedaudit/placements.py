@@ -10,14 +10,19 @@ from math import isfinite, sqrt
 import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike, NDArray
-from scipy.sparse import csr_array
+from scipy.sparse import csr_array, vstack
 
 from seedaudit.errors import DataError, Problem, StudyError
 from seedaudit.shifts import Shifts, draw_shifts, is_length
 from seedaudit.space.grid import Grid, VoxelSet
 from seedaudit.space.spheres import sphere_coverage, sphere_weights
 
-__all__ = ["Cloud", "build_cloud", "draw_shifts", "uncertainty_sd"]
+__all__ = ["Cloud", "add_controls", "build_cloud", "draw_shifts", "uncertainty_sd"]
+
+CONTROL_DISTANCE = 30.0
+"""Least distance of a control seed from the reported one, mm."""
+
+_CONTROL_STREAM = 1  # keeps the controls apart from the shifts, which use the random state itself
 
 
 @dataclass(frozen=True, eq=False)
@@ -27,8 +32,8 @@ class Cloud:
     Parameters
     ----------
     table : DataFrame, N rows
-        seed, placement (0 = reported), kind (reported, jitter, lattice), x, y, z, dx, dy, dz,
-        distance, radius (mm), n_voxels, coverage (0 to 1), used, flags (words joined by ``;``).
+        seed, placement (0 = reported), kind (reported, jitter, lattice, control), x, y, z, dx, dy,
+        dz, distance, radius (mm), n_voxels, coverage (0 to 1), used, flags (words joined by ``;``).
     weights : csr_array (N, V)
         Sphere weights of every row, unused ones included, not normalised.
     """
@@ -149,6 +154,69 @@ def build_cloud(
     )
     _require_usable(seed, cloud.table, min_coverage)
     return cloud
+
+
+def add_controls(
+    cloud: Cloud,
+    voxels: VoxelSet,
+    count: int,
+    *,
+    inside: VoxelSet | None = None,
+    apart: float = 0.0,
+    random_state: int = 0,
+    snap: bool = False,
+    weighting: str = "hard",
+    min_coverage: float = 0.5,
+    midline: bool = True,
+) -> Cloud:
+    """Add control seeds, which have nothing to do with the reported one, as further rows.
+
+    Centres are uniform in the voxels of `inside` (or of the mask), the radius is that of the
+    reported seed, and only spheres that are covered enough are taken.
+
+    Parameters
+    ----------
+    cloud : Cloud
+    voxels : VoxelSet
+        The seed mask.
+    count : int
+        Control seeds wanted, 0 or more; fewer are added where there is no room for more.
+    inside : VoxelSet, optional
+    apart : float
+        Least distance from the reported centre, mm, where it is more than `CONTROL_DISTANCE`.
+    random_state : int
+    snap, weighting, min_coverage, midline
+        As in `build_cloud`.
+    """
+    reported = cloud.table.iloc[0]
+    centre = reported[["x", "y", "z"]].to_numpy(np.float64)
+    area = voxels if inside is None else inside
+    rng = np.random.default_rng([random_state, _CONTROL_STREAM])
+    axes, reverse = area.grid.canonical_axes
+    # steps along the axes nearest to R, A and S, so that the storage order has no say
+    steps = area.grid.affine[:3, list(axes)] * np.where(reverse, -1, 1)
+    shifts = area.xyz + rng.uniform(-0.5, 0.5, (len(area), 3)) @ steps.T - centre
+    if snap:
+        shifts = _snapped(shifts, voxels.grid)
+    far = np.linalg.norm(shifts, axis=1) >= max(apart, CONTROL_DISTANCE)
+    shifts = shifts[far & (voxels.rows_at(voxels.grid.voxel_of(centre + shifts)) >= 0)]
+    shifts = rng.permutation(shifts)
+    chosen: list[NDArray[np.float64]] = []
+    # a few more than are missing at a time: most centres are covered well enough
+    while len(chosen) < count and len(shifts):
+        trial, shifts = shifts[: 2 * count], shifts[2 * count :]
+        radius = float(reported["radius"])
+        coverage, _ = sphere_coverage(voxels, centre + trial, radius, weighting)
+        chosen += list(trial[coverage >= min_coverage])
+    if count == 0 or not chosen:
+        return cloud
+    added = np.array(chosen[:count])
+    seed, radii = str(reported["seed"]), np.full(len(added), float(reported["radius"]))
+    more = _measure(seed, centre, added, radii, voxels, weighting, min_coverage, midline, "control")
+    more.table["placement"] += len(cloud.table)
+    more.table["kind"] = "control"
+    table = pd.concat([cloud.table, more.table], ignore_index=True)
+    return Cloud(table, csr_array(vstack([cloud.weights, more.weights])))
 
 
 def _measure(

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
+from seedaudit.inputs.claims import Claim
 from seedaudit.inputs.design import Design
 from seedaudit.inputs.header import RunHeader
 from seedaudit.inputs.regions import Regions
@@ -28,6 +29,14 @@ CUT_OFF_SD = 3.0
 
 
 @dataclass(frozen=True)
+class PlannedClaim:
+    """A claim, and the rows of the analysis voxels that its target holds."""
+
+    claim: Claim
+    members: NDArray[np.int_]
+
+
+@dataclass(frozen=True)
 class SeedPlan:
     """One seed's cloud and the voxels it is judged on.
 
@@ -45,7 +54,9 @@ class SeedPlan:
     margin : float
         Widening of the spheres that no analysis uses, mm.
     analysis : (V,) bool
-        Mask voxels outside all spheres of the cloud widened by the margin.
+        Mask voxels outside all spheres of the cloud widened by the margin; those of control seeds
+        are no part of the cloud.
+    claims : tuple of PlannedClaim
     """
 
     seed: Seed
@@ -55,6 +66,7 @@ class SeedPlan:
     sd: float | None
     margin: float
     analysis: NDArray[np.bool_]
+    claims: tuple[PlannedClaim, ...] = ()
 
     @property
     def used(self) -> NDArray[np.int_]:
@@ -102,7 +114,7 @@ class Plan:
         clouds, start = [], 0
         for seed in self.seeds:
             rows = slice(start, start + len(seed.used))
-            clouds.append(CloudTargets(rows, seed.analysis, self._targets(seed.analysis)))
+            clouds.append(CloudTargets(rows, seed.analysis, self._targets(seed)))
             start = rows.stop
         return SweepTask(
             self.voxels,
@@ -113,13 +125,23 @@ class Plan:
             min_coverage=self.study.placements.min_coverage,
             set_aside=self.study.data.on_bad_run == "set-aside",
             single=len(self.participants) == 1,
+            keep_reported=self.study.threshold.rule == "fwe",
         )
 
-    def _targets(self, analysis: NDArray[np.bool_]) -> sparse.csr_array:
-        if self.regions is None:
-            return sparse.csr_array((len(self.voxels), 0))
-        members = self.regions.labels[:, None] == self.regions.index[None, :]
-        return sparse.csr_array((members & analysis[:, None]).astype(np.float64))
+    @property
+    def n_regions(self) -> int:
+        """Network regions; the first targets of every cloud."""
+        return 0 if self.regions is None else len(self.regions.index)
+
+    def _targets(self, seed: SeedPlan) -> sparse.csr_array:
+        """Voxels by target: the regions, then the targets of the seed's claims."""
+        members = np.zeros((len(self.voxels), self.n_regions + len(seed.claims)))
+        if self.regions is not None:
+            within = self.regions.labels[:, None] == self.regions.index[None, :]
+            members[:, : self.n_regions] = within & seed.analysis[:, None]
+        for column, claim in enumerate(seed.claims, self.n_regions):
+            members[claim.members, column] = 1
+        return sparse.csr_array(members)
 
 
 def cloud_size(asked: Placements) -> tuple[float, float | None]:

@@ -6,71 +6,39 @@ can start.
 
 from __future__ import annotations
 
-from collections import Counter
-from collections.abc import Callable, Iterable
-from dataclasses import replace
-from typing import TypeVar
+import warnings
+from collections.abc import Sequence
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
-from seedaudit.errors import DataError, Problem, SeedAuditError, StudyError
+from seedaudit.errors import DataError, Findings, Problem, StudyError
 from seedaudit.inputs.design import build_design
-from seedaudit.inputs.discover import Run, find_runs
-from seedaudit.inputs.header import RunHeader, read_header, read_image_header
+from seedaudit.inputs.discover import find_runs
+from seedaudit.inputs.header import RunHeader
 from seedaudit.inputs.regions import Regions, read_regions
 from seedaudit.inputs.volumes import first_volume, read_mask
-from seedaudit.placements import build_cloud
+from seedaudit.participants import (
+    cleaning_recipe,
+    note_headers,
+    note_people,
+    sort_participants,
+)
+from seedaudit.placements import add_controls, build_cloud
 from seedaudit.plan import Plan, SeedPlan, cloud_size
-from seedaudit.space.grid import Grid, VoxelSet
+from seedaudit.space.grid import VoxelSet
 from seedaudit.space.spheres import cloud_exclusion
 from seedaudit.space.talairach import talairach_to_mni
-from seedaudit.study import Seed, Study
+from seedaudit.study import Placements, Seed, Study
 from seedaudit.sweep.schedule import (
-    LEAST_RESIDUAL_DF,
-    CleaningRecipe,
     ParticipantRecord,
     ParticipantTask,
-    RunTask,
-    run_basis,
 )
-
-Result = TypeVar("Result")
+from seedaudit.targets import plan_claims
 
 WHOLE_FIELD = 0.95
 """A presence mask that fills more of the image than this has found no background."""
-
-FEW_DF = 30
-"""Residual degrees of freedom of a run below which its correlations are noisy enough to say so."""
-
-
-class Findings:
-    """Problems, warnings and choices, gathered while the plan is made."""
-
-    def __init__(self) -> None:
-        self.problems: list[tuple[type[SeedAuditError], Problem]] = []
-        self.warnings: list[str] = []
-        self.choices: list[str] = []
-
-    def attempt(self, step: Callable[..., Result], *args: object) -> Result | None:
-        """Run one step; its problems are kept, so that the next step is checked as well."""
-        try:
-            return step(*args)
-        except SeedAuditError as error:
-            self.problems += [(type(error), problem) for problem in error.problems]
-            return None
-
-    def wrong(self, problem: Problem, kind: type[SeedAuditError] = DataError) -> None:
-        """Add one problem."""
-        self.problems.append((kind, problem))
-
-    def raise_if_any(self) -> None:
-        """Raise all problems as one error: of the study if any of them is, else of the data."""
-        if self.problems:
-            kinds = {kind for kind, _ in self.problems}
-            kind = StudyError if StudyError in kinds else DataError
-            # one cause may be met on several ways
-            raise kind(*dict.fromkeys(problem for _, problem in self.problems))
 
 
 def make_plan(study: Study) -> Plan:
@@ -86,28 +54,38 @@ def make_plan(study: Study) -> Plan:
     runs = findings.attempt(find_runs, data.runs, study.base, data.bids, data.select)
     findings.raise_if_any()
     assert runs is not None
-    cleaning = _recipe(study)
-    participants, set_aside = _participants(study, runs, cleaning, findings)
+    cleaning = cleaning_recipe(study)
+    participants, set_aside = sort_participants(study, runs, cleaning, findings)
+    # where a bad run stops the audit, the model is judged with everyone in it
+    left_out = {record.participant for record in set_aside}
+    people = [name for name in dict.fromkeys(run.participant for run in runs)
+              if name not in left_out]  # fmt: skip
+    table = study.path(study.group.table) if study.group.table else None
+    design = None
+    if people:
+        design = findings.attempt(
+            build_design, people, table, study.group.model, study.group.effect
+        )
+    else:
+        findings.wrong(Problem("data", "no participant is left", "at least one"))
     if not participants:
-        findings.wrong(Problem("data", "no participant is left", "at least one", "mend the runs"))
-        findings.raise_if_any()
+        _raise_if_any(findings, set_aside)
     header = participants[0].runs[0].header
-    _note_headers(study, participants, findings)
-    voxels = findings.attempt(_mask_voxels, study, header.grid, participants, findings)
-    design = findings.attempt(
-        build_design,
-        [p.participant for p in participants],
-        study.path(study.group.table) if study.group.table else None,
-        study.group.model,
-        study.group.effect,
-    )
+    note_headers(study, participants, findings)
+    if table is not None:
+        findings.attempt(note_people, table, runs, findings)
+    voxels = findings.attempt(_mask_voxels, study, header, participants, findings)
     regions, seeds = None, []
     if voxels is not None:
         regions = findings.attempt(_regions, study, voxels, findings)
         inside = findings.attempt(_inside, study)
         made = (findings.attempt(_seed_plan, study, seed, voxels, inside) for seed in study.seed)
         seeds = [seed for seed in made if seed is not None]
-    findings.raise_if_any()
+    if voxels is not None and design is not None and (regions or not study.data.regions):
+        asserted = (study, design, regions, seeds, voxels, findings)
+        seeds = findings.attempt(plan_claims, *asserted) or seeds
+    _check_fwe(study, len(people), findings)
+    _raise_if_any(findings, set_aside)
     assert voxels is not None
     assert design is not None
     for seed in seeds:
@@ -118,108 +96,26 @@ def make_plan(study: Study) -> Plan:
     )  # fmt: skip
 
 
-def _recipe(study: Study) -> CleaningRecipe:
-    cleaning, repetition_time = study.cleaning, study.data.repetition_time
-    if cleaning is None:
-        return CleaningRecipe(repetition_time=repetition_time)
-    censor = cleaning.censor
-    return CleaningRecipe(
-        cleaning.drift,
-        cleaning.band,
-        cleaning.confounds,
-        None if censor is None else (censor.column, censor.above, censor.before, censor.after),
-        cleaning.smooth,
-        repetition_time,
-    )
-
-
-def _participants(
-    study: Study, runs: Iterable[Run], cleaning: CleaningRecipe, findings: Findings
-) -> tuple[list[ParticipantTask], list[ParticipantRecord]]:
-    """Participants whose runs have headers, grids and confounds in order, and those set aside."""
-    by_participant: dict[str, list[Run]] = {}
-    for run in runs:
-        by_participant.setdefault(run.participant, []).append(run)
-    grid = study.data.grid
-    declared = None if grid is None else findings.attempt(read_image_header, study.path(grid))
-    tasks: list[ParticipantTask] = []
-    set_aside: list[ParticipantRecord] = []
-    first: RunHeader | None = None
-    for participant, own in by_participant.items():
-        trial, good = Findings(), []
-        for run in own:
-            task = trial.attempt(_run_task, run, cleaning, first, declared)
-            if task is not None:
-                good.append(task)
-                first = first or task.header
-        if not trial.problems:
-            tasks.append(ParticipantTask(participant, len(tasks), tuple(good)))
-        elif study.data.on_bad_run == "set-aside":
-            reason = "; ".join(problem.brief for _, problem in trial.problems)
-            set_aside.append(
-                ParticipantRecord(participant, -1, len(own), used=False, reason=reason)
-            )
-            findings.warnings.append(f"participant {participant} is set aside: {reason}")
-        else:
-            findings.problems += trial.problems
-    return tasks, set_aside
-
-
-def _run_task(
-    run: Run, cleaning: CleaningRecipe, first: RunHeader | None, declared: RunHeader | None
-) -> RunTask:
-    header = read_header(run.bold, declared)
-    task = RunTask(header, run.confounds, run.mask)
-    problems = []
-    if first is not None and not header.grid.matches(first.grid):
-        problems.append(
-            Problem(
-                run.bold.name,
-                f"is on another grid than {first.path.name}: {header.grid.difference(first.grid)}",
-                "all runs on one grid",
-                "resample the runs to one grid before the audit",
-            )
-        )
-    try:
-        basis, _ = run_basis(task, cleaning)
-        task = replace(task, nuisance_rank=basis.shape[1])
-        if task.residual_df < LEAST_RESIDUAL_DF:
-            problems.append(_too_few(task))
-    except SeedAuditError as error:
-        problems += list(error.problems)
-    if run.mask is not None:
-        try:
-            read_mask(run.mask, header.grid)
-        except DataError as error:
-            problems += list(error.problems)
-    if problems:
-        raise DataError(*problems)
-    return task
-
-
-def _too_few(task: RunTask) -> Problem:
-    return Problem(
-        task.header.path.name,
-        f"{task.header.n_volumes} volumes and {task.nuisance_rank} independent nuisance columns "
-        f"leave {task.residual_df} residual degrees of freedom",
-        f"at least {LEAST_RESIDUAL_DF}",
-        "fewer confounds, a wider pass band, less censoring, or longer runs",
-    )
-
-
 def _mask_voxels(
-    study: Study, grid: Grid, participants: list[ParticipantTask], findings: Findings
+    study: Study, header: RunHeader, participants: list[ParticipantTask], findings: Findings
 ) -> VoxelSet:
     if study.data.mask is not None:
-        mask, _ = read_mask(study.path(study.data.mask), grid)
+        mask, _ = read_mask(study.path(study.data.mask), header.grid, header.path.name)
     else:
         mask = _presence(participants, findings)
         findings.choices.append(
             f"no mask was given: {int(mask.sum())} voxels present in the first volume of every run"
         )
     if not mask.any():
-        raise DataError(Problem("mask", "holds no voxel", "at least one voxel above 0"))
-    return VoxelSet.from_mask(grid, mask)
+        raise DataError(
+            Problem(
+                "data",
+                "no voxel is present in the first volume of every run",
+                "a mask, or runs that overlap",
+                "give a `mask` in the section [data]",
+            )
+        )
+    return VoxelSet.from_mask(header.grid, mask)
 
 
 def _presence(participants: list[ParticipantTask], findings: Findings) -> NDArray[np.bool_]:
@@ -238,7 +134,9 @@ def _presence(participants: list[ParticipantTask], findings: Findings) -> NDArra
         affine = headers[0].grid.affine
         for volume in volumes:
             image = nib.Nifti1Image(np.nan_to_num(volume), affine)
-            mask &= compute_epi_mask(image, ensure_finite=True).get_fdata() > 0
+            with warnings.catch_warnings():
+                warnings.simplefilter("ignore")  # an empty mask is a problem of its own below
+                mask &= compute_epi_mask(image, ensure_finite=True).get_fdata() > 0
         findings.choices.append("the images have no empty background: cut by intensity")
     return mask
 
@@ -298,45 +196,29 @@ def _seed_plan(study: Study, seed: Seed, voxels: VoxelSet, inside: VoxelSet | No
                 "a smaller cloud, radius or margin, or a larger mask",
             )
         )
+    cloud = add_controls(
+        cloud,
+        voxels,
+        asked.controls,
+        inside=inside,
+        apart=within + 2 * float(used["radius"].max()) + margin,
+        random_state=asked.random_state,
+        snap=asked.snap,
+        weighting=asked.weighting,
+        min_coverage=asked.min_coverage,
+        midline=seed.space != "native",
+    )
     return SeedPlan(seed, at, cloud, within, sd, margin, ~spheres)
 
 
-def _note_headers(study: Study, participants: list[ParticipantTask], findings: Findings) -> None:
-    headers = [run.header for participant in participants for run in participant.runs]
-    for text, names in _by_text(headers).items():
-        others = f" (and {len(names) - 1} more runs)" if len(names) > 1 else ""
-        findings.warnings.append(f"{names[0]}{others}: {text}")
-    runs = [run for participant in participants for run in participant.runs]
-    least = min(runs, key=lambda run: run.residual_df)
-    if least.residual_df < FEW_DF:
-        findings.warnings.append(
-            f"{least.header.path.name}: only {least.residual_df} residual degrees of freedom are "
-            "left after cleaning; its correlations are noisy"
-        )
-    times = Counter(h.repetition_time for h in headers)
-    if study.data.repetition_time is None and len(times) > 1:
-        listed = ", ".join(f"{time} s ({n} runs)" for time, n in times.items())
-        findings.warnings.append(f"the runs differ in repetition time: {listed}")
-    if any(seed.space != "native" for seed in study.seed):
-        scanner = [h.path.name for h in headers if h.space_code == 1]
-        if scanner:
-            findings.warnings.append(
-                f"{scanner[0]}: the header says scanner space, but the seed is given in a template "
-                "space; the coordinates mean little unless the images are in that space "
-                f"({len(scanner)} runs)"
-            )
-    findings.choices.append(
-        f"the space of the images is taken from the header (code {headers[0].space_code})"
-    )
-
-
-def _by_text(headers: Iterable[RunHeader]) -> dict[str, list[str]]:
-    """The files that each warning of a header is about: one cause often meets every run."""
-    found: dict[str, list[str]] = {}
-    for header in headers:
-        for text in header.warnings:
-            found.setdefault(text, []).append(header.path.name)
-    return found
+def _raise_if_any(findings: Findings, set_aside: Sequence[ParticipantRecord]) -> None:
+    """Raise all problems, with whom the model may miss beside them."""
+    if findings.problems and set_aside:
+        reasons = ", ".join(f"{record.participant} ({record.reason})" for record in set_aside)
+        found = f"{len(set_aside)} set aside: {reasons}"
+        remedy = "mend these runs if the model needs them"
+        findings.wrong(Problem("participants", found, remedy=remedy))
+    findings.raise_if_any()
 
 
 def _note_seed(plan: SeedPlan, regions: Regions | None, study: Study, findings: Findings) -> None:
@@ -346,12 +228,14 @@ def _note_seed(plan: SeedPlan, regions: Regions | None, study: Study, findings: 
         findings.choices.append(
             f"seed {name}: Talairach ({there}) is MNI ({here}) by Lancaster et al. 2007"
         )
+    controls = table["kind"] == "control"
     dropped = int((~table["used"]).sum())
     if dropped:
         findings.warnings.append(
-            f"seed {name}: {dropped} of {len(table) - 1} placements are set aside, less than "
-            f"{study.placements.min_coverage:.0%} of their sphere lies in the mask"
+            f"seed {name}: {dropped} of {int((~controls).sum()) - 1} placements are set aside, less "
+            f"than {study.placements.min_coverage:.0%} of their sphere lies in the mask"
         )
+    _note_controls(name, table[controls], study.placements, findings)
     reported_flags = table["flags"].iloc[0]
     if reported_flags:
         findings.warnings.append(
@@ -364,3 +248,38 @@ def _note_seed(plan: SeedPlan, regions: Regions | None, study: Study, findings: 
             findings.warnings.append(
                 f"seed {name}: no analysis voxel in region {', '.join(empty)}; reported as n/a"
             )
+
+
+def _note_controls(
+    name: str, controls: pd.DataFrame, asked: Placements, findings: Findings
+) -> None:
+    if len(controls):
+        area = "the mask" if asked.inside is None else "the `inside` mask"
+        findings.choices.append(
+            f"seed {name}: {len(controls)} control seeds were drawn at random in {area}, "
+            f"{controls['distance'].min():.0f} mm or more away"
+        )
+    if len(controls) < asked.controls:
+        findings.warnings.append(
+            f"seed {name}: room for {len(controls)} of {asked.controls} control seeds far enough "
+            "away; the floor rests on these" + ("" if len(controls) else " (there is none)")
+        )
+
+
+def _check_fwe(study: Study, n: int, findings: Findings) -> None:
+    """Whether a family-wise rule can be met by rearranging the participants."""
+    threshold = study.threshold
+    assert threshold.level is not None
+    if threshold.rule != "fwe":
+        return
+    least = 0.5 ** (n - 1)
+    if least > threshold.level:
+        found = f"flipping the signs of {n} participant(s) gives no p below {least:.2g}"
+        allowed = f"participants enough for level {threshold.level:g}"
+        findings.wrong(Problem("threshold.rule fwe", found, allowed, "another rule"), StudyError)
+    if study.group.missing == "counts":
+        found = (
+            'cannot go with missing = "counts": participants cannot be exchanged where some lack'
+        )
+        remedy = 'leave `missing` at "intersection", or take another rule'
+        findings.wrong(Problem("threshold.rule fwe", found, "", remedy), StudyError)

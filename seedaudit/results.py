@@ -13,6 +13,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from seedaudit.consensus.lowrank import LowRank
 from seedaudit.dictionary import COLUMNS, INTEGER_MAPS, MAPS
 
 if TYPE_CHECKING:
@@ -38,12 +39,16 @@ class SeedAudit:
         placements, similarity, pairs, regions, thresholds, participants.
     maps : mapping of str to Nifti1Image
         With read-only data, on the grid of the runs.
+    placement_maps : LowRank, optional
+        Effect maps of the used placements, in the order of the table of similarities, over the
+        analysis voxels in the order of a `VoxelSet`; the explorer moves the seed with them.
     """
 
     name: str
     summary: Mapping[str, Any]
     tables: Mapping[str, pd.DataFrame]
     maps: Mapping[str, nib.Nifti1Image]
+    placement_maps: LowRank | None = None
 
     def table(self, name: str) -> pd.DataFrame:
         """A copy of one table."""

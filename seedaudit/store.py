@@ -15,9 +15,11 @@ import numpy as np
 import pandas as pd
 
 from seedaudit._version import __version__
-from seedaudit.dictionary import COLUMNS, MAPS
+from seedaudit.consensus.lowrank import LowRank
+from seedaudit.dictionary import COLUMNS, MAPS, PLACEMENT_COMPONENTS
 from seedaudit.errors import DataError, Problem, StudyError
 from seedaudit.results import SCHEMA, SIGNIFICANT_DIGITS, Audit, SeedAudit, read_only
+from seedaudit.space.grid import Grid, VoxelSet
 
 WORDS = (
     "seed",
@@ -29,10 +31,18 @@ WORDS = (
     "rule",
     "participant_id",
     "reason",
+    "measure",
+    "direction",
+    "claim",
+    "target",
+    "verdict",
+    "note",
 )
 """Columns that hold text even where every cell looks like a number or is empty."""
 
 Extra = Callable[[Audit, Path], None]
+
+_PLACEMENT_MAPS = "placement_components"
 
 
 def check_free(folder: Path, *, replace: bool) -> None:
@@ -181,6 +191,44 @@ def _write(audit: Audit, folder: Path) -> None:
                     "At": seed.summary["at_mm"],
                 },
             )
+        if seed.placement_maps is not None:
+            _write_placement_maps(seed, own / "maps")
+
+
+def _write_placement_maps(seed: SeedAudit, folder: Path) -> None:
+    kept, mask = seed.placement_maps, seed.maps["analysis_mask"]
+    assert kept is not None
+    voxels = _voxels_of(mask)
+    codes = np.zeros((*mask.shape, len(kept.codes)), np.uint8)
+    codes[tuple(voxels.ijk.T)] = (kept.codes.T.astype(np.int16) + 128).astype(np.uint8)
+    header = mask.header.copy()
+    header["descrip"] = b"mean and components of the effect maps of all placements"
+    nib.save(nib.Nifti1Image(codes, mask.affine, header), folder / f"{_PLACEMENT_MAPS}.nii.gz")
+    described = {
+        "Description": PLACEMENT_COMPONENTS,
+        "Units": "Fisher z",
+        "Placements": seed.tables["similarity"]["placement"].tolist(),
+        "Steps": kept.steps.tolist(),
+        "LargestErrors": kept.errors.tolist(),
+        "Weights": kept.weights.tolist(),
+    }
+    _write_json(folder / f"{_PLACEMENT_MAPS}.json", described)
+
+
+def _read_placement_maps(folder: Path, mask: nib.Nifti1Image) -> LowRank | None:
+    if not (folder / f"{_PLACEMENT_MAPS}.json").exists():
+        return None
+    told = json.loads((folder / f"{_PLACEMENT_MAPS}.json").read_text(encoding="utf-8"))
+    stored = nib.Nifti1Image.from_filename(folder / f"{_PLACEMENT_MAPS}.nii.gz")
+    inside = np.asarray(stored.dataobj)[tuple(_voxels_of(mask).ijk.T)].T
+    codes = np.ascontiguousarray(inside.astype(np.int16) - 128, dtype=np.int8)
+    steps, errors = np.array(told["Steps"]), np.array(told["LargestErrors"])
+    weights = np.array(told["Weights"]).reshape(-1, len(codes) - 1)
+    return LowRank(codes, steps, weights, errors)
+
+
+def _voxels_of(mask: nib.Nifti1Image) -> VoxelSet:
+    return VoxelSet.from_mask(Grid(mask.shape, mask.affine), np.asarray(mask.dataobj) > 0)
 
 
 def write_table(path: Path, table: pd.DataFrame) -> None:
@@ -270,4 +318,5 @@ def _load_seed(folder: Path, summary: dict[str, Any]) -> SeedAudit:
         data = np.array(stored.dataobj, dtype=stored.get_data_dtype())
         data.setflags(write=False)
         maps[name] = nib.Nifti1Image(data, stored.affine, stored.header)
-    return SeedAudit(summary["name"], read_only(summary), read_only(tables), read_only(maps))
+    kept = _read_placement_maps(folder / "maps", maps["analysis_mask"])
+    return SeedAudit(summary["name"], read_only(summary), read_only(tables), read_only(maps), kept)

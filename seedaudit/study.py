@@ -28,7 +28,7 @@ from seedaudit.study_problems import problems_of
 PUBLISHED_REGIONS = ("dosenbach2010",)
 SAMPLE_NAME = r"^[A-Za-z0-9][A-Za-z0-9_-]*$"
 
-Rule = Literal["p", "fdr", "bonferroni", "t", "effect", "density"]
+Rule = Literal["p", "fdr", "bonferroni", "fwe", "t", "effect", "density"]
 Share = Field(gt=0, lt=1)
 
 
@@ -137,6 +137,8 @@ class Placements(Section):
     """Smallest share of a sphere inside the mask."""
     uncertainty: dict[str, float] | None = None
     """Standard deviations in mm that make up the placement error, in place of `within`."""
+    controls: int = Field(default=20, ge=0, le=1000)
+    """Unrelated seeds at least 30 mm away (in `inside`, if given), for the floor."""
 
     @field_validator("distances", "radii")
     @classmethod
@@ -187,7 +189,9 @@ class Threshold(Section):
 
     rule: Rule = "fdr"
     level: float | None = Field(default=None, gt=0)
-    """Defaults: p 0.001; fdr and bonferroni 0.05; t 3; effect 0.2; density 0.1 (a share)."""
+    """Defaults: p 0.001; fdr, bonferroni and fwe 0.05; t 3; effect 0.2; density 0.1 (a share)."""
+    rearrangements: int = Field(default=5000, ge=100, le=1_000_000)
+    """`fwe`, and the paired test of claims: sign flips or permutations of the participants."""
     scale: Literal["z", "r"] = "z"
     """`effect`: on Fisher z or on the correlation."""
     per_tail: bool = False
@@ -198,10 +202,10 @@ class Threshold(Section):
 
     @model_validator(mode="after")
     def _level_fits_the_rule(self) -> Self:
-        usual = {"p": 0.001, "fdr": 0.05, "bonferroni": 0.05, "t": 3.0, "effect": 0.2}
+        usual = {"p": 0.001, "fdr": 0.05, "bonferroni": 0.05, "fwe": 0.05, "t": 3.0, "effect": 0.2}
         if self.level is None:
             object.__setattr__(self, "level", usual.get(self.rule, 0.1))
-        elif self.rule in ("p", "fdr", "bonferroni", "density") and self.level >= 1:
+        elif self.rule in ("p", "fdr", "bonferroni", "fwe", "density") and self.level >= 1:
             raise ValueError(
                 f"`level` = {self.level:g} of rule {self.rule} must be a share: above 0, below 1"
             )

@@ -19,7 +19,11 @@ from seedaudit.consensus.agreement import (
     placement_to_sampling,
     safe_map,
 )
+from seedaudit.consensus.ceiling import Ceiling, ceiling
 from seedaudit.consensus.chance import fleiss_kappa, gwet_ac1
+from seedaudit.consensus.components import placement_share
+from seedaudit.consensus.floor import control_similarity, fold_residuals, residual_smoothness
+from seedaudit.consensus.lowrank import LowRank, low_rank
 from seedaudit.consensus.overlap import (
     correlation_pairs,
     density_sweep,
@@ -28,7 +32,7 @@ from seedaudit.consensus.overlap import (
     spatial_similarity,
     value_sweep,
 )
-from seedaudit.consensus.regional import region_table, regional_stability
+from seedaudit.consensus.regional import region_rows, region_table, regional_stability
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
 from seedaudit.inference.glm import solve_model
 from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier, group_maps
@@ -37,6 +41,8 @@ from seedaudit.sweep.moments import Moments, merged
 DENSITIES = np.arange(1, 51) / 100
 VALUE_CUTS = np.arange(1, 21) / 20
 """Fisher z"""
+MAP_TOLERANCE, MAP_BYTES = 0.02, 4_500_000
+"""Placement maps are kept with this largest error, Fisher z, as far as the space allows."""
 
 Table = dict[str, NDArray[Any]]
 
@@ -63,15 +69,27 @@ class GroupDesign:
 
 @dataclass(frozen=True)
 class Space:
-    """Where the voxels are: indices `ijk` (V, 3) in a grid of `shape`, the `analysis` voxels
-    (V,) of the cloud, and the region `labels` (V,), 0 for none, of the regions `index` (K,).
+    """Where the voxels are: indices `ijk` (V, 3) in a grid of `shape` with voxel edges of `steps`
+    (3,) mm, the `analysis` voxels (V,) of the cloud, and the region `labels` (V,), 0 for none, of
+    the regions `index` (K,).
     """
 
     ijk: NDArray[np.int32]
     shape: tuple[int, int, int]
+    steps: NDArray[np.float64]
     analysis: NDArray[np.bool_]
     labels: NDArray[np.int32]
     index: NDArray[np.int_]
+
+
+@dataclass(frozen=True)
+class Controls:
+    """Control seeds: `folds` of their moments, and the voxels `keep` (C, V) that each is compared
+    on, which its own widened sphere is no part of.
+    """
+
+    folds: Sequence[Moments]
+    keep: NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -91,6 +109,14 @@ class CloudConsensus:
         Fleiss' kappa.
     df : float
         Residual degrees of freedom (the smallest, where voxels differ); infinite for scores.
+    group : GroupMaps
+        What all of this was drawn from.
+    ceiling : Ceiling or None
+        None where no two halves of the participants can be compared.
+    controls : dict of columns
+        Similarity of the control seeds to the reported placement, a row for each.
+    fwhm : float
+        Smoothness of the residuals, mm; NaN for one participant.
     """
 
     voxels: NDArray[np.bool_]
@@ -102,6 +128,11 @@ class CloudConsensus:
     stability: tuple[float, float, float]
     kappa: float
     df: float
+    placement_maps: LowRank
+    group: GroupMaps
+    ceiling: Ceiling | None
+    controls: Table
+    fwhm: float
 
 
 def conclude(
@@ -111,6 +142,7 @@ def conclude(
     space: Space,
     rule: ThresholdRule,
     region_means: NDArray[np.float64],
+    controls: Controls,
     *,
     safe: float = 0.95,
     random_state: int = 0,
@@ -126,8 +158,9 @@ def conclude(
     design : GroupDesign
     space : Space
     rule : ThresholdRule
-    region_means : (n, K)
-        Mean z of each region in each participant at the reported placement.
+    region_means : (n, N, K)
+        Mean z of each region in each participant at every placement.
+    controls : Controls
     safe : float
         Share of placements.
     random_state : int
@@ -144,6 +177,8 @@ def conclude(
     whole, by_region = _without_each_fold(
         kept, folds, fold_sizes, design, voxels, classes_of, labels, space.index
     )
+    complete = np.flatnonzero(voxels)[kept.count == len(design.matrix)]
+    del kept
     counts = class_counts(maps.classes[1:])
     stability = gwet_ac1(counts)
     sizes = [size for size in fold_sizes if size]
@@ -153,8 +188,10 @@ def conclude(
     )
     effects = region_effects(maps.effects, labels, space.index)
     interval = bootstrap_interval(
-        design.matrix, region_means, design.contrast, design.strata, random_state=random_state
-    )
+        design.matrix, region_means[:, 0], design.contrast, design.strata,
+        random_state=random_state,
+    )  # fmt: skip
+    top = _ceiling(folds, fold_sizes, design, space, rule, complete, controls, random_state)
     return CloudConsensus(
         voxels,
         _maps(maps, counts, safe),
@@ -164,11 +201,70 @@ def conclude(
         region_table(
             labels, space.index, maps.classes[1:], maps.classes[0], effects[1:], effects[0],
             *interval, *regional, safe,
+            ceiling=None if top is None else top.same["ac1"][0, 1:],
+            ceiling_relative=None if top is None else top.relative["ac1"][0, 1:],
+            placement_share=placement_share(region_means[:, 1:], design.matrix, design.contrast),
         ),
         (float(stability), float(low), float(high)),
         float(fleiss_kappa(counts)),
         float(np.nanmin(maps.df)) if voxels.any() else float("nan"),
+        low_rank(maps.effects, tolerance=MAP_TOLERANCE, most_bytes=MAP_BYTES),
+        maps,
+        top,
+        _controls(controls, design, maps, voxels, classes_of),
+        _smoothness(folds, fold_sizes, design, space, complete),
     )  # fmt: skip
+
+
+def _ceiling(
+    folds: Sequence[Moments],
+    fold_sizes: Sequence[int],
+    design: GroupDesign,
+    space: Space,
+    rule: ThresholdRule,
+    complete: NDArray[np.int_],
+    controls: Controls,
+    random_state: int,
+) -> Ceiling | None:
+    """Halves of the participants, on the voxels that everybody has."""
+    return ceiling(
+        folds,
+        fold_sizes,
+        design.contrast,
+        region_rows(space.labels[complete], space.index),
+        len(space.index),
+        classifier(rule, space.ijk[complete], space.shape),
+        complete,
+        controls=controls.folds,
+        control_keep=controls.keep[:, complete],
+        random_state=random_state,
+    )
+
+
+def _controls(
+    controls: Controls,
+    design: GroupDesign,
+    maps: GroupMaps,
+    voxels: NDArray[np.bool_],
+    classes_of: Classifier,
+) -> Table:
+    moments = merged(fold.voxels(voxels) for fold in controls.folds)
+    keep = controls.keep[:, voxels]
+    return control_similarity(moments, design.contrast, design.least_count, maps, keep, classes_of)
+
+
+def _smoothness(
+    folds: Sequence[Moments],
+    fold_sizes: Sequence[int],
+    design: GroupDesign,
+    space: Space,
+    complete: NDArray[np.int_],
+) -> float:
+    used = [fold for fold, size in zip(folds, fold_sizes, strict=True) if size]
+    if len(design.matrix) <= design.matrix.shape[1] or len(used) < 2 or not len(complete):
+        return float("nan")
+    residuals = fold_residuals(used, complete)
+    return residual_smoothness(residuals, space.ijk[complete], space.shape, space.steps)
 
 
 def region_effects(

@@ -36,7 +36,7 @@ def regional_stability(labels: IntArray, index: IntArray, classes: Classes) -> F
     (K,) array
         At most 1, negative values kept; NaN for a region without voxels and for N < 2.
     """
-    return _stability(_region_rows(labels, index), len(index), classes)[1]
+    return _stability(region_rows(labels, index), len(index), classes)[1]
 
 
 def region_calls(positive: IntArray, negative: IntArray, n_voxels: IntArray) -> Classes:
@@ -105,6 +105,7 @@ def region_table(
     *,
     ceiling: FloatArray | None = None,
     ceiling_relative: FloatArray | None = None,
+    placement_share: FloatArray | None = None,
 ) -> dict[str, NDArray[Any]]:
     """One row per region: the reported result, its spread over placements, and its state.
 
@@ -126,7 +127,7 @@ def region_table(
         Interval of the stability score.
     safe : float
         Share of placements, above 0.5 and at most 1.
-    ceiling, ceiling_relative : (K,) arrays, optional
+    ceiling, ceiling_relative, placement_share : (K,) arrays, optional
         NaN when not given.
 
     Returns
@@ -135,7 +136,7 @@ def region_table(
         The columns of the region table from ``index`` to ``state``. Numbers are NaN for a region
         without voxels, but for the counts ``n_voxels`` (0) and ``..._undefined`` (N).
     """
-    rows = _region_rows(labels, index)
+    rows = region_rows(labels, index)
     n_regions = len(index)
     joint = _joint_counts(rows, n_regions, reported_classes, classes)
     reported = joint[0].sum(axis=-1)
@@ -158,6 +159,7 @@ def region_table(
         "stability_high": stability_high,
         "ceiling": missing if ceiling is None else ceiling,
         "ceiling_relative": missing if ceiling_relative is None else ceiling_relative,
+        "placement_share": missing if placement_share is None else placement_share,
     }
     for name, column in table.items():
         if column.dtype.kind == "f":
@@ -168,8 +170,19 @@ def region_table(
     return {"index": np.asarray(index), "n_voxels": n_voxels, **table, "state": state}
 
 
-def _region_rows(labels: IntArray, index: IntArray) -> NDArray[np.intp]:
-    """Position of every voxel's label in `index`, -1 for none, (V,)."""
+def region_rows(labels: IntArray, index: IntArray) -> NDArray[np.intp]:
+    """Position of every voxel's label in `index`, -1 for none.
+
+    Parameters
+    ----------
+    labels : (V,) int array
+        0 for none.
+    index : (K,) int array
+
+    Returns
+    -------
+    (V,) int array
+    """
     if len(index) == 0:
         return np.full(len(labels), -1, dtype=np.intp)
     order = np.argsort(index)

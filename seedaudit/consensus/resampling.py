@@ -26,26 +26,33 @@ _ROUNDING = 1e-13
 
 
 def delete_fold_interval(
-    full: ArrayLike, without: ArrayLike, fold_sizes: ArrayLike, level: float = 0.95
+    full: ArrayLike,
+    without: ArrayLike,
+    fold_sizes: ArrayLike,
+    level: float = 0.95,
+    *,
+    most: float = 1.0,
 ) -> tuple[FloatArray, FloatArray]:
     """Jackknife interval of a statistic from its values with one fold of participants left out.
 
     Parameters
     ----------
     full : (...) array
-        Statistic of all participants, at most 1.
+        Statistic of all participants, at most `most`.
     without : (G, ...) array
         Statistic without fold g.
     fold_sizes : (G,) array
         Participants in fold g, 1 or more.
     level : float
         Confidence level in (0, 1).
+    most : float
+        Largest value that the statistic can have.
 
     Returns
     -------
     low, high : (...) arrays
         Centred on `full`, from the t distribution with G - 1 degrees of freedom, `high` at most
-        1; NaN with fewer than two folds.
+        `most`; NaN with fewer than two folds.
 
     Notes
     -----
@@ -65,7 +72,7 @@ def delete_fold_interval(
     mean = n_folds * full - ((1 - 1 / h) * without).sum(axis=0)
     error = np.sqrt(((pseudo - mean) ** 2 / (h - 1)).mean(axis=0))
     half = stats.t.ppf((1 + level) / 2, n_folds - 1) * error
-    return full - half, np.minimum(full + half, 1.0)
+    return full - half, np.minimum(full + half, most)
 
 
 def bootstrap_interval(

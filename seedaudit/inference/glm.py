@@ -121,3 +121,32 @@ def estimate(moments: Moments, model: Model, placement: int) -> Estimate:
     statistic = np.full_like(effect, np.nan)
     np.divide(effect, standard_error, out=statistic, where=standard_error > 0)
     return Estimate(effect, standard_error, statistic)
+
+
+def uniform_estimate(moments: Moments, n: int, contrast: NDArray[np.float64]) -> Estimate | None:
+    """Estimate the contrast of the first placement where every participant has every voxel.
+
+    Parameters
+    ----------
+    moments : Moments
+        Of n participants; X'X is the same at every voxel.
+    n : int
+    contrast : (p,)
+
+    Returns
+    -------
+    Estimate or None
+        None where no residual degree of freedom is left or the design is singular.
+    """
+    xtx, xtz = moments.xtx[:, :, 0], moments.xtz[:, 0]
+    p = len(contrast)
+    if n <= p or 1 / np.linalg.cond(xtx) <= SINGULAR:
+        return None
+    weights = np.linalg.solve(xtx, contrast)
+    effect = weights @ xtz
+    explained = np.einsum("iv,iv->v", xtz, np.linalg.solve(xtx, xtz))
+    residual = np.maximum(moments.zz[0] - explained, 0)
+    standard_error = np.sqrt(residual / (n - p) * (weights @ contrast))
+    statistic = np.full_like(effect, np.nan)
+    np.divide(effect, standard_error, out=statistic, where=standard_error > 0)
+    return Estimate(effect, standard_error, statistic)

@@ -3,13 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from seedaudit.inference.glm import estimate, solve_model
-from seedaudit.inference.threshold import classify, drop_small_clusters
+from seedaudit.inference.threshold import (
+    classify,
+    critical_value,
+    density_cuts,
+    drop_small_clusters,
+)
 from seedaudit.sweep.moments import Moments
 
 
@@ -20,7 +26,8 @@ class ThresholdRule:
     Parameters
     ----------
     rule : str
-        p, fdr, bonferroni, t, effect or density.
+        p, fdr, bonferroni, t, effect or density; fwe must be settled as p first, which takes the
+        participants' own maps.
     level : float
     scale : str
         `z` or `r`, for rule effect.
@@ -38,6 +45,10 @@ class ThresholdRule:
     per_tail: bool = False
     min_voxels: int = 1
     neighbours: int = 26
+
+    def replaced(self, rule: str, level: float) -> ThresholdRule:
+        """The same with another rule and level."""
+        return replace(self, rule=rule, level=level)
 
 
 @dataclass(frozen=True)
@@ -104,3 +115,36 @@ def group_maps(
         if i == 0:
             standard_error = found.standard_error
     return GroupMaps(effects, statistics, classes, standard_error, model.df)
+
+
+def critical_values(
+    statistics: NDArray[np.floating[Any]],
+    df: NDArray[np.float64],
+    rule: ThresholdRule,
+    sign: int,
+) -> NDArray[np.float64]:
+    """What the rule asks of the statistic of one more voxel in each map.
+
+    Parameters
+    ----------
+    statistics : (N, V)
+    df : (V,)
+        The further voxel has every participant, so the most degrees of freedom of any.
+    rule : ThresholdRule
+        Not of rule effect, which asks nothing of the statistic.
+    sign : int
+        +1 or -1: the tail of the further voxel, where the rule takes a share of each tail.
+
+    Returns
+    -------
+    (N,) array
+        Of |statistic|; inf where no voxel passes.
+    """
+    if rule.rule == "density" and rule.per_tail:
+        cuts = [density_cuts(sign * row, [rule.level])[0] for row in statistics]
+        # no class against the sign, however far the share reaches
+        return np.maximum(cuts, np.finfo(np.float64).tiny)
+    # the critical value falls with the degrees of freedom
+    return np.array(
+        [np.nanmin(critical_value(row, df, rule.rule, rule.level)) for row in statistics]
+    )

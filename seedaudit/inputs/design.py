@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
 from itertools import product
 from pathlib import Path
 
@@ -39,6 +39,8 @@ class Design:
         The contrast as the user wrote it.
     strata : (n,) int
         Equal for rows that share the levels of every factor of the model.
+    terms : mapping of str to (p,) array
+        The names that an effect may be written with, and the weights they stand for.
     """
 
     matrix: NDArray[np.float64]
@@ -46,6 +48,7 @@ class Design:
     contrast: NDArray[np.float64]
     effect: str
     strata: NDArray[np.int64]
+    terms: Mapping[str, NDArray[np.float64]] = field(default_factory=dict)
 
 
 def build_design(
@@ -96,7 +99,7 @@ def build_design(
                 )
             )
         effect = names[0]
-    return Design(values, names, parse_effect(effect, terms), effect, _strata(data))
+    return Design(values, names, parse_effect(effect, terms), effect, _strata(data), terms)
 
 
 def _model_columns(model: str) -> tuple[set[str], set[str]]:
@@ -194,9 +197,15 @@ def _rows(
 ) -> tuple[list[int], list[Problem]]:
     """Table row of each participant, and what is wrong with the column of names."""
     ids = [str(name or "").removeprefix("sub-") for name in column]
+    repeated = {key: str(name) for key, name in zip(ids, column, strict=True) if ids.count(key) > 1}
     problems = [
-        Problem(where, f"participant {name!r} stands there {ids.count(name)} times", "once")
-        for name in sorted({name for name in ids if ids.count(name) > 1})
+        Problem(
+            where,
+            f"participant {name!r} stands there {ids.count(key)} times",
+            "one row for each",
+            "delete the others",
+        )
+        for key, name in sorted(repeated.items())
     ]
     row_of = {name: row for row, name in enumerate(ids)}
     wanted = [name.removeprefix("sub-") for name in participants]
@@ -205,7 +214,7 @@ def _rows(
             where,
             f"no row for participant {full!r}",
             "a row for everyone who has a run",
-            nearest(full, [str(name) for name in column]),
+            "add the row, or leave the runs out",
         )
         for full, name in zip(participants, wanted, strict=True)
         if name not in row_of

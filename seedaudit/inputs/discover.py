@@ -102,7 +102,10 @@ def _from_table(path: Path) -> tuple[list[Run], list[Problem]]:
     found, problems = [], []
     for number, row in enumerate(table.to_dict("records"), start=1):
         gaps = [name for name in ("participant_id", "bold") if row[name] is None]
-        problems += [Problem(where, f"row {number}: no {name}") for name in gaps]
+        problems += [
+            Problem(where, f"row {number}: no {name}", "a value in every row", "fill it")
+            for name in gaps
+        ]
         if gaps:
             continue
         files = {name: path.parent / row[name] for name in ("confounds", "mask") if row.get(name)}
@@ -118,13 +121,14 @@ def _matching(pattern: str, base: Path) -> list[Path]:
     if not images:
         found = f"{pattern!r} matches no .nii or .nii.gz file"
         found += f" ({len(paths)} other files)" if paths else ""
-        raise StudyError(Problem("data.runs", found, "a table (.tsv) or a file pattern"))
+        remedy = "correct the pattern; it starts from the folder of the study file"
+        raise StudyError(Problem("data.runs", found, "a table (.tsv) or a file pattern", remedy))
     return images
 
 
 def _bids_files(folder: Path, select: Mapping[str, str]) -> list[Path]:
     if not folder.is_dir():
-        raise StudyError(Problem("data.bids", f"{folder} is no folder"))
+        raise StudyError(Problem("data.bids", f"{folder} is no folder", "a BIDS derivative folder"))
     paths = get_bids_files(
         glob.escape(str(folder)), file_tag="bold", file_type="nii*", modality_folder="func"
     )
@@ -209,7 +213,12 @@ def _repeated(runs: Sequence[Run]) -> list[Problem]:
         by_file.setdefault(run.bold.resolve(), []).append(f"{run.participant} {run.run}".strip())
         by_label.setdefault((run.participant, run.run), []).append(run.bold.name)
     problems = [
-        Problem(str(path), f"listed {len(owners)} times ({', '.join(owners)})", "once")
+        Problem(
+            str(path),
+            f"listed {len(owners)} times ({', '.join(owners)})",
+            "each file once",
+            "correct the path of one of them",
+        )
         for path, owners in by_file.items()
         if len(owners) > 1
     ]

@@ -90,15 +90,19 @@ def _judged(path: Path, *, single: bool, declared: RunHeader | None = None) -> R
     n_volumes = dims[4] if dims[0] > 3 else 1
     if not 3 <= dims[0] <= 7 or min(dims[1 : dims[0] + 1]) < 1:
         allowed = "three axes in space and one of volumes, every length at least 1"
-        problems.append(Problem(where, f"dim is {dims}", allowed))
+        remedy = "write the image again; its header is damaged"
+        problems.append(Problem(where, f"dim is {dims}", allowed, remedy))
     elif any(size > 1 for size in dims[5 : dims[0] + 1]):
         found = f"an image with {dims[0]} axes ({dims[1 : dims[0] + 1]})"
-        problems.append(Problem(where, found, "three axes in space and one of volumes"))
+        remedy = "split the image into one 4-D run each"
+        problems.append(Problem(where, found, "three axes in space and one of volumes", remedy))
     elif single and n_volumes > 1:
-        problems.append(Problem(where, f"a 4-D image ({n_volumes} volumes)", "a 3-D image"))
+        found, remedy = f"a 4-D image ({n_volumes} volumes)", "give one volume of it"
+        problems.append(Problem(where, found, "a 3-D image", remedy))
     elif not single and n_volumes < 2:
         allowed = "a 4-D run of at least two volumes"
-        problems.append(Problem(where, "a 3-D image (one volume)", allowed))
+        remedy = "give the whole series, all volumes in one file"
+        problems.append(Problem(where, "a 3-D image (one volume)", allowed, remedy))
     dtype = _dtype(header, where, problems)
     if declared is not None and max(int(header["sform_code"]), int(header["qform_code"])) <= 0:
         affine, space_code = _declared(declared, shape, where, problems, warnings)
@@ -130,6 +134,8 @@ def _nifti_header(path: Path) -> tuple[nib.Nifti1Header, bool]:
     block = bytearray(540)
     with opened(path) as stream:
         del block[stream.fill(block) :]
+    if not block:
+        raise DataError(Problem(str(path), "an empty file", "NIfTI", "copy the file again"))
     sizes = {int.from_bytes(block[:4], "little"), int.from_bytes(block[:4], "big")}
     for size, (header_class, magic) in _FORMATS.items():
         at = slice(344, 348) if size == 348 else slice(4, 12)
@@ -154,7 +160,8 @@ def _dtype(header: nib.Nifti1Header, where: str, problems: list[Problem]) -> np.
         dtype, name = np.dtype("V1"), "unknown"
     if dtype.kind not in "iuf" or dtype.itemsize > 8:
         found = f"values of datatype {code} ({name})"
-        problems.append(Problem(where, found, "integers of 8 to 64 bits, float32 or float64"))
+        allowed = "integers of 8 to 64 bits, float32 or float64"
+        problems.append(Problem(where, found, allowed, "store the image in one of these types"))
     return dtype
 
 

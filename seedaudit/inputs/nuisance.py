@@ -207,7 +207,9 @@ def _confounds_table(path: Path, n_volumes: int) -> pd.DataFrame:
     table = read_table(path)
     if len(table) != n_volumes:
         found = f"{len(table)} rows, but the run has {n_volumes} volumes"
-        raise DataError(Problem(str(path), found, "one row per volume below the header row"))
+        allowed = "one row per volume below the header row"
+        remedy = "take the table of this very run; were volumes dropped from one of the two?"
+        raise DataError(Problem(str(path), found, allowed, remedy))
     return table
 
 
@@ -239,3 +241,24 @@ def _numbers(cells: pd.Series, path: str | Path, problems: list[Problem]) -> NDA
 def _check_rows(what: str, rows: int, n_volumes: int) -> None:
     if rows != n_volumes:
         raise DataError(Problem(what, f"{rows} rows", f"{n_volumes}, the number of volumes"))
+
+
+def column_mean(path: str | Path, column: str, n_volumes: int) -> float:
+    """Mean of one confound column over the volumes that have a value; NaN without the column.
+
+    Parameters
+    ----------
+    path : path of the confounds table
+    column : str
+    n_volumes : int
+
+    Raises
+    ------
+    DataError
+        When the table has another number of rows.
+    """
+    table = _confounds_table(Path(path), n_volumes)
+    if column not in table.columns:
+        return float("nan")
+    values = pd.to_numeric(table[column], errors="coerce").to_numpy(np.float64)
+    return float(np.nanmean(values)) if np.isfinite(values).any() else float("nan")

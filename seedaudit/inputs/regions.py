@@ -67,7 +67,12 @@ def read_regions(source: str | Path, voxels: VoxelSet) -> Regions:
     empty = [n for n, i in zip(names, index, strict=True) if not (labels == i).any()]
     if len(empty) == len(names):
         raise DataError(
-            Problem(str(source), "no region has a voxel in the analysis mask", remedy="check space")
+            Problem(
+                str(source),
+                "no region has a voxel in the analysis mask",
+                "regions that overlap with the mask",
+                "check that regions and runs are in one space",
+            )
         )
     if empty:
         notes.append(f"regions without a voxel in the analysis mask: {', '.join(empty)}")

@@ -11,6 +11,7 @@ import pandas as pd
 from seedaudit.errors import DataError, Problem
 
 _MISSING = ("n/a", "N/A", "NA", "nan", "NaN", "")
+_PARSER = "Error tokenizing data. C error: "  # what pandas puts before its reason
 
 
 def read_table(path: Path) -> pd.DataFrame:
@@ -39,8 +40,10 @@ def read_table(path: Path) -> pd.DataFrame:
     except FileNotFoundError:
         raise DataError(Problem(str(path), "no such file")) from None
     except (OSError, ValueError) as error:  # pandas' own errors are ValueErrors
+        reason = getattr(error, "strerror", None) or " ".join(str(error).split())
+        found = f"cannot be read ({reason.removeprefix(_PARSER)})"
         allowed = "a tab-separated table in UTF-8, every row as long as the first"
-        raise DataError(Problem(str(path), f"cannot be read ({error})", allowed)) from error
+        raise DataError(Problem(str(path), found, allowed, "mend the table")) from error
     cells = cells.fillna("").map(str.strip)
     names = cells.iloc[0].tolist()
     repeated = sorted({name for name in names if names.count(name) > 1})

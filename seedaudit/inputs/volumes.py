@@ -144,7 +144,9 @@ def read_image(path: str | Path) -> tuple[NDArray[np.float64], Grid]:
     return values, header.grid
 
 
-def read_mask(path: str | Path, grid: Grid | None = None) -> tuple[NDArray[np.bool_], Grid]:
+def read_mask(
+    path: str | Path, grid: Grid | None = None, beside: str = "the audit's"
+) -> tuple[NDArray[np.bool_], Grid]:
     """Read a mask: 0 or not finite outside, one other value inside.
 
     Parameters
@@ -152,6 +154,8 @@ def read_mask(path: str | Path, grid: Grid | None = None) -> tuple[NDArray[np.bo
     path : path of a 3-D image
     grid : Grid, optional
         The grid the mask must lie on.
+    beside : str
+        Whose grid that is, such as the name of a run, for the message.
 
     Raises
     ------
@@ -161,7 +165,7 @@ def read_mask(path: str | Path, grid: Grid | None = None) -> tuple[NDArray[np.bo
     """
     values, own = read_image(path)
     if grid is not None:
-        _check_grid(path, own, grid)
+        _check_grid(path, own, grid, beside)
     mask = np.isfinite(values) & (values != 0)
     inside = np.unique(values[mask])
     if inside.size != 1:
@@ -174,13 +178,13 @@ def read_mask(path: str | Path, grid: Grid | None = None) -> tuple[NDArray[np.bo
     return mask, own
 
 
-def _check_grid(path: str | Path, own: Grid, wanted: Grid) -> None:
+def _check_grid(path: str | Path, own: Grid, wanted: Grid, beside: str = "the audit's") -> None:
     difference = own.difference(wanted)
     if difference:
         raise DataError(
             Problem(
                 str(path),
-                f"another grid than the audit's: {difference}",
+                f"another grid than {beside}: {difference}",
                 "every run and mask on one grid",
                 "resample this image before the audit",
             )

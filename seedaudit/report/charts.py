@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from seedaudit.report.style import (
     INK,
     LINE,
+    MM_PER_INCH,
     PALE,
     SOFT,
     TITLE,
@@ -211,7 +212,7 @@ def _stabilities(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_]) -> None:
     _not_available(ax, rows[~np.isfinite(score)])
 
 
-_POINT = {
+_POINT: dict[str, Any] = {
     "linestyle": "none",
     "marker": "o",
     "markersize": 3.6,
@@ -226,7 +227,8 @@ def _limits(ax: Axes, values: FloatArray) -> None:
     low, high = known.min(), known.max()
     pad = 0.04 * (high - low) or 0.1
     ax.set_xlim(low - pad, high + pad)
-    ax.xaxis.set_major_locator(MaxNLocator(5))
+    room = ax.bbox.width / ax.figure.dpi * MM_PER_INCH
+    ax.xaxis.set_major_locator(MaxNLocator(int(np.clip(room / 9, 1, 5)), steps=[1, 2, 5, 10]))
 
 
 def _not_available(ax: Axes, rows: NDArray[np.int_]) -> None:
@@ -244,7 +246,7 @@ def _region_legend(table: pd.DataFrame) -> list[Artist]:
         Patch(facecolor=PALE, label="range over placements"),
     ]
     if (table["state"] == "silent").any():
-        hollow = _POINT | {"markerfacecolor": "white"}
+        hollow: dict[str, Any] = _POINT | {"markerfacecolor": "white"}
         handles.append(Line2D([], [], **hollow, label="score of a silent region"))
     if table[["reported_low", "stability_low"]].notna().any(axis=None):
         line = Line2D([], [], color=INK, linewidth=0.9, label="95 % interval over participants")

@@ -17,6 +17,7 @@ from seedaudit.report.slices import (
     DIRECTIONS,
     Plane,
     body_frame,
+    cloud_rows,
     contested_places,
     excluded_zone,
     near_plane,
@@ -66,9 +67,9 @@ def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
 
 def _placements(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
     along, up, _ = DIRECTIONS[plane.kind]
-    table = seed.tables["placements"]
+    table = cloud_rows(seed)
     centres = table[["x", "y", "z"]].to_numpy(dtype=float)[:, [along, up]]
-    drawn = table["kind"].to_numpy() != "reported"
+    drawn = table["kind"].isin(["jitter", "lattice"]).to_numpy()
     used = table["used"].to_numpy(dtype=bool)
     shrink, many = crowding(len(table))
     for shown, style in ((drawn & ~used, _ASIDE), (drawn & used, _USED)):
@@ -112,7 +113,12 @@ _REPORTED: dict[str, Any] = {
 def _cloud_legend(seed: SeedAudit) -> list[Artist]:
     at, radius = seed.summary["at_mm"], seed.summary["radius_mm"]
     used, aside = seed.summary["n_placements_used"], seed.summary["n_placements_set_aside"]
-    circle = {"marker": "o", "markersize": 6, "markerfacecolor": "none", "markeredgecolor": INK}
+    circle: dict[str, Any] = {
+        "marker": "o",
+        "markersize": 6,
+        "markerfacecolor": "none",
+        "markeredgecolor": INK,
+    }
     handles: list[Artist] = [
         Line2D([], [], **_REPORTED, label=f"reported centre {point(at)} mm"),
         Line2D([], [], linestyle="none", **circle, label=f"its sphere, radius {number(radius)} mm"),
@@ -193,7 +199,7 @@ def _frame(ax: Axes, plane: Plane) -> None:
     ax.set_yticks([])
     for spine in ax.spines.values():
         spine.set_color(PALE)
-    plate = {"facecolor": "white", "edgecolor": "none", "alpha": 0.8, "pad": 0.6}
+    plate: dict[str, Any] = {"facecolor": "white", "edgecolor": "none", "alpha": 0.8, "pad": 0.6}
     for x, side, letter in zip((0.025, 0.975), ("left", "right"), plane.letters, strict=True):
         ax.text(
             x, 0.03, letter, transform=ax.transAxes, ha=side, va="bottom", fontsize=TYPE,
@@ -246,9 +252,9 @@ def _agreement_key(sheet: Sheet, top: float) -> None:
     ax.xaxis.set_minor_locator(FixedLocator([-0.95, -0.05, 0.05, 0.95]))
     ax.tick_params(pad=1.5, labelsize=TYPE)
     below = top + 2.6 + 1.2 + LINE
-    sheet.write(left, below, "of placements in class −")
-    sheet.write(left + width, below, "of placements in class +", ha="right")
-    line = {"color": INK, "linewidth": 0.8}
+    sheet.write(left, below, "class −")
+    sheet.write(left + width, below, "class +", ha="right")
+    line: dict[str, Any] = {"color": INK, "linewidth": 0.8}
     handles: Sequence[Artist] = (
         Line2D([], [], **line, label="class + as reported"),
         Line2D([], [], **line, linestyle="dashed", label="class − as reported"),

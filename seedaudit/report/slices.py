@@ -12,6 +12,7 @@ from typing import Any
 
 import nibabel as nib
 import numpy as np
+import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 from scipy import ndimage
 from scipy.spatial import KDTree
@@ -89,7 +90,8 @@ def _centres(low: float, high: float, step: float) -> FloatArray:
 
 def grid_of(image: nib.Nifti1Image) -> Grid:
     """The grid that a map is stored on."""
-    return Grid(image.shape, image.affine)
+    x, y, z = image.shape
+    return Grid((x, y, z), image.affine)
 
 
 def sample(image: nib.Nifti1Image, plane: Plane, outside: float = np.nan) -> FloatArray:
@@ -113,6 +115,12 @@ def step_of(seed: SeedAudit) -> float:
     """A distance of points that shows every voxel, mm."""
     finest = grid_of(seed.maps["analysis_mask"]).voxel_sizes.min()
     return float(np.clip(finest / 3, FINEST, COARSEST))
+
+
+def cloud_rows(seed: SeedAudit) -> pd.DataFrame:
+    """The placements of the cloud: all but control seeds, which lie far away on purpose."""
+    table = seed.tables["placements"]
+    return table[table["kind"] != "control"]
 
 
 def body_frame(seed: SeedAudit, pad: float = 4.0) -> FloatArray:
@@ -165,7 +173,7 @@ def contested_places(seed: SeedAudit, most: int = 3) -> list[Place]:
     nearest to the centre of gravity of the cluster. Order in the file decides nothing.
     """
     image = seed.maps["contested"]
-    labels, count = ndimage.label(
+    labels, _ = ndimage.label(
         np.asanyarray(image.dataobj) > 0, structure=np.ones((3, 3, 3), dtype=int)
     )
     unsettled = _unsettled(seed)
@@ -178,7 +186,6 @@ def contested_places(seed: SeedAudit, most: int = 3) -> list[Place]:
         best = np.lexsort((*xyz.T[::-1], lateral, off))[0]
         x, y, z = xyz[best].tolist()
         places.append(Place((x, y, z), len(voxels)))
-    assert len(places) == count
     return sorted(places, key=lambda place: (-place.n_voxels, place.at))[:most]
 
 
@@ -194,7 +201,7 @@ def _unsettled(seed: SeedAudit) -> FloatArray:
 def excluded_zone(seed: SeedAudit, plane: Plane) -> NDArray[np.bool_]:
     """Points of a plane in voxels that no analysis uses because of the spheres of the cloud."""
     mask = seed.maps["analysis_mask"]
-    table = seed.tables["placements"]
+    table = cloud_rows(seed)
     counted = table["used"].to_numpy(dtype=bool) | table["flags"].str.contains("missing_in_data")
     spheres = table[counted.to_numpy(dtype=bool)]
     # a voxel counts by its centre, so the zone may end half a diagonal off the widened sphere

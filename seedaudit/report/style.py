@@ -33,6 +33,8 @@ LINE = 3.3
 """Height of a line of text with its leading, mm."""
 TITLE = 5.2
 """Height that a panel title takes, mm."""
+LEAST_PART = 2.0
+"""Smaller parts of a panel show nothing, mm."""
 
 DIVERGING = LinearSegmentedColormap.from_list(
     "seedaudit", ["#1f2f7a", "#7f97d8", "#eeeae4", "#e59a4c", "#8f3f00"], N=511
@@ -45,7 +47,7 @@ ANATOMY = LinearSegmentedColormap.from_list(
 )
 """Light greys under dark ink; what is empty stays the white of the paper."""
 
-_SETTINGS: dict[str, Any] = {
+_SETTINGS: Any = {
     "font.family": ["DejaVu Sans"],  # comes with matplotlib, so the bytes do not depend on the host
     "font.size": TYPE,
     "text.parse_math": False,  # a dollar sign in the name of a region is a dollar sign
@@ -112,8 +114,19 @@ class Sheet:
         return float(self.ax.bbox.height / self.ax.figure.dpi * MM_PER_INCH)
 
     def place(self, left: float, top: float, width: float, height: float) -> Axes:
-        """New axes within the sheet."""
+        """New axes within the sheet.
+
+        Raises
+        ------
+        ValueError
+            If the sheet leaves no room for them.
+        """
         w, h = self.width, self.height
+        if min(width, height) < LEAST_PART:
+            raise ValueError(
+                f"axes of {w:.0f} by {h:.0f} mm have no room for this panel; give it about as "
+                "much as it has in the figure"
+            )
         bounds = (left / w, 1 - (top + height) / h, width / w, height / h)
         return self.ax.inset_axes(bounds)
 

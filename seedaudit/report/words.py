@@ -113,8 +113,12 @@ def _tail_clause(numbers: Mapping[str, Any], tail: str) -> str:
     if not voxels:
         # with an empty reported map, Dice is undefined where the other is empty too, else 0
         found = drawn - undefined
-        where = f"is at {found} of {drawn} drawn placements" if found else "nor is at any drawn one"
-        return f"no {tail} map is there as reported, {'but one ' if found else ''}{where}"
+        drawn_ones = (
+            f"but {found} of {drawn} drawn placements have one"
+            if found
+            else "nor at any drawn placement"
+        )
+        return f"there is no {tail} map as reported, {drawn_ones}"
     share = voxels / numbers["n_analysis_voxels"]
     size = f"{percent(share)} of the analysis voxels"
     if share < NEARLY_EMPTY:
@@ -168,8 +172,8 @@ def caption(seed: SeedAudit) -> str:
     parts = [
         f"Audit of the seed {seed.name} at {point(told['at_mm'])} mm, radius "
         f"{number(told['radius_mm'])} mm: {told['n_placements_used']} drawn placements within "
-        f"{number(told['within_mm'])} mm, {plural(told['n_participants'], 'participant')}, threshold "
-        f"{told['threshold']}.",
+        f"{number(told['within_mm'])} mm, {plural(told['n_participants'], 'participant')}, "
+        f"threshold {told['threshold']}.",
         "(a) Reported centre and sphere, and the centres of the drawn placements projected on "
         f"three planes through the reported centre. {axes}",
         "(b) Share of drawn placements with a voxel in class + and in class −, on axial slices at "

@@ -259,7 +259,7 @@ def test_table_problems_come_together(table):
     table.write_text("\n".join([*lines, lines[3]]) + "\n")
     who = [*ids(table)[:N], "sub-99"]
     text = message(DataError, who, table, "~ gap + mixed + age", "age")
-    assert "'02' stands there 2 times" in text
+    assert "'sub-02' stands there 2 times" in text
     assert "no row for participant 'sub-99'" in text
     assert "column 'gap' has no value for sub-00" in text
     assert "column 'mixed' mixes numbers and text ('unknown')" in text

@@ -47,7 +47,7 @@ def head_volumes(
     ijk = np.stack(np.meshgrid(*map(np.arange, grid.shape), indexing="ij"), axis=-1)
     xyz = grid.to_world(ijk)
     brain = (((xyz - [0, -20, 10]) / [68, 86, 66]) ** 2).sum(axis=-1) < 1
-    used = placements[placements["used"]]
+    used = placements[placements["used"] & (placements["kind"] != "control")]
     far = np.ones(grid.shape, bool)
     for row in used.itertuples():
         gap = np.linalg.norm(xyz - [row.x, row.y, row.z], axis=-1)
@@ -80,7 +80,7 @@ def head_volumes(
 def invented_placements(
     count: int, aside: int, within: float, radius: float, at: Sequence[float] = AT
 ) -> pd.DataFrame:
-    """A cloud, uniform in a ball; the last ones set aside."""
+    """A cloud, uniform in a ball, the last ones set aside; then five control seeds."""
     rng = np.random.default_rng(4)
     shifts = rng.normal(size=(count, 3))
     length = within * rng.random(count) ** (1 / 3)
@@ -101,13 +101,18 @@ def invented_placements(
         "used": used,
         "flags": np.where(used, "", "low_coverage;leaves_mask"),
     }
-    return frozen_table("placements", columns)
+    table = frozen_table("placements", columns)
+    controls = table.iloc[[1, 2, 1, 2, 1]].assign(kind="control", used=True, flags="", coverage=1.0)
+    controls[["x", "dx"]] += 50  # into the other half of the head
+    controls["placement"] = count + np.arange(1, 6)
+    controls["distance"] = np.linalg.norm(controls[["dx", "dy", "dz"]], axis=1)
+    return pd.concat([table, controls], ignore_index=True)
 
 
 def invented_similarity(placements: pd.DataFrame, *, negative: bool) -> pd.DataFrame:
     """Similarities that fall with distance."""
     rng = np.random.default_rng(5)
-    used = placements[placements["used"]]
+    used = placements[placements["used"] & (placements["kind"] != "control")]
     distance = used["distance"].to_numpy()
     n = len(used)
     noise = np.where(distance > 0, 1, 0) * rng.random((3, n))
@@ -218,6 +223,7 @@ def invented_seed(
     negative: bool = True,
     contested: bool = True,
     participants: int = 12,
+    nothing: bool = False,
     grid: Grid | None = None,
     storage: Any = EVERYWHERE,
     **summary: Any,
@@ -231,6 +237,13 @@ def invented_seed(
         "similarity": invented_similarity(placements, negative=negative),
         "regions": invented_regions(names, states, single=single),
     }
+    if nothing:
+        tails = ["dice_positive", "dice_negative"]
+        tables["similarity"] = tables["similarity"].assign(
+            n_positive=0, n_negative=0, **dict.fromkeys(tails, np.nan)
+        )
+        tables["regions"] = tables["regions"].assign(state="silent")
+        summary = {"safe_share": 0.0, "contested_share": 0.0} | summary
     if single:
         summary = {"stability_low": None, "stability_high": None, "df": None, "statistic": "z"} | (
             summary
@@ -241,6 +254,8 @@ def invented_seed(
     for name, volume in head_volumes(
         grid, placements, negative=negative, contested=contested
     ).items():
+        if nothing and name not in ("analysis_mask", "anatomy"):
+            volume = np.where(np.isnan(volume), volume, 0)
         stored_grid, stored = restored(grid, volume, storage)
         maps[name] = map_image(name, stored, stored_grid.affine, 4)
     return SeedAudit("posterior", numbers, tables, maps)

@@ -9,6 +9,7 @@ from hypothesis import given, settings
 
 from seedaudit.report.slices import (
     Plane,
+    cloud_rows,
     contested_places,
     excluded_zone,
     near_plane,
@@ -40,7 +41,7 @@ def test_every_point_takes_the_voxel_that_holds_it(kind):
     centre = grid.corners().mean(axis=0)
     volume = np.arange(np.prod(grid.shape), dtype=np.float32).reshape(grid.shape)
     # an odd place, so that no point lies on the face of a voxel, where rounding may differ
-    plane = near_plane(kind, centre + [0.137, 0.211, -0.173], 22, 0.93)
+    plane = near_plane(kind, np.add(centre, (0.137, 0.211, -0.173)), 22, 0.93)
     found = sample(image(grid, volume), plane)
     np.testing.assert_array_equal(found, naive_sample(image(grid, volume), plane))
     assert np.isfinite(found).any()
@@ -120,13 +121,27 @@ def test_fewer_contested_places_when_there_are_fewer():
 
 
 def test_the_excluded_zone_is_what_the_spheres_took_from_the_analysis():
-    seed = invented_seed(grid=head_grid(2.0))
+    seed = invented_seed(grid=head_grid(4.0))
     plane = near_plane("axial", AT, 30, 1.0)
     zone = excluded_zone(seed, plane)
-    used = seed.tables["placements"].query("used")
+    used = seed.tables["placements"].query("used and kind != 'control'")
     centres = used[["x", "y", "z"]].to_numpy()
     distance = np.linalg.norm(plane.points[..., None, :] - centres, axis=-1).min(axis=-1)
-    # by hand: sphere of 6 mm and margin; a 2 mm voxel reaches 1.7 mm from its centre
-    edge = 6.0 + 2.0
-    assert zone[distance < edge - 1.75].all()
-    assert not zone[distance > edge + 1.75].any()
+    # by hand: sphere of 6 mm and margin; a 4 mm voxel reaches 3.5 mm from its centre
+    edge = 6.0 + 4.0
+    assert zone[distance < edge - 3.5].all()
+    assert not zone[distance > edge + 3.5].any()
+    # and between the two, exactly the voxels that the analysis lost there
+    lost = sample(seed.maps["analysis_mask"], plane) == 0
+    near = distance < edge + 3.4
+    np.testing.assert_array_equal(zone[near], lost[near])
+
+
+def test_control_seeds_are_no_part_of_the_cloud():
+    seed = invented_seed()
+    controls = seed.tables["placements"].query("kind == 'control'")
+    assert len(controls) == 5
+    for at in controls[["x", "y", "z"]].to_numpy():
+        plane = near_plane("axial", at, 8, 1.0)
+        assert not excluded_zone(seed, plane).any()
+    assert len(cloud_rows(seed)) == 101

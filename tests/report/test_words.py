@@ -50,7 +50,7 @@ CASES = {
     ),
     "nothing as reported": (
         NOTHING | {"dice_positive_undefined": 88, "dice_positive_median": 0.0},
-        ["but one is at 12 of 100 drawn placements", "no reported map to compare with"],
+        ["but 12 of 100 drawn placements have one", "no reported map to compare with"],
     ),
     "empty tail": (
         {
@@ -59,7 +59,7 @@ CASES = {
             "dice_negative_p05": None,
             "dice_negative_undefined": 100,
         },
-        ["no negative map is there as reported, nor is at any drawn one"],
+        ["there is no negative map as reported, nor at any drawn placement"],
     ),
     "nearly empty": (
         {"n_reported_positive": 7, "n_reported_negative": 0, "stability": 0.999},

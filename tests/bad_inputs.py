@@ -197,6 +197,12 @@ def set_int16(at: int, value: int) -> Callable[[bytearray], None]:
     return change
 
 
+def swapped_lengths(content: bytearray) -> None:
+    """Turn over the bytes of the image lengths (dim), as after a careless change of byte order."""
+    for at in range(40, 56, 2):
+        content[at : at + 2] = content[at : at + 2][::-1]
+
+
 def many_columns(rows: list[list[str]]) -> None:
     """Add 60 columns of noise named trans_noise_*: more than the volumes of any run can bear."""
     rng = np.random.default_rng(4)
@@ -235,12 +241,12 @@ STUDY_FAULTS = (
     Fault("unknown section", swap(("[consensus]", "[consenus]")), 2,
           ("consenus", "did you mean `consensus`?")),
     Fault("text for a number", swap((RADIUS, 'radius = "6"')), 2,
-          ("seed[1].radius", "'6'", "number")),
+          ("seed[1].radius", '"6"', "a number", "without quotes")),
     Fault("true for a number", swap((RADIUS, "radius = true")), 2,
-          ("seed[1].radius", "True", "number")),
+          ("seed[1].radius", "is true", "a number")),
     Fault("number for text", swap(('mask = "mask.nii.gz"', "mask = 3")), 2,
-          ("data.mask", "3", "text")),
-    Fault("number for a list", swap((AT, "at = 5")), 2, ("seed[1].at", "5", "list")),
+          ("data.mask", "is 3", "text in quotes")),
+    Fault("number for a list", swap((AT, "at = 5")), 2, ("seed[1].at", "is 5", "list in square brackets")),
     Fault("radius below 0", swap((RADIUS, "radius = -5.0")), 2,
           ("seed[1].radius", "-5.0", "greater than 0")),
     Fault("share above 1", swap(("safe = 0.95", "safe = 1.5")), 2,
@@ -250,45 +256,51 @@ STUDY_FAULTS = (
     Fault("fraction for a count", swap(("count = 12", "count = 12.5")), 2,
           ("placements.count", "12.5", "whole number")),
     Fault("unknown rule", swap(('rule = "fdr"', 'rule = "fdrr"')), 2,
-          ("threshold.rule", "'fdrr'", "'fdr'", "'bonferroni'")),
+          ("threshold.rule", '"fdrr"', "'bonferroni'", "did you mean 'fdr'?")),
     Fault("level above 1", swap(("level = 0.05", "level = 5")), 2,
-          ("level", "fdr", "above 0, below 1")),
+          ("threshold", "`level` = 5", "fdr", "above 0, below 1")),
     Fault("unknown draw", put("placements", 'draw = "cube"'), 2,
-          ("placements.draw", "'cube'", "'ball'", "'lattice'")),
+          ("placements.draw", '"cube"', "'ball'", "'lattice'")),
     Fault("sd with a ball", put("placements", "sd = 2.0"), 2,
           ("placements", "`sd` goes with", 'draw = "normal"')),
     Fault("negative uncertainty",
           put("placements", "uncertainty = { registration = -1.0 }"), 2,
           ("placements.uncertainty", "-1.0", "none negative")),
-    Fault("two coordinates", swap((AT, "at = [-7.0, -48.0]")), 2, ("seed[1].at", "3")),
-    Fault("four coordinates", swap((AT, "at = [-7.0, -48.0, 20.0, 1.0]")), 2, ("seed[1].at", "3")),
+    Fault("two coordinates", swap((AT, "at = [-7.0, -48.0]")), 2,
+          ("seed[1].at: is [-7.0, -48.0]", "3 values"), 1),
+    Fault("four coordinates", swap((AT, "at = [-7.0, -48.0, 20.0, 1.0]")), 2,
+          ("seed[1].at: is [-7.0, -48.0, 20.0, 1.0]", "3 values"), 1),
     Fault("coordinate not finite", swap((AT, "at = [nan, -48.0, 20.0]")), 2,
-          ("seed[1].at", "nan", "finite")),
+          ("seed[1].at[1]", "NaN", "finite")),
     Fault("band that falls", put("cleaning", "band = [0.1, 0.01]"), 2,
           ("cleaning.band", "[0.1, 0.01]", "low < high")),
     Fault("unknown space", swap(('space = "native"', 'space = "MNI152"')), 2,
-          ("seed[1].space", "'MNI152'", "'mni'", "'talairach'")),
+          ("seed[1].space", '"MNI152"', "'talairach'", "did you mean 'mni'?")),
     Fault("seed without a place", swap((AT, "")), 2, ("seed[1].at", "is missing")),
     Fault("no seed", swap(("[[seed]]", "[seeds]")), 2, ("seed", "is missing")),
     Fault("seed names alike",
           swap(("[placements]", '[[seed]]\nname = "Posterior"\nat = [0, 0, 0]\n\n[placements]')),
           2, ("seed", "`name` of its own")),
     Fault("seed name as a path", swap(('name = "posterior"', 'name = "../posterior"')), 2,
-          ("seed[1].name", "'../posterior'", "letters")),
+          ("seed[1].name", '"../posterior"', "letters, digits")),
+    Fault("one seed as a section", swap(("[[seed]]", "[seed]")), 2,
+          ("seed", "write [[seed]], in double brackets"), 1),
+    Fault("runs as a number", swap(('runs = "runs.tsv"', "runs = 3")), 2,
+          ("data.runs", "is 3", "table", "pattern", "list of files"), 1),
     Fault("no runs", swap(('runs = "runs.tsv"\n', "")), 2, ("data", "`runs` or `bids`")),
     Fault("runs and bids", put("data", 'bids = "."'), 2, ("data", "either `runs` or `bids`")),
     Fault("bad on_bad_run", put("data", 'on_bad_run = "skip"'), 2,
-          ("data.on_bad_run", "'skip'", "'stop'", "'set-aside'")),
+          ("data.on_bad_run", '"skip"', "'stop'", "'set-aside'")),
     Fault("missing file", without("mask.nii.gz"), 2,
           ("data.mask", "'mask.nii.gz' does not exist", "relative to the study file")),
     Fault("missing runs table", without("runs.tsv"), 2, ("data.runs", "'runs.tsv'")),
     Fault("two problems", swap((RADIUS, "radius = 0"), ("drift = 1", "drift = 11"),
                                ('regions = "networks_dseg.nii.gz"', 'regions = "atlas.nii.gz"')), 2,
           ("seed[1].radius", "cleaning.drift", "data.regions", "dosenbach2010"), 3),
-    Fault("not TOML", swap(("count = 12", "count = = 12")), 2, ("study.toml", "TOML", "line 20")),
+    Fault("not TOML", swap(("count = 12", "count = = 12")), 2, ("study.toml", "TOML", "line 21", "mend that line")),
     Fault("not text", lambda f: (f / "study.toml").write_bytes(b"\xff\xfe\x00study"), 2,
-          ("study.toml", "cannot be read")),
-    Fault("missing study file", without("study.toml"), 2, ("study.toml", "No such file")),
+          ("study.toml", "not text in UTF-8")),
+    Fault("missing study file", without("study.toml"), 2, ("study.toml", "No such file", "check the path")),
     Fault("pattern without a match", swap(('runs = "runs.tsv"', 'runs = "sub-*_asl.nii.gz"')), 2,
           ("data.runs", "'sub-*_asl.nii.gz'", "matches no")),
     Fault("empty bids folder", swap(('runs = "runs.tsv"', 'bids = "."')), 2,
@@ -323,7 +335,7 @@ MODEL_FAULTS = (
     Fault("participant twice in the table",
           both(table("participants.tsv", lambda rows: rows.append(list(rows[1]))),
                swap((MODEL, 'model = "~ age"\neffect = "age"'))), 3,
-          ("participants.tsv", "'01'", "2 times")),
+          ("participants.tsv", "'sub-01'", "2 times", "one row for each")),
     Fault("missing value in the model",
           both(cell("participants.tsv", 3, "age", "n/a"),
                swap((MODEL, 'model = "~ age"\neffect = "age"'))), 3,
@@ -346,7 +358,13 @@ SPACE_FAULTS = (
            "that voxel is at", "space")),
     Fault("seed outside the mask", swap((AT, "at = [-15, -62, 5]")), 3,
           ("seed posterior", "(-15, -62, 5)", "outside the mask", "mm from the nearest voxel")),
-    Fault("seed barely covered", put("placements", "min_coverage = 1.0"), 3, ()),
+    Fault("seed barely covered",
+          both(swap((AT, "at = [-11.3, -52.4, 12.1]")), put("placements", "min_coverage = 1.0")), 3,
+          ("seed posterior", "the mask covers 0.", "min_coverage = 1", "shrink its radius")),
+    Fault("one placement left",
+          both(put("placements", "min_coverage = 1.0"),
+               swap(("within = 5.0", "within = 20"), ("count = 12", "count = 4"))), 3,
+          ("seed posterior", "1 of 4 drawn placements can be used", "2 or more", "min_coverage")),
     Fault("mask on another grid", image("mask.nii.gz", affine=shift_origin), 3,
           ("mask.nii.gz", "sub-01_task-rest_run-1_bold.nii.gz", "first voxel at", "resample")),
     Fault("empty mask", image("mask.nii.gz", filled(0)), 3, ("mask.nii.gz", "empty mask")),
@@ -355,6 +373,8 @@ SPACE_FAULTS = (
           ("mask.nii.gz", "values beside 0", "0.1", "threshold")),
     Fault("4-D mask", image("mask.nii.gz", lambda d: np.stack([d, d], axis=-1)), 3,
           ("mask.nii.gz", "4-D", "3-D")),
+    Fault("neither mask nor background", swap(('mask = "mask.nii.gz"\n', "")), 3,
+          ("no voxel is present in the first volume of every run", "give a `mask`")),
     Fault("label image without look-up", without("networks_dseg.tsv"), 3,
           ("networks_dseg.nii.gz", "networks_dseg.tsv does not exist", "index and name", "write")),
     Fault("labels missing from the look-up", table("networks_dseg.tsv", drop_rows(2, 3)), 3,
@@ -369,8 +389,7 @@ SPACE_FAULTS = (
     Fault("cloud over the whole mask", put("consensus", "exclude_margin = 100.0"), 3,
           ("seed posterior", "cover the whole mask", "smaller cloud")),
     Fault("inside without overlap",
-          both(lambda f: image("networks_dseg.nii.gz")(f),
-               lambda f: (f / "grey.nii.gz").write_bytes((f / "mask.nii.gz").read_bytes()),
+          both(lambda f: (f / "grey.nii.gz").write_bytes((f / "mask.nii.gz").read_bytes()),
                image("grey.nii.gz", affine=lambda a: a.__setitem__((slice(0, 3), 3), 500.0)),
                put("placements", 'inside = "grey.nii.gz"')), 3,
           ("inside", "0 of", "drawn centres", "at least 1%")),
@@ -378,7 +397,7 @@ SPACE_FAULTS = (
 
 RUN_FAULTS = (
     Fault("3-D file", image(4, lambda d: d[..., 0]), 3,
-          ("sub-04_task-rest_run-1_bold.nii.gz", "3-D image", "4-D run")),
+          ("sub-04_task-rest_run-1_bold.nii.gz", "3-D image", "4-D run", "whole series")),
     Fault("5-D file", image(4, lambda d: np.stack([d, d], axis=-1)), 3,
           ("sub-04_task-rest_run-1_bold.nii.gz", "5 axes")),
     Fault("other shape", image(4, one_more_slice), 3,
@@ -397,7 +416,15 @@ RUN_FAULTS = (
           ("sub-04_task-rest_run-1_bold.nii.gz", "no affine is coded", "sform_code", "data.grid")),
     Fault("not an image", stored(4, lambda _: b"hello"), 3,
           ("sub-04_task-rest_run-1_bold.nii.gz", "not a NIfTI file", ".nii.gz")),
-    Fault("empty file", stored(4, lambda _: b""), 3, ("sub-04_task-rest_run-1_bold.nii.gz",)),
+    Fault("empty file", stored(4, lambda _: b""), 3,
+          ("sub-04_task-rest_run-1_bold.nii.gz", "an empty file", "copy the file again")),
+    Fault("truncated plain file", stored(3, lambda b: b[:-1000]), 3,
+          ("sub-03_task-rest_run-1_bold.nii", "the header asks for", "truncated")),
+    Fault("wrong byte order", inflated(1, swapped_lengths), 3,
+          ("sub-01_task-rest_run-1_bold.nii.gz", "vox_offset")),
+    Fault("odd one first", image(1, one_more_slice), 3,
+          ("sub-01_task-rest_run-1_bold.nii.gz: is on another grid than sub-02", "11 x 14 x 10"),
+          1),
     Fault("a folder in its place",
           lambda f: (bold(f, 4).unlink(), (f / "sub-04_task-rest_run-1_bold.nii.gz").mkdir()), 3,
           ("sub-04_task-rest_run-1_bold.nii.gz",)),
@@ -408,11 +435,11 @@ RUN_FAULTS = (
     Fault("negative length", inflated(1, set_int16(46, -3)), 3,
           ("sub-01_task-rest_run-1_bold.nii.gz", "dim is")),
     Fault("confounds rows", table("sub-04_task-rest_run-1_timeseries.tsv", drop_rows(3)), 3,
-          ("sub-04_task-rest_run-1_timeseries.tsv", "51 rows", "52 volumes")),
+          ("sub-04_task-rest_run-1_timeseries.tsv", "59 rows", "60 volumes", "dropped")),
     Fault("missing confound column",
           swap(('"rot_*"]', '"rot_*", "framewise_displacment"]')), 3,
           ("sub-01_task-rest_run-1_timeseries.tsv", "'framewise_displacment'",
-           "did you mean framewise_displacement?")),
+           "did you mean framewise_displacement?"), 1),
     Fault("missing column in one run", table("sub-04_task-rest_run-1_timeseries.tsv",
                                              lambda rows: [rows[0].__setitem__(i, "r" + n[4:])
                                                            for i, n in enumerate(rows[0])
@@ -429,15 +456,15 @@ RUN_FAULTS = (
           ("sub-01_task-rest_run-1_timeseries.tsv", "'fd'", "framewise_displacement")),
     Fault("too few volumes",
           table("sub-04_task-rest_run-1_timeseries.tsv", many_columns), 3,
-          ("sub-04_task-rest_run-1_bold.nii.gz", "52 volumes", "0 residual degrees of freedom",
+          ("sub-04_task-rest_run-1_bold.nii.gz", "60 volumes", "0 residual degrees of freedom",
            "at least 4", "fewer confounds")),
     Fault("all volumes censored", put("cleaning", 'censor = { column = "trans_x", above = -9 }'), 3,
           ("0 residual degrees of freedom", "less censoring")),
     Fault("band without TR",
           both(every_run(lambda n: image(n, repetition_time=0.0)),
                put("cleaning", "band = [0.008, 0.1]")), 3,
-          ("sub-01_task-rest_run-1_bold.nii.gz", "repetition time", "0.008 to 0.1 Hz",
-           "repetition_time")),
+          ("sub-01_task-rest_run-1_bold.nii.gz", "no repetition time", "0.008 to 0.1 Hz",
+           "`repetition_time`"), 1),
     Fault("missing bold file", without("sub-04_task-rest_run-1_bold.nii.gz"), 3,
           ("sub-04_task-rest_run-1_bold.nii.gz", "no such file", "sub-04")),
     Fault("missing confounds file", without("sub-04_task-rest_run-1_timeseries.tsv"), 3,
@@ -454,7 +481,7 @@ RUN_FAULTS = (
     Fault("table without rows", table("runs.tsv", drop_rows(1, 2, 3, 4)), 3,
           ("runs.tsv", "no rows")),
     Fault("ragged table", table("runs.tsv", lambda rows: rows[2].append("more")), 3,
-          ("runs.tsv", "cannot be read", "tab-separated")),
+          ("runs.tsv", "cannot be read (Expected 4 fields in line 3, saw 5)", "tab-separated")),
     Fault("empty table", lambda f: (f / "runs.tsv").write_text(""), 3,
           ("runs.tsv", "cannot be read")),
     Fault("two bad runs", both(image(4, one_more_slice), image(2, lambda d: d[..., 0])), 3,
@@ -471,18 +498,37 @@ HEADER_FAULTS = (*STUDY_FAULTS, *MODEL_FAULTS, *SPACE_FAULTS, *RUN_FAULTS)
 DATA_FAULTS = (
     Fault("truncated gzip", stored(4, lambda b: b[: len(b) // 2]), 3,
           ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "ends early", "copy")),
-    Fault("truncated plain file", stored(3, lambda b: b), 3, ()),
     Fault("corrupt gzip", stored(4, corrupt), 3,
           ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "corrupt", "copy")),
     Fault("wrong checksum", stored(4, lambda b: b[:-8] + b"\0\0\0\0" + b[-4:]), 3,
           ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "corrupt", "copy")),
     Fault("data shorter than the header says", inflated(4, lambda b: b.__delitem__(slice(-5000, None))), 3,
-          ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "end within volume 52 of 52")),
+          ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "end within volume 60 of 60")),
     Fault("all-constant run", image(4, filled(700.0)), 3,
           ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "0%", "signal that varies",
            "min_coverage", "set-aside")),
     Fault("all-NaN run", image(4, filled(np.nan)), 3,
           ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "0%", "signal that varies")),
     Fault("one NaN volume", image(4, filled(np.nan, volumes=slice(9, 10))), 3,
-          ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "NaN")),
+          ("participant sub-04", "sub-04_task-rest_run-1_bold.nii.gz", "0%", "signal")),
 )  # fmt: skip
+
+
+def without_mask(folder: Path) -> None:
+    """A folder of runs alone: no study file, mask or regions."""
+    for name in ("study.toml", "runs.tsv", "participants.tsv"):
+        (folder / name).unlink()
+
+
+def forms_disagree(number: int) -> Break:
+    """Write a run whose qform is shifted by 3 mm against its sform."""
+
+    def breaks(folder: Path) -> None:
+        path = bold(folder, number)
+        run = nib.Nifti1Image.from_filename(path)
+        moved = run.affine.copy()
+        moved[1, 3] += 3.0
+        run.set_qform(moved, 4)
+        nib.save(nib.Nifti1Image(run.get_fdata(dtype=np.float32), None, run.header), path)
+
+    return breaks

@@ -1,0 +1,283 @@
+"""Ceiling: the reported placement against itself in halves, and shifted placements against it.
+
+The similarity of the reported map in one half of the participants to the reported map in the
+other half is as good as these data allow. The same with a shifted map in the other half, divided
+by it, is the ceiling-relative stability: 1 where moving the seed costs nothing beyond sampling.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from seedaudit.consensus.chance import ac1_from_shares
+from seedaudit.consensus.halves import (
+    MOST_SPLITS,
+    Halves,
+    cross_half_r,
+    fold_sums,
+    half_splits,
+    halves,
+    mean_defined,
+)
+from seedaudit.consensus.overlap import dice
+from seedaudit.consensus.resampling import delete_fold_interval
+from seedaudit.inference.glm import uniform_estimate
+from seedaudit.inference.group import Classifier
+from seedaudit.sweep.moments import Moments, merged
+
+FloatArray = NDArray[np.float64]
+Classes = NDArray[np.int8]
+
+MEASURES = ("spatial_r", "ac1", "dice_positive", "dice_negative")
+
+CLASS_SPLITS = 4
+"""Half-splits that class maps are made for; each needs the maps of ten halves."""
+
+CLASS_PLACEMENTS = 24
+"""Drawn placements that class maps of halves are made for, evenly spread over all of them."""
+
+LEAST_CEILING = 0.05
+"""Below this similarity of the reported map to itself nothing can be related to it."""
+
+
+@dataclass(frozen=True)
+class Ceiling:
+    """Similarities across halves for the whole map (column 0) and K regions.
+
+    Parameters
+    ----------
+    same, shifted, relative : dict of (3, 1 + K) arrays by measure
+        Value, lower and upper end of the 95 % interval over participants (delete-a-fold
+        jackknife). `shifted` is the mean over the drawn placements.
+    placement_relative : (N,)
+        Cross-half spatial r of each drawn placement, divided by that of the reported one.
+    control_relative : (C,)
+        The same for control seeds.
+    n_splits, n_class_splits, n_class_placements : int
+    """
+
+    same: dict[str, FloatArray]
+    shifted: dict[str, FloatArray]
+    relative: dict[str, FloatArray]
+    placement_relative: FloatArray
+    control_relative: FloatArray
+    n_splits: int
+    n_class_splits: int
+    n_class_placements: int
+
+
+def ceiling(
+    folds: Sequence[Moments],
+    sizes: Sequence[int],
+    contrast: FloatArray,
+    regions: NDArray[np.integer[Any]],
+    n_regions: int,
+    classes_of: Classifier,
+    voxels: NDArray[np.integer[Any]],
+    *,
+    controls: Sequence[Moments] = (),
+    control_keep: NDArray[np.bool_] | None = None,
+    random_state: int = 0,
+) -> Ceiling | None:
+    """Compare halves of the participants, at the reported and at shifted placements.
+
+    Parameters
+    ----------
+    folds : sequence of Moments
+        Of the placements of a cloud, the reported one first.
+    sizes : sequence of int
+        Participants in each fold.
+    contrast : (p,)
+    regions : (A,) int
+        Position of the region of each voxel of `voxels`, -1 for none.
+    n_regions : int
+        K
+    classes_of : callable
+        Makes classes of the A voxels; see `seedaudit.inference.group.classifier`.
+    voxels : (A,) int
+        Voxels of the moments that every participant has.
+    controls : sequence of Moments, optional
+        The same folds for the control seeds.
+    control_keep : (C, A) bool
+        Voxels that a control seed is judged on: not its own sphere.
+    random_state : int
+        Of the choice of splits where there are too many.
+
+    Returns
+    -------
+    Ceiling or None
+        None without two halves of at least two participants each that the design can be
+        estimated in.
+    """
+    kept = [g for g, size in enumerate(sizes) if size]
+    folds, sizes = [folds[g] for g in kept], [sizes[g] for g in kept]
+    if len(folds) < 2 or not len(voxels) or folds[0].variance is not None:
+        return None
+    members = half_splits(len(folds), MOST_SPLITS, random_state)
+    split = halves([fold.voxels(voxels[:1]) for fold in folds], sizes, contrast, members)
+    if not split.usable[0].any():
+        return None
+    r = _spatial(folds, voxels, regions, n_regions, split)
+    values = {"spatial_r": (r[0], r[1:].mean(axis=0))}
+    some = np.flatnonzero(split.usable[0])
+    picked = some[np.linspace(0, len(some) - 1, min(CLASS_SPLITS, len(some))).round().astype(int)]
+    n_drawn = folds[0].zz.shape[0] - 1
+    chosen = np.unique(np.linspace(1, n_drawn, min(CLASS_PLACEMENTS, n_drawn)).round().astype(int))
+    by_class = class_similarity(
+        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, regions, n_regions,
+        classes_of, members[picked],
+    )  # fmt: skip
+    for name, found in by_class.items():
+        values[name] = found[:, 0], mean_defined(found[:, 1:], axis=1)
+    floor = [
+        cross_half_r(
+            fold_sums(folds, 0, voxels[keep]),
+            fold_sums([fold.placements(slice(c, c + 1)) for fold in controls], 0, voxels[keep]),
+            np.array([[0, np.count_nonzero(keep)]]),
+            split,
+        )[0, 0]
+        for c, keep in enumerate([] if control_keep is None else control_keep)
+    ]
+    same = {name: _interval(found[0], sizes) for name, found in values.items()}
+    shifted = {name: _interval(found[1], sizes) for name, found in values.items()}
+    relative = {name: _interval(_ratio(b, a), sizes, np.inf) for name, (a, b) in values.items()}
+    whole = r[0, 0, 0]
+    return Ceiling(
+        same, shifted, relative, _ratio(r[1:, 0, 0], whole), _ratio(np.array(floor), whole),
+        int(split.usable[0].sum()), len(picked), len(chosen),
+    )  # fmt: skip
+
+
+def _spatial(
+    folds: Sequence[Moments],
+    voxels: NDArray[np.integer[Any]],
+    regions: NDArray[np.integer[Any]],
+    n_regions: int,
+    split: Halves,
+) -> FloatArray:
+    """Cross-half spatial r by placement, fold left out, and whole map or region, (N, D, 1 + K)."""
+    order = np.argsort(regions, kind="stable")
+    edges = np.searchsorted(regions[order], np.arange(n_regions + 1))
+    bounds = np.vstack([[0, len(order)], np.stack([edges[:-1], edges[1:]], axis=1)])
+    reported = fold_sums(folds, 0, voxels[order])
+    return np.array(
+        [
+            cross_half_r(reported, fold_sums(folds, i, voxels[order]), bounds, split)
+            for i in range(folds[0].zz.shape[0])
+        ]
+    )
+
+
+def class_similarity(
+    folds: Sequence[Moments],
+    sizes: Sequence[int],
+    contrast: FloatArray,
+    placements: NDArray[np.integer[Any]],
+    voxels: NDArray[np.integer[Any]],
+    regions: NDArray[np.integer[Any]],
+    n_regions: int,
+    classes_of: Classifier,
+    members: NDArray[np.bool_],
+) -> dict[str, FloatArray]:
+    """AC1 and Dice between the classes of two halves, as in `ceiling`.
+
+    Parameters
+    ----------
+    placements : (M,) int
+        Placements to compare with the reported one; the first of them is the reported one itself.
+    members : (S, G) bool
+        Folds of the first halves.
+
+    Returns
+    -------
+    dict of (1 + G, M, 1 + K) arrays
+        Means over splits, over which half holds the reported map, and over what is defined.
+    """
+    bucket = np.where(regions < 0, n_regions, regions).astype(np.int64)
+    shape = (1 + len(folds), len(placements), 2 * len(members), 1 + n_regions)
+    found = {name: np.full(shape, np.nan) for name in MEASURES[1:]}
+    reported: list[dict[tuple[int, int], Classes | None]] = []
+    for m, placement in enumerate(placements):
+        parts = [fold.placements(slice(placement, placement + 1)).voxels(voxels) for fold in folds]
+        for s, inside in enumerate(members):
+            here = _half_classes(parts, sizes, contrast, inside, classes_of)
+            if m == 0:
+                reported.append(here)
+            for variant in range(1 + len(folds)):
+                for half in (0, 1):
+                    x, y = reported[s][half, variant], here[1 - half, variant]
+                    if x is None or y is None:
+                        continue
+                    for name, value in _measures(bucket, n_regions, x, y).items():
+                        found[name][variant, m, 2 * s + half] = value
+    return {name: mean_defined(values, axis=2) for name, values in found.items()}
+
+
+def _half_classes(
+    parts: Sequence[Moments],
+    sizes: Sequence[int],
+    contrast: FloatArray,
+    inside: NDArray[np.bool_],
+    classes_of: Classifier,
+) -> dict[tuple[int, int], Classes | None]:
+    """Classes by half and variant: 0 has all folds, variant 1 + g is without fold g."""
+    made: dict[tuple[int, int], Classes | None] = {}
+    for half, chosen in enumerate((inside, ~inside)):
+        total = merged([parts[g] for g in np.flatnonzero(chosen)])
+        n = int(np.asarray(sizes)[chosen].sum())
+        made[half, 0] = _classes(total, n, contrast, classes_of)
+        for g, part in enumerate(parts):
+            made[half, 1 + g] = (
+                _classes(total - part, n - sizes[g], contrast, classes_of)
+                if chosen[g]
+                else made[half, 0]
+            )
+    return made
+
+
+def _classes(
+    moments: Moments, n: int, contrast: FloatArray, classes_of: Classifier
+) -> Classes | None:
+    """Classes of one placement; None where the half is too small for the design."""
+    estimate = uniform_estimate(moments, n, contrast)
+    if estimate is None:
+        return None
+    df = np.asarray(float(n - len(contrast)))
+    return classes_of(estimate.statistic, estimate.effect, df)
+
+
+def _measures(
+    bucket: NDArray[np.int64], n_regions: int, x: Classes, y: Classes
+) -> dict[str, FloatArray]:
+    """AC1 of two raters and Dice of each tail, for the whole map and each region, (1 + K,)."""
+    code = bucket * 9 + (x.astype(np.int64) * 3 + y + 4)
+    counts = np.bincount(code, minlength=9 * (n_regions + 1)).reshape(-1, 3, 3)
+    joint = np.concatenate([counts.sum(axis=0)[None], counts[:n_regions]]).astype(np.float64)
+    total = joint.sum(axis=(1, 2))
+    total = np.where(total > 0, total, np.nan)
+    agreement = np.einsum("kii->k", joint) / total
+    in_x, in_y = joint.sum(axis=2), joint.sum(axis=1)
+    shares = (in_x + in_y) / 2 / total[:, None]
+    return {
+        "ac1": ac1_from_shares(agreement, shares),
+        "dice_positive": dice(joint[:, 2, 2], in_x[:, 2], in_y[:, 2]),
+        "dice_negative": dice(joint[:, 0, 0], in_x[:, 0], in_y[:, 0]),
+    }
+
+
+def _ratio(shifted: FloatArray, same: FloatArray | float) -> FloatArray:
+    """Shifted over same; NaN where the ceiling is too low for it to mean anything."""
+    same = np.broadcast_to(np.asarray(same, dtype=np.float64), np.shape(shifted))
+    out = np.full(np.shape(shifted), np.nan)
+    return np.asarray(np.divide(shifted, same, out=out, where=same >= LEAST_CEILING))
+
+
+def _interval(values: FloatArray, sizes: Sequence[int], most: float = 1.0) -> FloatArray:
+    """Value, low and high (3, 1 + K) from values with all folds and without each."""
+    low, high = delete_fold_interval(values[0], values[1:], sizes, most=most)
+    return np.stack([values[0], low, high])

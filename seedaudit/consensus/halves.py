@@ -1,0 +1,176 @@
+"""Independent halves of the participants, and how alike the maps of two halves are in space.
+
+A map of the group effect is linear in the sums x'z of the folds, so the spatial correlation
+between any two halves follows from products of those sums, formed once for each placement.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from itertools import combinations
+from math import comb
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from seedaudit.sweep.moments import Moments
+
+FloatArray = NDArray[np.float64]
+
+MOST_SPLITS = 100
+
+
+@dataclass(frozen=True)
+class Halves:
+    """Half-splits of G folds, as they are and with each fold left out in turn.
+
+    Parameters
+    ----------
+    members : (S, G) bool
+        Folds of the first half of each split; the others are the second.
+    usable : (1 + G, S) bool
+        Whether both halves of a split can be estimated: with all folds, and without fold g.
+    weights : (2, 1 + G, S, G * p) float64
+        The effect of a half is this sum of the folds' x'z; 0 where not usable.
+    """
+
+    members: NDArray[np.bool_]
+    usable: NDArray[np.bool_]
+    weights: FloatArray
+
+
+def half_splits(n_folds: int, limit: int, random_state: int = 0) -> NDArray[np.bool_]:
+    """Ways to halve the folds: every one of them, or a random choice of `limit`.
+
+    Parameters
+    ----------
+    n_folds : int
+        2 or more. An odd number is split as evenly as can be.
+    limit : int
+    random_state : int
+
+    Returns
+    -------
+    (S, G) bool
+        Folds of the first half. No split appears twice, also not with its halves exchanged.
+    """
+    size = n_folds // 2
+    even = n_folds % 2 == 0
+    total = comb(n_folds, size) // (2 if even else 1)
+    if total <= max(limit, 1):
+        chosen = [c for c in combinations(range(n_folds), size) if not even or 0 in c]
+    else:
+        rng = np.random.default_rng(random_state)
+        found: dict[tuple[int, ...], None] = {}
+        while len(found) < limit:
+            half = np.sort(rng.permutation(n_folds)[:size])
+            if even and half[0] != 0:
+                half = np.setdiff1d(np.arange(n_folds), half)
+            found[tuple(half.tolist())] = None
+        chosen = list(found)
+    members = np.zeros((len(chosen), n_folds), bool)
+    for row, half in zip(members, chosen, strict=True):
+        row[list(half)] = True
+    return members
+
+
+def halves(
+    folds: Sequence[Moments], sizes: Sequence[int], contrast: FloatArray, members: NDArray[np.bool_]
+) -> Halves:
+    """Which splits can be estimated, and how the effects of their halves are put together.
+
+    Parameters
+    ----------
+    folds : sequence of G Moments
+        On voxels that every participant has, so that X'X is the same everywhere.
+    sizes : sequence of G int
+        Participants in each fold.
+    contrast : (p,)
+    members : (S, G) bool
+    """
+    xtx = np.array([fold.xtx[:, :, 0] for fold in folds])
+    n_folds, p = len(folds), len(contrast)
+    kept = np.vstack([np.ones(n_folds, bool), ~np.eye(n_folds, dtype=bool)])
+    usable = np.ones((1 + n_folds, len(members)), bool)
+    weights = np.zeros((2, 1 + n_folds, len(members), n_folds * p))
+    for half, inside in enumerate((members, ~members)):
+        taken = inside[None] & kept[:, None]
+        n = taken @ np.asarray(sizes)
+        total = np.einsum("dsg,gij->dsij", taken, xtx)
+        enough = n >= max(2, p + 1)
+        singular = np.linalg.matrix_rank(total, hermitian=True) < p
+        fine = enough & ~singular
+        usable &= fine
+        safe = np.where(fine[..., None, None], total, np.eye(p))
+        solved = np.linalg.solve(safe, np.broadcast_to(contrast[:, None], (*fine.shape, p, 1)))
+        weights[half] = (taken[..., None] * solved[..., None, :, 0]).reshape(*fine.shape, -1)
+    return Halves(members, usable, weights * usable[None, ..., None])
+
+
+def fold_sums(
+    folds: Sequence[Moments], placement: int, voxels: NDArray[np.integer[Any]]
+) -> FloatArray:
+    """The x'z of every fold at one placement, (G * p, V) in the order of `voxels`."""
+    return np.concatenate([fold.xtz[:, placement][:, voxels] for fold in folds])
+
+
+def cross_half_r(
+    reported: FloatArray, shifted: FloatArray, bounds: NDArray[np.integer[Any]], split: Halves
+) -> FloatArray:
+    """Spatial correlation of the reported map in one half with a shifted map in the other.
+
+    Parameters
+    ----------
+    reported, shifted : (G * p, V)
+        From `fold_sums`.
+    bounds : (B, 2) int
+        First and last + 1 voxel of each set of voxels that is looked at.
+    split : Halves
+
+    Returns
+    -------
+    (1 + G, B)
+        Mean over splits, and over which half holds the reported map; NaN without a usable split
+        or variation.
+    """
+    first, second = split.weights.reshape(2, -1, reported.shape[0])
+    result = np.full((split.usable.size, len(bounds)), np.nan)
+    for column, (start, stop) in enumerate(bounds):
+        if stop - start < 3:
+            continue
+        x, y = reported[:, start:stop], shifted[:, start:stop]
+        x = x - x.mean(axis=1, keepdims=True)
+        y = y - y.mean(axis=1, keepdims=True)
+        # rows of maps: the first and the second half's, of the reported and the shifted seed
+        cross, own_x, own_y = x @ y.T, x @ x.T, y @ y.T
+        r = [
+            _quotient(_form(a, cross, b), _form(a, own_x, a) * _form(b, own_y, b))
+            for a, b in ((first, second), (second, first))
+        ]
+        result[:, column] = (r[0] + r[1]) / 2
+    result[~split.usable.ravel()] = np.nan
+    return mean_defined(result.reshape(*split.usable.shape, -1), axis=1)
+
+
+def mean_defined(values: FloatArray, axis: int) -> FloatArray:
+    """Mean along an axis over what is no NaN; NaN where nothing is."""
+    known = ~np.isnan(values)
+    count = known.sum(axis=axis)
+    total = np.where(known, values, 0.0).sum(axis=axis)
+    return np.divide(total, count, out=np.full(total.shape, np.nan), where=count > 0)
+
+
+def _form(a: FloatArray, matrix: FloatArray, b: FloatArray) -> FloatArray:
+    """a' M b for every pair of rows."""
+    return np.einsum("mp,mp->m", a @ matrix, b)
+
+
+def _quotient(covariance: FloatArray, variances: FloatArray) -> FloatArray:
+    # a map that does not vary leaves rounding only
+    least = 1e-20 * variances.max(initial=0.0)
+    scale = np.sqrt(np.maximum(variances, 0))
+    out = np.full(covariance.shape, np.nan)
+    np.divide(covariance, scale, out=out, where=variances > least)
+    return np.clip(out, -1.0, 1.0)
