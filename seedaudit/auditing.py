@@ -83,8 +83,8 @@ def audit(
     if workers < 1:
         raise StudyError(Problem("workers", f"is {workers}", "1 or more"))
     progress = progress or Silence()
-    started = time.monotonic()
     plan = study if isinstance(study, Plan) else make_plan(study)
+    started = time.monotonic()
 
     # an equivalent design with orthonormal columns keeps the digits of the streamed sums
     matrix, contrast = orthonormal_design(plan.design.matrix, plan.design.contrast)

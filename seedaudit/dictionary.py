@@ -76,7 +76,7 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
         "shifted_high": ("upper end of that interval", ""),
         "relative": (
             "ceiling-relative stability, shifted over same: 1 where moving the seed costs nothing "
-            "beyond sampling; n/a where the ceiling is below 0.05",
+            "beyond sampling; n/a where the ceiling is below 0.05 or not above 0 beyond chance",
             "ratio",
         ),
         "relative_low": ("lower end of its 95 % interval", "ratio"),

@@ -195,7 +195,9 @@ def add_controls(
     axes, reverse = area.grid.canonical_axes
     # steps along the axes nearest to R, A and S, so that the storage order has no say
     steps = area.grid.affine[:3, list(axes)] * np.where(reverse, -1, 1)
-    shifts = area.xyz + rng.uniform(-0.5, 0.5, (len(area), 3)) @ steps.T - centre
+    places = area.xyz + rng.uniform(-0.5, 0.5, (len(area), 3)) @ steps.T
+    # rounded, so that what an affine loses in a header does not show
+    shifts = np.round(places, 3) - centre
     if snap:
         shifts = _snapped(shifts, voxels.grid)
     far = np.linalg.norm(shifts, axis=1) >= max(apart, CONTROL_DISTANCE)

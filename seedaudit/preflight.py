@@ -232,8 +232,8 @@ def _note_seed(plan: SeedPlan, regions: Regions | None, study: Study, findings: 
     dropped = int((~table["used"]).sum())
     if dropped:
         findings.warnings.append(
-            f"seed {name}: {dropped} of {int((~controls).sum()) - 1} placements are set aside, less "
-            f"than {study.placements.min_coverage:.0%} of their sphere lies in the mask"
+            f"seed {name}: {dropped} of {int((~controls).sum()) - 1} placements are set aside, "
+            f"less than {study.placements.min_coverage:.0%} of their sphere lies in the mask"
         )
     _note_controls(name, table[controls], study.placements, findings)
     reported_flags = table["flags"].iloc[0]

@@ -7,6 +7,7 @@ import os
 import shutil
 import tempfile
 from collections.abc import Callable, Mapping
+from io import StringIO
 from pathlib import Path
 from typing import Any
 
@@ -39,6 +40,9 @@ WORDS = (
     "note",
 )
 """Columns that hold text even where every cell looks like a number or is empty."""
+
+NUMBERS = (("tolerance", "target"),)
+"""Tables in which a column of such a name holds numbers after all."""
 
 Extra = Callable[[Audit, Path], None]
 
@@ -231,7 +235,7 @@ def _voxels_of(mask: nib.Nifti1Image) -> VoxelSet:
     return VoxelSet.from_mask(Grid(mask.shape, mask.affine), np.asarray(mask.dataobj) > 0)
 
 
-def write_table(path: Path, table: pd.DataFrame) -> None:
+def write_table(path: Path | StringIO, table: pd.DataFrame) -> None:
     """Write a BIDS table: tabs, `n/a` for missing, true and false in small letters."""
     shown = table.copy()
     for key in shown.columns:
@@ -252,16 +256,17 @@ def write_table(path: Path, table: pd.DataFrame) -> None:
 
 def read_table(path: Path) -> pd.DataFrame:
     """Read a table as `write_table` wrote it."""
+    words = [key for key in WORDS if (path.stem, key) not in NUMBERS]
     table = pd.read_csv(
         path,
         sep="\t",
         na_values=["n/a"],
         keep_default_na=False,
-        dtype={key: str for key in WORDS},
+        dtype={key: str for key in words},
         float_precision="round_trip",
     )
     for key in table.columns:
-        if key in WORDS:
+        if key in words:
             table[key] = table[key].fillna("n/a" if key == "state" else "")
         elif key == "used":
             table[key] = table[key].astype(bool)

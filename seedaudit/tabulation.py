@@ -12,6 +12,7 @@ from scipy import stats
 
 from seedaudit.consensus.cloud import CloudConsensus, Table
 from seedaudit.consensus.components import instability_influence
+from seedaudit.dictionary import COLUMNS
 from seedaudit.plan import Plan, SeedPlan
 from seedaudit.results import frozen_table
 from seedaudit.worth import Reach
@@ -98,7 +99,8 @@ def tables(
 
 def _frozen(table: str, seed: str, columns: dict[str, Any]) -> pd.DataFrame:
     """A table in which every row names the seed."""
-    rows = max((len(c) for c in columns.values() if not isinstance(c, str)), default=0)
+    columns = columns or {key: [] for key in COLUMNS[table] if key != "seed"}
+    rows = max(len(column) for column in columns.values() if not isinstance(column, str))
     return frozen_table(table, {"seed": [seed] * rows, **columns})
 
 
@@ -232,16 +234,22 @@ def _worth(found: Found, made: dict[str, pd.DataFrame]) -> dict[str, Any]:
         **found.reach.headline,
         "claims": {verdict: int((verdicts == verdict).sum()) for verdict in VERDICTS},
         "motion_rank_correlation": motion,
-        "notes": _notes(found, top is None),
+        "notes": _notes(found, relative[0]),
     }
 
 
-def _notes(found: Found, no_ceiling: bool) -> list[str]:
+def _notes(found: Found, relative: float | None) -> list[str]:
+    """What could not be told, and why."""
     notes = []
-    if no_ceiling:
+    if relative is None:
         notes.append(
             "no ceiling: it needs two halves of at least two participants that the model can be "
             "estimated in"
+        )
+    elif not np.isfinite(relative):
+        notes.append(
+            "no ceiling-relative stability: the reported map of one half of the participants is "
+            "not like that of the other half beyond chance, so nothing can be related to it"
         )
     if not len(found.control_rows):
         notes.append("no floor: there are no control seeds")

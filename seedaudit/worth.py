@@ -1,4 +1,4 @@
-"""What one seed's numbers are worth: claims, tolerance, and the seed against ceiling and floor."""
+"""What one seed's numbers are worth: the rule settled, the claims judged, how far it reaches."""
 
 from __future__ import annotations
 
@@ -23,7 +23,7 @@ from seedaudit.errors import DataError, Problem
 from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
 from seedaudit.inference.group import ThresholdRule, critical_values
 from seedaudit.inference.permutation import holm_adjusted, maximum_test
-from seedaudit.plan import PlannedClaim, Plan, SeedPlan
+from seedaudit.plan import Plan, PlannedClaim, SeedPlan
 from seedaudit.space.geometry import ball_mean_correlation
 from seedaudit.sweep.moments import Moments, merged
 
@@ -290,10 +290,9 @@ def _headline(tolerance: Table) -> dict[str, Any]:
                 "censored": bool(tolerance["censored"][row[0]]),
                 "most_fragile_direction": most_fragile(tolerance, measure),
             }
-    measure = next(iter(told), None)
-    first = told.get(measure or "", {})
+    first = next(iter(told.values()), {})
     return {
-        "tolerance_measure": measure,
+        "tolerance_measure": next(iter(told), None),
         "tolerance_target": first.get("target"),
         "tolerance_mm": first.get("mm"),
         "tolerance_censored": first.get("censored"),

@@ -14,13 +14,11 @@ import pytest
 
 from seedaudit.cli import main
 from seedaudit.store import load_audit
-from tests.bad_inputs import (
+from tests.bad_inputs import DATA_FAULTS, HEADER_FAULTS, Fault
+from tests.breaks import (
     AT,
-    DATA_FAULTS,
-    HEADER_FAULTS,
     MODEL,
     Break,
-    Fault,
     bold,
     both,
     cell,
@@ -300,8 +298,8 @@ def test_setting_aside_is_the_audit_of_the_others(try_it):
     expected = without.table("similarity")
     shutil.rmtree(without.folder / "audit")
     row = ["sub-04", "1", bold(without.folder, 4).name, "sub-04_task-rest_run-1_timeseries.tsv"]
-    outcome = try_it("run", both(
-        table("runs.tsv", lambda rows: rows.append(row)), stored(4, corrupt), SET_ASIDE))  # fmt: skip
+    again = table("runs.tsv", lambda rows: rows.append(row))
+    outcome = try_it("run", both(again, stored(4, corrupt), SET_ASIDE))
     assert outcome.code == 4
     pd.testing.assert_frame_equal(outcome.table("similarity"), expected, rtol=1e-6)
 

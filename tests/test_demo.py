@@ -125,6 +125,16 @@ def test_planted_direction_is_the_most_damaging(result, truth):
         assert others.min() - median.min() > 0.1
 
 
+@pytest.mark.parametrize("measure", ["dice_negative", "ceiling_relative"])
+def test_most_fragile_direction(result, truth, measure):
+    """The tolerances name the planted direction, by the measures that fall across the border."""
+    found = result.summary["seeds"][0]["tolerances"][measure]
+    assert found["most_fragile_direction"] == truth["border"]["direction"]
+    decay = result.table("decay")
+    farthest = decay[decay["measure"] == measure].groupby("direction")["fitted"].last()
+    assert farthest.idxmin() == truth["border"]["direction"]
+
+
 def test_planted_connections_as_reported(result, truth):
     """Signs of the reported effects; clear connections have an interval without 0."""
     expected = truth["points"]["reported"]["expected"]

@@ -107,8 +107,10 @@ def whole_job(folder: Path, **options) -> SimpleNamespace:
     small = write_small_study(folder, **options)
     plan = make_plan(Study.load(small.study_file))
     result = audit(plan, workers=2)
-    centres = result.placements[["x", "y", "z"]].to_numpy()
-    assert result.placements["used"].all()
+    # the reported placement and its cloud; control seeds elsewhere are no part of it
+    cloud = result.placements[result.placements["kind"] != "control"]
+    assert cloud["used"].all()
+    centres = cloud[["x", "y", "z"]].to_numpy()
     z = np.array([participant_map(small, name, centres) for name in small.runs])
     complete = np.isfinite(z).all(axis=(0, -1))
     ijk = np.argwhere(complete)
@@ -164,7 +166,7 @@ def test_seed_series(mean_study):
     """
     plan, small = mean_study.plan, mean_study.small
     task = plan.participants[0].runs[0]
-    weights = plan.seeds[0].cloud.weights
+    weights = plan.seeds[0].cloud.weights[: len(mean_study.centres)]
     run, _, _ = load_run(task, plan.cleaning, plan.voxels)
     masker = NiftiSpheresMasker(
         mean_study.centres, radius=RADIUS, mask_img=load64(small.mask_file), allow_overlap=True,
@@ -310,8 +312,8 @@ def test_low_end_of_the_band(n_volumes, t_r, removed):
     np.testing.assert_allclose(residual, expected - expected.mean(axis=0), atol=1e-9)
 
 
-def demo_run(row, mask, at, radius) -> tuple[np.ndarray, int]:
-    """z map of one demo run cleaned by nilearn as its study file says, and residual df."""
+def demo_run(row, mask, at, radius) -> tuple[np.ndarray, int, int]:
+    """z map of one demo run cleaned by nilearn as its study file says, residual df, censored."""
     table = confound_table(DEMO / row.confounds, "^(trans_.|rot_.|csf$)")
     motion = confound_table(DEMO / row.confounds, "^framewise_displacement$").iloc[:, 0]
     image = load64(DEMO / row.bold)
@@ -328,7 +330,7 @@ def demo_run(row, mask, at, radius) -> tuple[np.ndarray, int]:
         image, mask, [at], radius, detrend=False, confounds=columns, sample_mask=kept
     )[..., 0]  # fmt: skip
     rank = np.linalg.matrix_rank(np.column_stack([np.ones(n_volumes), columns])[kept])
-    return z, len(kept) - rank
+    return z, len(kept) - rank, int(censored.sum())
 
 
 def test_band_confounds_and_censoring(tmp_path):
@@ -347,14 +349,14 @@ def test_band_confounds_and_censoring(tmp_path):
     content["placements"] |= {"count": 3}
     result = audit(Study.from_mapping(content, DEMO))
     mask = load64(DEMO / "mask.nii.gz")
-    parts = [
-        demo_run(row, mask, study.seed[0].at, study.seed[0].radius) for row in rows.itertuples()
-    ]
-    freedom = [df for _, df in parts]
-    expected = np.average([z for z, _ in parts], axis=0, weights=np.array(freedom) - 3)
+    at, radius = study.seed[0].at, study.seed[0].radius
+    maps, freedom, censored = zip(
+        *(demo_run(row, mask, at, radius) for row in rows.itertuples()), strict=True
+    )
+    expected = np.average(maps, axis=0, weights=np.array(freedom) - 3)
     participant = result.table("participants").iloc[0]
     assert participant["residual_df"] == sum(freedom)
-    assert participant["n_censored"] > 0
+    assert participant["n_censored"] == sum(censored) > 0
     inside = result.maps["analysis_mask"].get_fdata() > 0
     found = result.maps["effect_reported"].get_fdata()[inside]
     np.testing.assert_allclose(found, expected[inside], atol=1e-5)

@@ -47,7 +47,7 @@ def test_files_of_the_folder(folder):
     """CONTRACT: the files, a data dictionary beside each table, a description beside each map."""
     names = {
         "summary.json", "provenance.json", "dataset_description.json", "methods.md",
-        "figure.pdf", "figure.svg", "figure.png", "figure_caption.md", "tables", "maps",
+        "figure.pdf", "figure.svg", "figure.png", "figure_caption.md", "report.html", "tables", "maps",
     }  # fmt: skip
     assert {path.name for path in folder.iterdir()} == names
     for table in (folder / "tables").glob("*.tsv"):

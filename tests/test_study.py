@@ -19,7 +19,7 @@ from seedaudit.cli import main
 from seedaudit.errors import StudyError
 from seedaudit.store import load_audit
 from seedaudit.study import Study
-from tests.bad_inputs import Break, both, image, put, swap
+from tests.breaks import Break, both, image, put, swap
 from tests.small_brain import SEED_AT
 from tests.small_study import write_small_study
 
@@ -361,7 +361,7 @@ def test_cleaning_is_counted(audited):
                 "cleaning",
                 "band = [0.02, 0.25]",
                 "smooth = 6.0",
-                'censor = { column = "framewise_displacement", above = 0.25, before = 0, after = 0 }',
+                'censor = { column = "framewise_displacement", above = 0.25 }',
             ),
             swap(*SHORT),
         )

@@ -3,6 +3,10 @@
 The similarity of the reported map in one half of the participants to the reported map in the
 other half is as good as these data allow. The same with a shifted map in the other half, divided
 by it, is the ceiling-relative stability: 1 where moving the seed costs nothing beyond sampling.
+
+Half as many participants pass a test of significance at far fewer voxels, which says nothing
+about the seed. So the class maps of halves are cut by t to the sizes, tail by tail, that the
+placement's map has with all participants.
 """
 
 from __future__ import annotations
@@ -26,8 +30,7 @@ from seedaudit.consensus.halves import (
 )
 from seedaudit.consensus.overlap import dice
 from seedaudit.consensus.resampling import delete_fold_interval
-from seedaudit.inference.glm import uniform_estimate
-from seedaudit.inference.group import Classifier
+from seedaudit.inference.glm import Estimate, uniform_estimate
 from seedaudit.sweep.moments import Moments, merged
 
 FloatArray = NDArray[np.float64]
@@ -36,13 +39,13 @@ Classes = NDArray[np.int8]
 MEASURES = ("spatial_r", "ac1", "dice_positive", "dice_negative")
 
 CLASS_SPLITS = 4
-"""Half-splits that class maps are made for; each needs the maps of ten halves."""
+"""Half-splits that class maps are made for; each takes the maps of 2 + G halves."""
 
 CLASS_PLACEMENTS = 24
 """Drawn placements that class maps of halves are made for, evenly spread over all of them."""
 
 LEAST_CEILING = 0.05
-"""Below this similarity of the reported map to itself nothing can be related to it."""
+"""Below this similarity of the reported map to itself nothing is related to it."""
 
 
 @dataclass(frozen=True)
@@ -75,10 +78,10 @@ def ceiling(
     folds: Sequence[Moments],
     sizes: Sequence[int],
     contrast: FloatArray,
+    voxels: NDArray[np.bool_],
+    classes: Classes,
     regions: NDArray[np.integer[Any]],
     n_regions: int,
-    classes_of: Classifier,
-    voxels: NDArray[np.integer[Any]],
     *,
     controls: Sequence[Moments] = (),
     control_keep: NDArray[np.bool_] | None = None,
@@ -93,14 +96,14 @@ def ceiling(
     sizes : sequence of int
         Participants in each fold.
     contrast : (p,)
+    voxels : (V,) bool
+        A voxels that every participant has.
+    classes : (1 + N, A) int8
+        Classes of all participants' maps, whose sizes the maps of halves are given.
     regions : (A,) int
-        Position of the region of each voxel of `voxels`, -1 for none.
+        Position of the region of each of these voxels, -1 for none.
     n_regions : int
         K
-    classes_of : callable
-        Makes classes of the A voxels; see `seedaudit.inference.group.classifier`.
-    voxels : (A,) int
-        Voxels of the moments that every participant has.
     controls : sequence of Moments, optional
         The same folds for the control seeds.
     control_keep : (C, A) bool
@@ -116,46 +119,57 @@ def ceiling(
     """
     kept = [g for g, size in enumerate(sizes) if size]
     folds, sizes = [folds[g] for g in kept], [sizes[g] for g in kept]
-    if len(folds) < 2 or not len(voxels) or folds[0].variance is not None:
+    if len(folds) < 2 or not voxels.any() or folds[0].variance is not None:
         return None
     members = half_splits(len(folds), MOST_SPLITS, random_state)
-    split = halves([fold.voxels(voxels[:1]) for fold in folds], sizes, contrast, members)
-    if not split.usable[0].any():
-        return None
-    r = _spatial(folds, voxels, regions, n_regions, split)
-    values = {"spatial_r": (r[0], r[1:].mean(axis=0))}
+    xtx = np.array([fold.xtx[:, :, voxels.argmax()] for fold in folds])
+    split = halves(xtx, sizes, contrast, members)
     some = np.flatnonzero(split.usable[0])
-    picked = some[np.linspace(0, len(some) - 1, min(CLASS_SPLITS, len(some))).round().astype(int)]
-    n_drawn = folds[0].zz.shape[0] - 1
-    chosen = np.unique(np.linspace(1, n_drawn, min(CLASS_PLACEMENTS, n_drawn)).round().astype(int))
+    if not len(some):
+        return None
+    rows = np.flatnonzero(voxels)
+    r = _spatial(folds, rows, regions, n_regions, split)
+    picked = some[_spread(len(some), CLASS_SPLITS)]
+    chosen = 1 + _spread(len(classes) - 1, CLASS_PLACEMENTS)
     by_class = class_similarity(
-        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, regions, n_regions,
-        classes_of, members[picked],
+        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, classes, regions, n_regions,
+        members[picked],
     )  # fmt: skip
+    values = {"spatial_r": (r[0], r[1:].mean(axis=0))}
     for name, found in by_class.items():
         values[name] = found[:, 0], mean_defined(found[:, 1:], axis=1)
-    floor = [
-        cross_half_r(
-            fold_sums(folds, 0, voxels[keep]),
-            fold_sums([fold.placements(slice(c, c + 1)) for fold in controls], 0, voxels[keep]),
-            np.array([[0, np.count_nonzero(keep)]]),
-            split,
-        )[0, 0]
-        for c, keep in enumerate([] if control_keep is None else control_keep)
-    ]
+    floor = np.array(
+        [
+            cross_half_r(
+                fold_sums(folds, 0, rows[keep]),
+                fold_sums(controls, c, rows[keep]),
+                np.array([[0, np.count_nonzero(keep)]]),
+                split,
+            )[0, 0]
+            for c, keep in enumerate([] if control_keep is None else control_keep)
+        ]
+    )
     same = {name: _interval(found[0], sizes) for name, found in values.items()}
     shifted = {name: _interval(found[1], sizes) for name, found in values.items()}
-    relative = {name: _interval(_ratio(b, a), sizes, np.inf) for name, (a, b) in values.items()}
-    whole = r[0, 0, 0]
+    relative = {
+        name: _interval(_ratio(b, a, _known(same[name])), sizes, np.inf)
+        for name, (a, b) in values.items()
+    }
+    whole, known = r[0, 0, 0], _known(same["spatial_r"])[0]
     return Ceiling(
-        same, shifted, relative, _ratio(r[1:, 0, 0], whole), _ratio(np.array(floor), whole),
-        int(split.usable[0].sum()), len(picked), len(chosen),
+        same, shifted, relative, _ratio(r[1:, 0, 0], whole, known), _ratio(floor, whole, known),
+        len(some), len(picked), len(chosen),
     )  # fmt: skip
+
+
+def _spread(total: int, most: int) -> NDArray[np.int_]:
+    """Up to `most` positions evenly spread over `total`."""
+    return np.unique(np.linspace(0, total - 1, min(most, total)).round().astype(int))
 
 
 def _spatial(
     folds: Sequence[Moments],
-    voxels: NDArray[np.integer[Any]],
+    rows: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     split: Halves,
@@ -164,10 +178,10 @@ def _spatial(
     order = np.argsort(regions, kind="stable")
     edges = np.searchsorted(regions[order], np.arange(n_regions + 1))
     bounds = np.vstack([[0, len(order)], np.stack([edges[:-1], edges[1:]], axis=1)])
-    reported = fold_sums(folds, 0, voxels[order])
+    reported = fold_sums(folds, 0, rows[order])
     return np.array(
         [
-            cross_half_r(reported, fold_sums(folds, i, voxels[order]), bounds, split)
+            cross_half_r(reported, fold_sums(folds, i, rows[order]), bounds, split)
             for i in range(folds[0].zz.shape[0])
         ]
     )
@@ -178,10 +192,10 @@ def class_similarity(
     sizes: Sequence[int],
     contrast: FloatArray,
     placements: NDArray[np.integer[Any]],
-    voxels: NDArray[np.integer[Any]],
+    voxels: NDArray[np.bool_],
+    classes: Classes,
     regions: NDArray[np.integer[Any]],
     n_regions: int,
-    classes_of: Classifier,
     members: NDArray[np.bool_],
 ) -> dict[str, FloatArray]:
     """AC1 and Dice between the classes of two halves, as in `ceiling`.
@@ -204,8 +218,9 @@ def class_similarity(
     reported: list[dict[tuple[int, int], Classes | None]] = []
     for m, placement in enumerate(placements):
         parts = [fold.placements(slice(placement, placement + 1)).voxels(voxels) for fold in folds]
+        tails = [int((classes[placement] == sign).sum()) for sign in (1, -1)]
         for s, inside in enumerate(members):
-            here = _half_classes(parts, sizes, contrast, inside, classes_of)
+            here = _half_classes(parts, sizes, contrast, inside, tails)
             if m == 0:
                 reported.append(here)
             for variant in range(1 + len(folds)):
@@ -223,32 +238,37 @@ def _half_classes(
     sizes: Sequence[int],
     contrast: FloatArray,
     inside: NDArray[np.bool_],
-    classes_of: Classifier,
+    tails: Sequence[int],
 ) -> dict[tuple[int, int], Classes | None]:
-    """Classes by half and variant: 0 has all folds, variant 1 + g is without fold g."""
+    """Classes by half and variant: 0 has all folds, variant 1 + g is without fold g.
+
+    None where a half is too small for the design.
+    """
     made: dict[tuple[int, int], Classes | None] = {}
     for half, chosen in enumerate((inside, ~inside)):
-        total = merged([parts[g] for g in np.flatnonzero(chosen)])
+        total = merged(part for part, taken in zip(parts, chosen, strict=True) if taken)
         n = int(np.asarray(sizes)[chosen].sum())
-        made[half, 0] = _classes(total, n, contrast, classes_of)
+        made[half, 0] = _classes(uniform_estimate(total, n, contrast), tails)
         for g, part in enumerate(parts):
-            made[half, 1 + g] = (
-                _classes(total - part, n - sizes[g], contrast, classes_of)
-                if chosen[g]
-                else made[half, 0]
-            )
+            made[half, 1 + g] = made[half, 0]
+            if chosen[g]:
+                rest = uniform_estimate(total - part, n - sizes[g], contrast)
+                made[half, 1 + g] = _classes(rest, tails)
     return made
 
 
-def _classes(
-    moments: Moments, n: int, contrast: FloatArray, classes_of: Classifier
-) -> Classes | None:
-    """Classes of one placement; None where the half is too small for the design."""
-    estimate = uniform_estimate(moments, n, contrast)
+def _classes(estimate: Estimate | None, tails: Sequence[int]) -> Classes | None:
+    """The so many largest t as class +, and the so many smallest as class -."""
     if estimate is None:
         return None
-    df = np.asarray(float(n - len(contrast)))
-    return classes_of(estimate.statistic, estimate.effect, df)
+    t = np.nan_to_num(estimate.statistic)
+    positive, negative = tails
+    ranks = [len(t) - max(positive, 1), max(negative, 1) - 1]
+    upper, lower = np.partition(t, ranks)[ranks]
+    # no class against the sign, also where the half has fewer voxels of it
+    above = (t >= upper) & (t > 0) & (positive > 0)
+    below = (t <= lower) & (t < 0) & (negative > 0)
+    return above.astype(np.int8) - below
 
 
 def _measures(
@@ -270,11 +290,20 @@ def _measures(
     }
 
 
-def _ratio(shifted: FloatArray, same: FloatArray | float) -> FloatArray:
+def _known(same: FloatArray) -> NDArray[np.bool_]:
+    """Where the reported map is like itself at all: its similarity is of some size, and above 0
+    beyond chance as far as an interval can be told.
+    """
+    return np.asarray((same[0] >= LEAST_CEILING) & ~(same[1] <= 0))
+
+
+def _ratio(
+    shifted: FloatArray, same: FloatArray | float, known: NDArray[np.bool_] | bool
+) -> FloatArray:
     """Shifted over same; NaN where the ceiling is too low for it to mean anything."""
     same = np.broadcast_to(np.asarray(same, dtype=np.float64), np.shape(shifted))
     out = np.full(np.shape(shifted), np.nan)
-    return np.asarray(np.divide(shifted, same, out=out, where=same >= LEAST_CEILING))
+    return np.asarray(np.divide(shifted, same, out=out, where=known & (same > 0)))
 
 
 def _interval(values: FloatArray, sizes: Sequence[int], most: float = 1.0) -> FloatArray:

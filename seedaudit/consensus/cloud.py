@@ -177,7 +177,8 @@ def conclude(
     whole, by_region = _without_each_fold(
         kept, folds, fold_sizes, design, voxels, classes_of, labels, space.index
     )
-    complete = np.flatnonzero(voxels)[kept.count == len(design.matrix)]
+    complete = voxels.copy()
+    complete[voxels] = kept.count == len(design.matrix)
     del kept
     counts = class_counts(maps.classes[1:])
     stability = gwet_ac1(counts)
@@ -191,7 +192,18 @@ def conclude(
         design.matrix, region_means[:, 0], design.contrast, design.strata,
         random_state=random_state,
     )  # fmt: skip
-    top = _ceiling(folds, fold_sizes, design, space, rule, complete, controls, random_state)
+    top = ceiling(
+        folds,
+        fold_sizes,
+        design.contrast,
+        complete,
+        maps.classes[:, complete[voxels]],
+        region_rows(space.labels[complete], space.index),
+        len(space.index),
+        controls=controls.folds,
+        control_keep=controls.keep[:, complete],
+        random_state=random_state,
+    )
     return CloudConsensus(
         voxels,
         _maps(maps, counts, safe),
@@ -216,31 +228,6 @@ def conclude(
     )  # fmt: skip
 
 
-def _ceiling(
-    folds: Sequence[Moments],
-    fold_sizes: Sequence[int],
-    design: GroupDesign,
-    space: Space,
-    rule: ThresholdRule,
-    complete: NDArray[np.int_],
-    controls: Controls,
-    random_state: int,
-) -> Ceiling | None:
-    """Halves of the participants, on the voxels that everybody has."""
-    return ceiling(
-        folds,
-        fold_sizes,
-        design.contrast,
-        region_rows(space.labels[complete], space.index),
-        len(space.index),
-        classifier(rule, space.ijk[complete], space.shape),
-        complete,
-        controls=controls.folds,
-        control_keep=controls.keep[:, complete],
-        random_state=random_state,
-    )
-
-
 def _controls(
     controls: Controls,
     design: GroupDesign,
@@ -258,10 +245,10 @@ def _smoothness(
     fold_sizes: Sequence[int],
     design: GroupDesign,
     space: Space,
-    complete: NDArray[np.int_],
+    complete: NDArray[np.bool_],
 ) -> float:
     used = [fold for fold, size in zip(folds, fold_sizes, strict=True) if size]
-    if len(design.matrix) <= design.matrix.shape[1] or len(used) < 2 or not len(complete):
+    if len(design.matrix) <= design.matrix.shape[1] or len(used) < 2 or not complete.any():
         return float("nan")
     residuals = fold_residuals(used, complete)
     return residual_smoothness(residuals, space.ijk[complete], space.shape, space.steps)

@@ -64,7 +64,7 @@ def control_similarity(
     return {name: np.array(values, dtype=np.float64) for name, values in columns.items()}
 
 
-def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.integer[Any]]) -> FloatArray:
+def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.bool_]) -> FloatArray:
     """Residuals of the group model at the reported placement, summed within folds.
 
     The part X'(z - X b) of each fold, b being the estimate of all folds, is a sum of participants'
@@ -73,8 +73,8 @@ def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.integer[Any]]) -
     Parameters
     ----------
     folds : sequence of G Moments
-    voxels : (A,) int
-        Voxels that every participant has.
+    voxels : (V,) bool
+        A voxels that every participant has.
 
     Returns
     -------

@@ -65,10 +65,10 @@ def half_splits(n_folds: int, limit: int, random_state: int = 0) -> NDArray[np.b
         rng = np.random.default_rng(random_state)
         found: dict[tuple[int, ...], None] = {}
         while len(found) < limit:
-            half = np.sort(rng.permutation(n_folds)[:size])
-            if even and half[0] != 0:
-                half = np.setdiff1d(np.arange(n_folds), half)
-            found[tuple(half.tolist())] = None
+            drawn = set(rng.permutation(n_folds)[:size].tolist())
+            if even and 0 not in drawn:
+                drawn = set(range(n_folds)) - drawn
+            found[tuple(sorted(drawn))] = None
         chosen = list(found)
     members = np.zeros((len(chosen), n_folds), bool)
     for row, half in zip(members, chosen, strict=True):
@@ -77,21 +77,20 @@ def half_splits(n_folds: int, limit: int, random_state: int = 0) -> NDArray[np.b
 
 
 def halves(
-    folds: Sequence[Moments], sizes: Sequence[int], contrast: FloatArray, members: NDArray[np.bool_]
+    xtx: FloatArray, sizes: Sequence[int], contrast: FloatArray, members: NDArray[np.bool_]
 ) -> Halves:
     """Which splits can be estimated, and how the effects of their halves are put together.
 
     Parameters
     ----------
-    folds : sequence of G Moments
-        On voxels that every participant has, so that X'X is the same everywhere.
+    xtx : (G, p, p)
+        X'X of each fold, where every participant has the voxel.
     sizes : sequence of G int
         Participants in each fold.
     contrast : (p,)
     members : (S, G) bool
     """
-    xtx = np.array([fold.xtx[:, :, 0] for fold in folds])
-    n_folds, p = len(folds), len(contrast)
+    n_folds, p = len(xtx), len(contrast)
     kept = np.vstack([np.ones(n_folds, bool), ~np.eye(n_folds, dtype=bool)])
     usable = np.ones((1 + n_folds, len(members)), bool)
     weights = np.zeros((2, 1 + n_folds, len(members), n_folds * p))

@@ -205,14 +205,13 @@ def voxel_sampling_error(
     Parameters
     ----------
     sums : (G, M, B)
-        Voxels in the order of `evenly_spread`.
     around : Neighbourhoods
     candidate : int
         A candidate.
     population : int
         Voxels that the B were taken from.
     groups : int
-        Groups of voxels, each evenly spread itself, that are left out in turn.
+        Random groups of voxels that are left out in turn.
 
     Returns
     -------
@@ -223,13 +222,15 @@ def voxel_sampling_error(
     Notes
     -----
     Delete-a-group jackknife with the correction for a finite population, as in Wolter K.M. (2007)
-    Introduction to Variance Estimation, ch. 4.
+    Introduction to Variance Estimation, ch. 4. It is that of a random sample; an even one errs
+    less, if anything.
     """
     n_voxels = sums.shape[2]
     groups = min(groups, n_voxels // 2)
     if groups < 2:
         return float("nan"), float("nan")
-    member = np.arange(n_voxels) % groups
+    # at random, so that no regularity of the selection hides in the groups
+    member = np.random.default_rng(0).permutation(n_voxels) % groups
     means: list[FloatArray] = []
     for c in (candidate, 0):
         near = around.points[around.starts[c] : around.starts[c + 1]]

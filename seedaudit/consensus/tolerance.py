@@ -1,4 +1,4 @@
-"""How far a seed can be moved: monotone decay of a similarity, and where it falls below a target."""
+"""How far a seed can be moved: monotone decay of similarity, and where it falls below a target."""
 
 from __future__ import annotations
 

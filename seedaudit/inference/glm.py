@@ -142,9 +142,10 @@ def uniform_estimate(moments: Moments, n: int, contrast: NDArray[np.float64]) ->
     p = len(contrast)
     if n <= p or 1 / np.linalg.cond(xtx) <= SINGULAR:
         return None
-    weights = np.linalg.solve(xtx, contrast)
+    inverse = np.linalg.inv(xtx)
+    weights = inverse @ contrast
     effect = weights @ xtz
-    explained = np.einsum("iv,iv->v", xtz, np.linalg.solve(xtx, xtz))
+    explained = np.einsum("iv,iv->v", xtz, inverse @ xtz)
     residual = np.maximum(moments.zz[0] - explained, 0)
     standard_error = np.sqrt(residual / (n - p) * (weights @ contrast))
     statistic = np.full_like(effect, np.nan)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -233,13 +232,13 @@ def _step_up_cut(
     above because the map is monotone. Counting on the t scale needs one quantile per step and df
     in place of one p per voxel.
     """
-    first = magnitude >= _two_sided_quantile(level, dfs)[which]
-    group = np.broadcast_to(which, magnitude.shape)[first]
-    survivors = magnitude[first]
-    order = np.lexsort((survivors, group)) if dfs.size > 1 else np.argsort(survivors)
-    bounds = np.searchsorted(group[order], np.arange(dfs.size + 1))
-    ascending = [survivors[order[a:b]] for a, b in pairwise(bounds)]
-    k, passing = count, survivors.size
+    first = _two_sided_quantile(level, dfs)
+    if dfs.size == 1:
+        ascending = [np.sort(magnitude[magnitude >= first[0]])]
+    else:
+        passes = magnitude >= first[which]
+        ascending = [np.sort(magnitude[passes & (which == d)]) for d in range(dfs.size)]
+    k, passing = count, sum(part.size for part in ascending)
     while passing < k:
         k = passing
         values = _two_sided_quantile(k * level / count, dfs)

@@ -9,8 +9,14 @@ if TYPE_CHECKING:
     from seedaudit.results import Audit
 
 
+CAUTION = (
+    "Research use. A seed that feeds stimulation or surgical targeting, or any decision on a "
+    "person's care, needs validated clinical software and licensed practice; local rules decide."
+)
+
+
 def write_report(audit: Audit, folder: Path) -> None:
-    """Write the figure, its caption and the methods text of every seed.
+    """Write the explorer, the figure, its caption and the methods text of every seed.
 
     Parameters
     ----------
@@ -19,6 +25,7 @@ def write_report(audit: Audit, folder: Path) -> None:
         The result folder; with several seeds, each has a folder of its own in it.
     """
     # imported here: matplotlib is slow to load, and most commands draw nothing
+    from seedaudit.report.explorer import write_explorer
     from seedaudit.report.figures import save_figure
     from seedaudit.report.methods import plain
     from seedaudit.report.words import alternative_text, caption, methods_text
@@ -27,6 +34,7 @@ def write_report(audit: Audit, folder: Path) -> None:
     for seed in audit.seeds:
         own = seed_folder(audit, folder, seed.name)
         own.mkdir(parents=True, exist_ok=True)
+        write_explorer(seed, audit, own)
         save_figure(seed, own)
         texts = {
             "figure_caption.md": (

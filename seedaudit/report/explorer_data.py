@@ -10,16 +10,28 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
+from matplotlib import colormaps
+from matplotlib.colors import Colormap, LinearSegmentedColormap, to_rgb
 from numpy.typing import NDArray
 
 from seedaudit.consensus.lowrank import LowRank, packed
 from seedaudit.report.slices import body_frame, contested_places, grid_of
-from seedaudit.report.style import DIVERGING, INK, PALE, SOFT
+from seedaudit.report.style import ANATOMY, DIVERGING, INK
 from seedaudit.results import SeedAudit
 from seedaudit.space.grid import Grid, VoxelSet
 
-DARK_DIVERGING = ("#b3c4ff", "#5b74cf", "#3b3a40", "#bd6b22", "#ffc078")
+_DARK_DIVERGING = LinearSegmentedColormap.from_list(
+    "seedaudit-dark", ["#b3c4ff", "#5b74cf", "#3b3a40", "#bd6b22", "#ffc078"], N=511
+)
 """The diverging map for dark paper: its ends are bright there, its middle is dark."""
+_DARK_ANATOMY = LinearSegmentedColormap.from_list(
+    "seedaudit-dark-anatomy",
+    [(0.0, "#15171b"), (0.05, "#6e7078"), (0.4, "#53555c"), (1.0, "#26282d")],
+)
+LEVELS = 64
+"""Shades of one class."""
+FAINTEST = 0.34
+"""Part of a side of the diverging map that is left out: what passes a cut must not look neutral."""
 
 GREYS = 63
 """Levels of the anatomy; more cannot be told apart under a map and cost space."""
@@ -29,22 +41,16 @@ NEARLY = 1e-4
 """Shorter shifts are no shift, mm."""
 
 
-def page_data(seed: SeedAudit, room: float) -> tuple[dict[str, Any], dict[str, str]]:
-    """The numbers of a page, and its arrays as base64 text.
-
-    Parameters
-    ----------
-    seed : SeedAudit
-    room : float
-        Characters that the arrays may take; as many components are written as fit.
+def page_data(seed: SeedAudit) -> tuple[dict[str, Any], dict[str, str]]:
+    """The numbers of a page, and its arrays as base64 text, all but the placement maps.
 
     Returns
     -------
     numbers : dict, ready for JSON
         Missing numbers are None.
     arrays : dict of str
-        Each is base64 of a zlib stream of bytes; those whose name starts with `map` hold
-        differences of successive signed bytes, `regions` unsigned 16-bit words, little-endian.
+        Each is base64 of a zlib stream of bytes; `regions` holds unsigned 16-bit words,
+        little-endian.
     """
     mask = seed.maps["analysis_mask"]
     grid = grid_of(mask)
@@ -80,25 +86,50 @@ def page_data(seed: SeedAudit, room: float) -> tuple[dict[str, Any], dict[str, s
         "placements": placement_list(seed),
         "regions": _region_list(seed.tables["regions"]),
         "places": [{"at": place.at, "voxels": place.n_voxels} for place in contested_places(seed)],
-        "colours": {
-            "light": {"ends": [DIVERGING(t) for t in (0.0, 0.25, 0.5, 0.75, 1.0)]},
-            "dark": {"ends": list(DARK_DIVERGING)},
-            "ink": [INK, SOFT, PALE],
-        },
+        "colours": page_colours(),
     }
-    numbers["colours"]["light"]["ends"] = [
-        "#" + "".join(f"{round(part * 255):02x}" for part in colour[:3])
-        for colour in numbers["colours"]["light"]["ends"]
-    ]
-    if seed.placement_maps is not None and len(voxels):
-        kept, maps = _fitting(seed.placement_maps, room - sum(map(len, arrays.values())))
-        arrays |= maps
-        numbers["maps"] = {
-            "steps": kept.steps.tolist(),
-            "weights": [[float(f"{w:.7g}") for w in row] for row in kept.weights],
-            "error": kept.error,
-        }
     return json_ready(numbers), arrays
+
+
+def map_arrays(maps: LowRank) -> list[str]:
+    """The mean and each component as base64 of a zlib stream.
+
+    The stream holds differences of successive signed bytes.
+    """
+    return [base64.b64encode(packed(codes)).decode() for codes in maps.codes]
+
+
+def map_numbers(maps: LowRank) -> dict[str, Any]:
+    """What the page needs to put the arrays of `map_arrays` together."""
+    return {
+        "steps": maps.steps.tolist(),
+        "weights": [[float(f"{weight:.7g}") for weight in row] for row in maps.weights],
+        "error": maps.error,
+    }
+
+
+def page_colours() -> dict[str, Any]:
+    """The colours that the page draws with, each as red, green, blue of 0 to 255."""
+    sides = 0.5 * np.linspace(FAINTEST, 1, LEVELS)
+
+    def theme(diverging: Colormap, anatomy: Colormap, ink: str, hatch: str) -> dict[str, Any]:
+        return {
+            "plus": _rgb(diverging(0.5 + sides)),
+            "minus": _rgb(diverging(0.5 - sides)),
+            "greys": _rgb(anatomy(np.linspace(0, 1, GREYS + 1))),
+            "ink": _rgb([to_rgb(ink)])[0],
+            "hatch": _rgb([to_rgb(hatch)])[0],
+        }
+
+    return {
+        "light": theme(DIVERGING, ANATOMY, INK, "#ffffff"),
+        "dark": theme(_DARK_DIVERGING, _DARK_ANATOMY, "#f1efe9", "#15171b"),
+        "cividis": _rgb(colormaps["cividis"](np.linspace(0, 1, LEVELS))),
+    }
+
+
+def _rgb(colours: Any) -> list[list[int]]:
+    return np.rint(np.asarray(colours)[..., :3] * 255).astype(int).tolist()
 
 
 class _Box:
@@ -133,18 +164,6 @@ def _row_of(labels: NDArray[Any], index: NDArray[np.int_]) -> NDArray[np.int_]:
     order = np.argsort(index)
     found = order[np.clip(np.searchsorted(index[order], labels), 0, len(index) - 1)]
     return np.where(index[found] == labels, found, -1)
-
-
-def _fitting(maps: LowRank, room: float) -> tuple[LowRank, dict[str, str]]:
-    """As many components as there is room for, and their arrays."""
-    arrays: dict[str, str] = {}
-    for number, codes in enumerate(maps.codes):
-        text = base64.b64encode(packed(codes)).decode()
-        room -= len(text)
-        if room < 0 and number:
-            break
-        arrays[f"map{number}"] = text
-    return maps.first(len(arrays) - 1), arrays
 
 
 def placement_list(seed: SeedAudit) -> list[dict[str, Any]]:

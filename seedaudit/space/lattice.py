@@ -5,13 +5,14 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 from scipy.spatial import KDTree
 
 from seedaudit.errors import Problem, StudyError
+from seedaudit.space.grid import VoxelSet
 
 _SLACK = 1e-6  # mm; both balls are closed, and rounding must not open them
-_BITS = 20  # of each axis in a place on the curve: a million voxels along an axis
+_GOLDEN = 1.2207440846057596
 
 
 @dataclass(frozen=True)
@@ -128,39 +129,29 @@ def neighbourhoods(
     )
 
 
-def evenly_spread(xyz: ArrayLike, count: int, step: float) -> NDArray[np.int64]:
-    """Take about `count` voxels, evenly spread in space.
-
-    The voxels are put in order along a curve that fills space, and every k-th is taken, from the
-    middle of its stretch.
+def evenly_spread(voxels: VoxelSet, count: int) -> NDArray[np.int64]:
+    """Take so many voxels, evenly spread in space.
 
     Parameters
     ----------
-    xyz : (V, 3)
-        World coordinates, mm.
+    voxels : VoxelSet
     count : int
-        Voxels wanted, 1 or more.
-    step : float
-        Length below which two places are the same on the curve, mm; such as the voxel edge.
+        1 or more.
 
     Returns
     -------
     (min(count, V),) int64
-        Rows, in the order along the curve.
+        Rows, ascending; the same voxels whatever the storage of the grid.
 
     Notes
     -----
-    The curve is the Z-order of Morton G.M. (1966): the bits of the three coordinates in turn.
+    A voxel is taken where a linear function of its indices, modulo 1, is small. With the powers
+    of the generalised golden ratio (the real root of x^4 = x + 1) as coefficients the voxels
+    taken keep their distance in all directions, at any count.
     """
-    points = np.asarray(xyz, dtype=np.float64).reshape(-1, 3)
-    if not len(points):
-        return np.zeros(0, np.int64)
-    # rounded, so that a grid stored flipped or permuted gives the same order
-    places = np.rint((points - points.min(axis=0)) / step).astype(np.int64)
-    code = np.zeros(len(points), np.int64)
-    for bit in range(_BITS):
-        for axis in range(3):
-            code |= ((places[:, axis] >> bit) & 1) << (3 * bit + axis)
-    order = np.argsort(code, kind="stable")
-    taken = min(count, len(points))
-    return order[((np.arange(taken) + 0.5) * len(points) / taken).astype(np.int64)]
+    axes, reverse = voxels.grid.canonical_axes
+    index = voxels.ijk[:, list(axes)].astype(np.int64)
+    last = np.array(voxels.grid.shape)[list(axes)] - 1
+    index = np.where(reverse, last - index, index)
+    height = (index @ _GOLDEN ** -np.arange(1.0, 4.0)) % 1
+    return np.sort(np.argsort(height, kind="stable")[:count])

@@ -21,7 +21,7 @@ class Size:
 
 
 FULL = Size(2.0, 300)
-SMALL = Size(8.0, 60)
+SMALL = Size(8.0, 160)
 
 N_CONFOUNDS = 30
 

@@ -48,7 +48,7 @@ def test_columns_of_the_contract(study):
         "reported_high effect_mean effect_sd effect_min effect_max sign_share dice_positive_mean "
         "dice_positive_p05 dice_positive_undefined dice_negative_mean dice_negative_p05 "
         "dice_negative_undefined pairwise_agreement stability stability_low stability_high ceiling "
-        "ceiling_relative state"
+        "ceiling_relative placement_share state"
     )
     table = table_of(study)
     assert list(table) == names.split()
@@ -101,7 +101,9 @@ def test_table_matches_loops(study):
 
 
 def test_region_without_voxels(study):
-    table = table_of(study, ceiling=np.ones(5), ceiling_relative=np.ones(5))
+    table = table_of(
+        study, ceiling=np.ones(5), ceiling_relative=np.ones(5), placement_share=np.ones(5)
+    )
     assert table["state"][2] == "n/a"
     for name, column in table.items():
         if column.dtype.kind == "f":

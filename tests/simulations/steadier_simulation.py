@@ -1,8 +1,8 @@
 """Does the search for a steadier seed find a planted best place, and stay where none is better?
 
-Fold sums of z are drawn on a lattice of places directly. A place inside a ball-shaped parcel has the
-parcel's target map; outside, the map changes with the direction from the parcel; at its border maps
-mix. Each participant has a parcel centre and target maps of their own, and noise that overlapping
+Fold sums of z are drawn on a lattice of places directly. A place inside a ball-shaped parcel has
+the parcel's target map; outside, the map changes with the direction from the parcel; at its border
+maps mix. Each participant has a parcel centre and target maps of their own, and noise that overlapping
 places share.
 
 Run ``python -m tests.simulations.steadier_simulation --runs 200`` for the long version.
@@ -90,18 +90,16 @@ class World:
         sizes = [self.participants // self.folds] * self.folds
         products = fold_products(self.draw(rng, sizes), self.around)
         moved = np.linalg.norm(self.shifts[self.around.candidates], axis=1)
-        return steadier_seed(
-            partial(correlation_scores, products), moved, np.array(sizes), keep_similarity=0.5
-        )
+        return steadier_seed(partial(correlation_scores, products), moved, np.array(sizes))
 
     def expected_scores(self, rng: np.random.Generator, studies: int) -> np.ndarray:
-        """Scores (C,) that half of the participants have on average, from new participants."""
+        """Scores (studies, C) that half of the participants have, from new participants."""
         scores = []
         for _ in range(studies):
             sums = self.draw(rng, [self.participants // 2])
             products = fold_products(sums, self.around)
             scores.append(correlation_scores(products, np.ones((1, 1), bool)).stability[0])
-        return np.mean(scores, axis=0)
+        return np.array(scores)
 
 
 @dataclass(frozen=True)
@@ -114,15 +112,25 @@ class Report:
     gain_in: np.ndarray
     truth: np.ndarray
     covered: np.ndarray
+    truth_error: float
+
+    @property
+    def bias(self) -> float:
+        """Mean difference of the gain found in other people from the true gain."""
+        return float(np.mean(self.gain - self.truth))
+
+    @property
+    def error(self) -> float:
+        """Standard error of the bias: of the runs, and of the true gain's own simulation."""
+        bias = self.gain - self.truth
+        return float(np.hypot(bias.std(ddof=1) / np.sqrt(len(bias)), self.truth_error))
 
     def __str__(self) -> str:
-        bias = self.gain - self.truth
-        error = bias.std(ddof=1) / np.sqrt(len(bias))
         return (
-            f"runs {len(bias)}: within one step {self.recovered.mean():.1%}, kept "
+            f"runs {len(self.gain)}: within one step {self.recovered.mean():.1%}, kept "
             f"{self.kept.mean():.1%}; gain in other people {self.gain.mean():.4f}, true "
-            f"{self.truth.mean():.4f}, difference {bias.mean():+.5f} (standard error {error:.5f}); "
-            f"gain in-sample {self.gain_in.mean():.4f}; interval holds the true gain in "
+            f"{self.truth.mean():.4f}, difference {self.bias:+.5f} (standard error "
+            f"{self.error:.5f}); gain in-sample {self.gain_in.mean():.4f}; interval holds the true gain in "
             f"{self.covered.mean():.1%}"
         )
 
@@ -130,13 +138,17 @@ class Report:
 def simulate(world: World, runs: int, random_state: int, truth_from: int = 300) -> Report:
     """Search many studies of one world."""
     rng, other = np.random.default_rng(random_state).spawn(2)
-    expected = world.expected_scores(other, truth_from)
+    fresh = world.expected_scores(other, truth_from)
+    fresh_gains = fresh - fresh[:, :1]
+    expected = fresh_gains.mean(axis=0)
     best = np.zeros(3) if world.best is None else np.array(world.best)
     found: list[tuple[float, ...]] = []
+    chosen = np.zeros(len(expected))
     for _ in range(runs):
         search = world.search_once(rng)
         place = world.shifts[world.around.candidates[search.recommended]]
-        truth = float(search.table["share_chosen"] @ (expected - expected[0]))
+        truth = float(search.table["share_chosen"] @ expected)
+        chosen += search.table["share_chosen"] / runs
         found.append(
             (
                 np.linalg.norm(place - best) <= world.step + 1e-6,
@@ -147,10 +159,11 @@ def simulate(world: World, runs: int, random_state: int, truth_from: int = 300) 
                 search.gain_low <= truth <= search.gain_high,
             )
         )
-    return Report(*np.array(found, dtype=float).T)
+    truth_error = (fresh_gains @ chosen).std(ddof=1) / np.sqrt(truth_from)
+    return Report(*np.array(found, dtype=float).T, float(truth_error))
 
 
-BORDER = World(best=(4.0, -2.0, 2.0))
+BORDER = World(best=(4.0, 0.0, -2.0))
 FLAT = World(best=None)
 CENTRED = World(best=(0.0, 0.0, 0.0))
 

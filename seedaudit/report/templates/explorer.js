@@ -7,6 +7,7 @@ class Bench {
     this.values = new Float32Array(study.voxels);
     this.reported = new Float32Array(study.voxels);
     maps.fill(this.reported, [{ row: 0, share: 1 }]);
+    this.reportedClasses = new Int8Array(study.voxels);
     this.regionSizes = new Float64Array(regions.length);
     for (const label of this.regionOf) if (label) this.regionSizes[label - 1] += 1;
     this.seed = [...study.at];
@@ -34,16 +35,14 @@ class Bench {
   colours() {
     const dark = matchMedia("(prefers-color-scheme: dark)").matches && !this.printing;
     const theme = study.colours[dark ? "dark" : "light"];
-    const ends = theme.ends.map((text) =>
-      [1, 3, 5].map((start) => parseInt(text.slice(start, start + 2), 16)));
-    const ramp = (t) => {
-      const at = clamp(t, 0, 1) * 4;
-      const low = Math.min(3, Math.floor(at));
-      return [0, 1, 2].map((c) => ends[low][c] + (at - low) * (ends[low + 1][c] - ends[low][c]));
+    const opaque = (colours) => colours.map((colour) => [...colour, 255]);
+    this.palette = {
+      plus: opaque(theme.plus),
+      minus: opaque(theme.minus),
+      greys: opaque(theme.greys),
+      ink: [...theme.ink, 255],
+      hatch: [...theme.hatch, 255],
     };
-    // the neutral middle is left out: what passes a cut must stand out from the anatomy
-    const side = (way) => Array.from({ length: 64 }, (_, i) => ramp(0.5 + way * (0.17 + 0.33 * i / 63)));
-    this.palette = { plus: side(1), minus: side(-1), greys: theme.greys, ink: theme.ink, hatch: theme.hatch };
   }
 
   get cut() {
@@ -86,6 +85,7 @@ class Bench {
     const rank = Math.round(value / 100 * this.values.length);
     this.cuts = kind === "effect"
       ? [value, value] : [cutOfRank(this.values, rank), cutOfRank(this.reported, rank)];
+    if (this.cuts[1] !== this.reportedCut) this.#classify(this.cuts[1]);
     this.found = compare(this.values, this.reported, ...this.cuts);
     this.#regions();
     this.draw();
@@ -93,6 +93,13 @@ class Bench {
     this.bars.draw(this.regionMeans);
     tell(this);
     this.milliseconds = performance.now() - begin;
+  }
+
+  #classify(cut) {
+    this.reportedCut = cut;
+    for (let v = 0; v < this.reported.length; v += 1) {
+      this.reportedClasses[v] = (this.reported[v] >= cut) - (this.reported[v] <= -cut);
+    }
   }
 
   #regions() {
@@ -191,9 +198,9 @@ async function startBench() {
       return plus >= minus ? plus : -minus;
     },
     // linear between voxels: the picture underneath may look smooth, the map may not
-    greyAt: (voxel) => {
-      const [x, y, z] = voxel.map(Math.floor);
-      const [p, q, s] = [voxel[0] - x, voxel[1] - y, voxel[2] - z];
+    greyAt: (right, front, upward) => {
+      const [x, y, z] = [Math.floor(right), Math.floor(front), Math.floor(upward)];
+      const [p, q, s] = [right - x, front - y, upward - z];
       const at = (i, j, k) =>
         anatomy[clamp(i, 0, nx - 1) + nx * (clamp(j, 0, ny - 1) + ny * clamp(k, 0, nz - 1))];
       const plane = (k) => (1 - q) * ((1 - p) * at(x, y, k) + p * at(x + 1, y, k)) +

@@ -53,22 +53,30 @@ class Slice {
   // Which voxel, which grey and which hatching every pixel has on the plane looked at.
   cross() {
     const { bench, along, up, through, width, height, step } = this;
-    const [nx, ny] = study.shape;
+    const [nx, ny, nz] = study.shape;
+    const [a, b, c] = study.toVoxel;
     const point = [0, 0, 0];
     point[through] = bench.look[through];
     for (let j = 0, pixel = 0; j < height; j += 1) {
       point[up] = frame[1][up] - (j + 0.5) * step;
       for (let i = 0; i < width; i += 1, pixel += 1) {
         point[along] = frame[0][along] + (i + 0.5) * step;
-        const voxel = study.toVoxel.map((row) =>
-          row[0] * point[0] + row[1] * point[1] + row[2] * point[2] + row[3]);
-        const [x, y, z] = voxel.map((value) => Math.floor(value + 0.5));
-        const inside = voxel.every((value, axis) => value > -0.5 && value < study.shape[axis] - 0.5);
-        this.rows[pixel] = inside ? bench.rowOf[x + nx * (y + ny * z)] : NOWHERE;
-        this.under[pixel] = inside ? bench.greyAt(voxel) : 0;
-        this.zone[pixel] = inside && this.rows[pixel] < 0 && bench.inZone(point) ? 1 : 0;
+        const x = a[0] * point[0] + a[1] * point[1] + a[2] * point[2] + a[3];
+        const y = b[0] * point[0] + b[1] * point[1] + b[2] * point[2] + b[3];
+        const z = c[0] * point[0] + c[1] * point[1] + c[2] * point[2] + c[3];
+        const [p, q, s] = [Math.floor(x + 0.5), Math.floor(y + 0.5), Math.floor(z + 0.5)];
+        const inside = p >= 0 && q >= 0 && s >= 0 && p < nx && q < ny && s < nz;
+        const row = inside ? bench.rowOf[p + nx * (q + ny * s)] : NOWHERE;
+        this.rows[pixel] = row;
+        this.under[pixel] = inside ? bench.greyAt(x, y, z) : 0;
+        this.zone[pixel] = inside && row === NOWHERE && bench.inZone(point) ? 1 : 0;
       }
     }
+    this.#edgeMarks();
+  }
+
+  #edgeMarks() {
+    const { bench, along, up, through } = this;
     const [x, y] = [bench.look[along], -bench.look[up]];
     const [left, right, top, bottom] = [frame[0][along], frame[1][along], -frame[1][up], -frame[0][up]];
     this.tickAlong.setAttribute("d",
@@ -78,42 +86,31 @@ class Slice {
   }
 
   draw(shown) {
-    const { bench, rows, under, zone, width } = this;
+    const { bench, rows, under, zone, width, height } = this;
     const { plus, minus, greys, ink, hatch } = bench.palette;
     const { data } = this.image;
     const tails = bench.tails;
-    const outline = find("outline").checked;
-    const classAt = (row) => (row < 0 ? 0
-      : (bench.reported[row] >= bench.cuts[1]) - (bench.reported[row] <= -bench.cuts[1]));
-    for (let pixel = 0, at = 0; pixel < rows.length; pixel += 1, at += 4) {
-      const row = rows[pixel];
-      const [i, j] = [pixel % width, Math.floor(pixel / width)];
-      let colour = greys[under[pixel]];
-      if (row >= 0) {
-        const value = shown.share ? bench.shareAt(row, tails) : shown.values[row];
-        const size = Math.abs(value);
-        const chosen = value > 0 ? tails.plus : tails.minus;
-        if (chosen && size >= shown.cut && size > 0) {
-          const level = Math.round(63 * clamp((size - shown.cut) / (shown.top - shown.cut || 1), 0, 1));
-          colour = value > 0 ? plus[level] : minus[level];
-          // class − is striped, so that colour is not all that tells it from +
-          if (value < 0 && (i - j + 4096) % 5 === 0) colour = hatch;
+    const classes = find("outline").checked ? bench.reportedClasses : null;
+    const perLevel = 63 / (shown.top - shown.cut || 1);
+    for (let j = 0, pixel = 0; j < height; j += 1) {
+      for (let i = 0; i < width; i += 1, pixel += 1) {
+        const row = rows[pixel];
+        let colour = greys[under[pixel]];
+        if (row !== NOWHERE) {
+          const value = shown.share ? bench.shareAt(row, tails) : shown.values[row];
+          const size = Math.abs(value);
+          if (size >= shown.cut && size > 0 && (value > 0 ? tails.plus : tails.minus)) {
+            const level = Math.min(63, Math.max(0, Math.round((size - shown.cut) * perLevel)));
+            // class − is striped, so that colour is not all that tells it from class +
+            if (value > 0) colour = plus[level];
+            else colour = (i - j + 5 * height) % 5 ? minus[level] : hatch;
+          }
+          if (classes && isEdge(classes, rows, pixel, width, i + j)) colour = ink;
+        } else if (zone[pixel] && (i + j) % 5 === 0) {
+          colour = ink;
         }
-        if (outline) {
-          const kind = classAt(row);
-          const right = i + 1 < width ? rows[pixel + 1] : row;
-          const below = pixel + width < rows.length ? rows[pixel + width] : row;
-          const edge = kind !== classAt(right) || kind !== classAt(below);
-          const minusEdge = kind < 0 || classAt(right) < 0 || classAt(below) < 0;
-          if (edge && !(minusEdge && (i + j) % 4 > 1)) colour = ink;
-        }
-      } else if (zone[pixel] && (i + j) % 5 === 0) {
-        colour = ink;
+        [data[4 * pixel], data[4 * pixel + 1], data[4 * pixel + 2], data[4 * pixel + 3]] = colour;
       }
-      data[at] = colour[0];
-      data[at + 1] = colour[1];
-      data[at + 2] = colour[2];
-      data[at + 3] = 255;
     }
     this.canvas.getContext("2d").putImageData(this.image, 0, 0);
     this.#seed();
@@ -132,6 +129,17 @@ class Slice {
     }
     this.dot.setAttribute("d", `M${x - 3} ${y}l3 -3l3 3l-3 3z`);
   }
+}
+
+// Whether a pixel lies on the border of a class of the reported map; dashed around class −.
+function isEdge(classes, rows, pixel, width, position) {
+  const kind = classes[rows[pixel]];
+  for (const other of [pixel + 1, pixel + width]) {
+    const row = other < rows.length ? rows[other] : NOWHERE;
+    const next = row === NOWHERE ? 0 : classes[row];
+    if (next !== kind && (kind === 1 || next === 1 || position % 4 < 2)) return true;
+  }
+  return false;
 }
 
 class Pad {
@@ -243,12 +251,12 @@ function drawKey(bench, shown) {
   const context = canvas.getContext("2d");
   const { plus, minus, hatch } = bench.palette;
   for (let i = 0; i < 64; i += 1) {
-    context.fillStyle = `rgb(${minus[63 - i].join()})`;
+    context.fillStyle = `rgb(${minus[63 - i].slice(0, 3).join()})`;
     context.fillRect(i, 0, 1, 10);
-    context.fillStyle = `rgb(${plus[i].join()})`;
+    context.fillStyle = `rgb(${plus[i].slice(0, 3).join()})`;
     context.fillRect(76 + i, 0, 1, 10);
   }
-  context.fillStyle = `rgb(${hatch.join()})`;
+  context.fillStyle = `rgb(${hatch.slice(0, 3).join()})`;
   for (let i = 0; i < 64; i += 5) for (let j = 0; j < 10; j += 1) if (i + j < 64) context.fillRect(i + j, j, 1, 1);
   const words = (value) => (shown.share
     ? `${Math.round(value / SHARE_CODE * 100)} %` : Number.isFinite(value) ? value.toFixed(2) : "∞");
@@ -306,7 +314,7 @@ async function startPairs() {
     names.map(async (name) => [name, await unpack(`pairs_${name}`)])));
   const n = placements.length - 1;
   const order = [...Array(n).keys()].sort((a, b) => placements[a + 1].distance - placements[b + 1].distance);
-  const cividis = study.colours.cividis.map((text) => [1, 3, 5].map((at) => parseInt(text.slice(at, at + 2), 16)));
+  const { cividis } = study.colours;
   canvas.width = canvas.height = n;
   const pair = (a, b) => {
     const [i, j] = a < b ? [a, b] : [b, a];

@@ -110,7 +110,8 @@ function compare(a, b, cutA, cutB) {
   const size = { a: [0, 0], b: [0, 0], both: [0, 0] };
   let [sumA, sumB, sumAA, sumBB, sumAB] = [0, 0, 0, 0, 0];
   for (let v = 0; v < a.length; v += 1) {
-    const [x, y] = [a[v], b[v]];
+    const x = a[v];
+    const y = b[v];
     sumA += x; sumB += y; sumAA += x * x; sumBB += y * y; sumAB += x * y;
     if (x >= cutA) { size.a[0] += 1; if (y >= cutB) size.both[0] += 1; }
     if (y >= cutB) size.b[0] += 1;
