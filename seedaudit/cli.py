@@ -118,7 +118,6 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
     """
     from seedaudit.auditing import audit, open_checkpoint
     from seedaudit.progress import LiveProgress, PlainProgress
-    from seedaudit.store import save
 
     plan, folder = _ready(asked, out, replace=replace)
     _print_warnings(plan.warnings, quiet)
@@ -135,7 +134,7 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
                 cluster=cluster,
                 prepared=keep_prepared,
             )
-        save(result, folder, replace=replace)
+        result.save(folder, replace=replace)
         progress.finish()
     _print_warnings(result.provenance["warnings"], quiet)
     if as_json:

@@ -97,7 +97,7 @@ def _missing_voxels(plan: Plan, group: GroupState) -> list[str]:
         else "analysed in those who have them"
     )
     return [
-        f"{len(lost)} participant(s) lack some mask voxels (constant or not finite), at most "
+        f"{len(lost)} participant{'s' if len(lost) > 1 else ''} lack{'' if len(lost) > 1 else 's'} some mask voxels (constant or not finite), at most "
         f"{worst.n_missing_voxels} of {len(plan.voxels)} in {worst.participant}; {rule}"
     ]
 

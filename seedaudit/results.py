@@ -127,9 +127,10 @@ class Audit:
 
     def save(self, folder: str | Path, *, replace: bool = False) -> Path:
         """Write the result folder, whole or not at all; see `seedaudit.store.save`."""
+        from seedaudit.report import write_report
         from seedaudit.store import save
 
-        return save(self, folder, replace=replace)
+        return save(self, folder, replace=replace, extra=write_report)
 
     def _repr_html_(self) -> str:
         from html import escape

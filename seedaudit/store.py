@@ -93,7 +93,7 @@ def save(
     replace : bool
         Put the new result in the place of an earlier one.
     extra : callable, optional
-        Writes more into the folder, given the audit and the folder; default: the report.
+        Writes more into the folder, given the audit and the folder: the report.
 
     Raises
     ------
@@ -109,7 +109,8 @@ def save(
         partial = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=folder.parent))
         try:
             _write(audit, partial)
-            (extra or _report())(audit, partial)
+            if extra is not None:
+                extra(audit, partial)
             _follow_umask(partial)
             _put(partial, folder)
         finally:
@@ -124,12 +125,6 @@ def save(
             )
         ) from error
     return folder
-
-
-def _report() -> Extra:
-    from seedaudit.report import write_report
-
-    return write_report
 
 
 def _put(partial: Path, folder: Path) -> None:

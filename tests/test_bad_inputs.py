@@ -64,7 +64,7 @@ def base(tmp_path_factory) -> Path:
 @pytest.fixture
 def try_it(base, tmp_path, capsys, monkeypatch) -> Callable[..., Outcome]:
     """Break a copy of the study and say a command to it; figures are none of this matter."""
-    monkeypatch.setattr("seedaudit.store._report", lambda: lambda audit, folder: None)
+    monkeypatch.setattr("seedaudit.report.write_report", lambda audit, folder: None)
     monkeypatch.chdir(tmp_path)
     folder = tmp_path / "study"
     shutil.copytree(base, folder)

@@ -38,7 +38,7 @@ def base(tmp_path_factory) -> Path:
 @pytest.fixture
 def folder(base, tmp_path, monkeypatch) -> Path:
     """A copy of the study, which is the working directory; without figures."""
-    monkeypatch.setattr("seedaudit.store._report", lambda: lambda audit, folder: None)
+    monkeypatch.setattr("seedaudit.report.write_report", lambda audit, folder: None)
     copy = tmp_path / "study"
     shutil.copytree(base, copy)
     monkeypatch.chdir(copy)

@@ -62,7 +62,8 @@ def mean_squares(values: FloatArray) -> dict[tuple[int, ...], FloatArray]:
     """
     factors = tuple(range(values.ndim - 1))
     # the sums of squares of numbers far from 0 would lose their digits
-    centred = values - values.mean(axis=factors)
+    centred = values - values[(0,) * len(factors)]
+    centred -= centred.mean(axis=factors)
     found: dict[tuple[int, ...], FloatArray] = {}
     means: dict[tuple[int, ...], FloatArray] = {(): np.zeros(values.shape[-1])}
     for effect in _effects(factors):

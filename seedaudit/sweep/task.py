@@ -202,8 +202,8 @@ def run_basis(task: RunTask, recipe: CleaningRecipe) -> tuple[NDArray[np.float64
         raise DataError(
             Problem(
                 task.header.path.name,
-                "has no confounds table",
-                "[cleaning] names confounds or censoring",
+                "has no confounds table, but [cleaning] names confounds or censoring",
+                "a table of confounds beside every run",
                 "add a `confounds` column to the runs table, or leave them out of [cleaning]",
             )
         )
@@ -297,7 +297,7 @@ def _check_reported(
         raise DataError(
             Problem(
                 names,
-                f"only {reported.min():.0%} of a reported seed sphere has a signal that varies",
+                f"only {reported.min():.0%} of a reported seed sphere holds finite values that vary",
                 f"at least {task.min_coverage:.0%} (min_coverage)",
                 "look at the run's coverage, correct the mask or the seed, or set "
                 'on_bad_run = "set-aside"',
