@@ -10,8 +10,9 @@ from typing import Any, Protocol
 
 from threadpoolctl import threadpool_limits
 
-from seedaudit.conclusions import conclude_seed, group_state
-from seedaudit.errors import Problem, StudyError
+from seedaudit.conclusions import conclude_seed
+from seedaudit.errors import Problem, StudyError, printable
+from seedaudit.groupstate import group_state
 from seedaudit.inference.glm import orthonormal_design
 from seedaudit.inputs.anatomy import anatomy
 from seedaudit.plan import Plan
@@ -22,7 +23,7 @@ from seedaudit.study import Study
 from seedaudit.sweep.checkpoint import Checkpoint
 from seedaudit.sweep.schedule import assign_folds, sweep, sweep_key
 from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
-from seedaudit.workers import available_cores
+from seedaudit.workers import available_cores, reuse_freed_memory
 
 
 class Progress(Protocol):
@@ -84,6 +85,7 @@ def audit(
         raise StudyError(Problem("workers", f"is {workers}", "1 or more"))
     progress = progress or Silence()
     plan = study if isinstance(study, Plan) else make_plan(study)
+    reuse_freed_memory()
     started = time.monotonic()
 
     # an equivalent design with orthonormal columns keeps the digits of the streamed sums
@@ -175,4 +177,4 @@ def audit_images(
 
 
 def _label(record: ParticipantRecord) -> str:
-    return record.participant if record.used else f"{record.participant} (set aside)"
+    return printable(record.participant) + ("" if record.used else " (set aside)")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import os
 import signal
@@ -18,7 +19,14 @@ import click
 from rich.console import Console
 
 from seedaudit._version import __version__
-from seedaudit.errors import Findings, Problem, SeedAuditError, StudyError
+from seedaudit.errors import (
+    Findings,
+    Problem,
+    SeedAuditError,
+    StudyError,
+    counted,
+    printable,
+)
 
 CAUTION = (
     "Research use. A seed that feeds stimulation or surgical targeting, or any decision on a "
@@ -119,7 +127,7 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
     from seedaudit.auditing import audit, open_checkpoint
     from seedaudit.progress import LiveProgress, PlainProgress
 
-    plan, folder = _ready(asked, out, replace=replace)
+    plan, folder, _ = _ready(asked, out, workers, replace=replace)
     _print_warnings(plan.warnings, quiet)
     console = Console(stderr=True)
     bar = LiveProgress(console) if console.is_terminal and not quiet else PlainProgress(quiet=quiet)
@@ -154,12 +162,10 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
     Reads headers, tables, mask and regions only, and lists every problem at once; exits with 0
     only when `run` would start.
     """
-    from seedaudit.forecast import forecast
     from seedaudit.overview import overview, overview_text
-    from seedaudit.workers import available_cores
 
-    plan, _ = _ready(asked, out, replace=False)
-    found = overview(plan, forecast(plan, workers or available_cores()))
+    plan, _, needs = _ready(asked, out, workers, replace=False)
+    found = overview(plan, needs)
     _print_warnings(plan.warnings, quiet)
     if as_json:
         _print_json(found)
@@ -182,43 +188,59 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
 @click.option("--random-state", type=click.IntRange(0), metavar="N", help="Seed of the chance.")
 def synth(folder: Path, **asked: Any) -> int:
     """Write a synthetic study into FOLDER; truth.json there says what an audit must find."""
-    from dataclasses import replace
-
     from seedaudit.synth import DEMO, synth_study
 
     if folder.exists() and not (folder.is_dir() and not any(folder.iterdir())):
         found = "is not empty" if folder.is_dir() else "is a file"
         raise StudyError(Problem(str(folder), found, "a new or empty folder", "choose another"))
-    settings = replace(DEMO, **{key: value for key, value in asked.items() if value is not None})
+    given = {key: value for key, value in asked.items() if value is not None}
+    settings = dataclasses.replace(DEMO, **given)
     synth_study(folder, settings)
     click.echo(f"Synthetic study: {folder}\nNext: seedaudit run {folder / 'study.toml'}")
     return DONE
 
 
-def _ready(asked: dict[str, Any], out: Path | None, *, replace: bool) -> tuple[Any, Path]:
-    """The plan of what is asked and the folder of its result, every problem of both at once."""
+def _ready(
+    asked: dict[str, Any], out: Path | None, workers: int | None, *, replace: bool
+) -> tuple[Any, Path, Any]:
+    """The plan of what is asked, the folder of its result and its needs, all problems at once."""
+    from seedaudit.forecast import forecast, strains
     from seedaudit.preflight import make_plan
-    from seedaudit.store import check_free
+    from seedaudit.workers import available_cores
 
     study, findings = _study(asked), Findings()
-    folder = out or study.base / study.output
-    findings.attempt(_check_writable, folder)
-    findings.attempt(partial(check_free, replace=replace), folder)
+    folder = out or study.path(study.output)
+    findings.attempt(partial(_check_output, replace=replace), folder)
     plan = findings.attempt(make_plan, study)
     findings.raise_if_any()
-    return plan, folder
+    assert plan is not None
+    needs = forecast(plan, workers or available_cores())
+    short = strains(needs, folder)
+    plan = dataclasses.replace(plan, warnings=(*plan.warnings, *short))
+    return plan, folder, needs
 
 
-def _check_writable(folder: Path) -> None:
-    """Refuse what could only fail after the work: the nearest folder that is there must let us."""
+def _check_output(folder: Path, *, replace: bool) -> None:
+    """Refuse what could only fail after the work: the name, the place, what is there already."""
+    from seedaudit.store import check_free
+
+    where = f"output {folder.name[:60]}"
+    try:
+        # the longest name that is made of it
+        os.lstat(folder.absolute().with_name(f".{folder.name}-old-12345678"))
+    except (FileNotFoundError, NotADirectoryError):
+        pass
+    except (OSError, ValueError):  # too long, or with a zero byte
+        raise StudyError(
+            Problem(where, "is no name for a folder", "a name of a usual length")
+        ) from None
     there = next(parent for parent in folder.absolute().parents if parent.exists())
     if not (there.is_dir() and os.access(there, os.W_OK | os.X_OK)):
         found = f"cannot be made in {there}, which is " + (
             "not writable" if there.is_dir() else "a file"
         )
-        raise StudyError(
-            Problem(f"output {folder.name}", found, "a writable folder", "choose another --out")
-        )
+        raise StudyError(Problem(where, found, "a writable folder", "choose another --out"))
+    check_free(folder, replace=replace)
 
 
 def _study(asked: dict[str, Any]) -> Any:
@@ -264,7 +286,7 @@ def _study(asked: dict[str, Any]) -> Any:
 
 
 def _say(text: str) -> None:
-    click.echo(text, err=True)
+    click.echo(printable(text), err=True)
 
 
 @contextmanager
@@ -300,13 +322,15 @@ def _split(named: Sequence[Path]) -> tuple[Path | None, list[str]]:
 
 def _print_warnings(warnings: Sequence[str], quiet: bool) -> None:
     if warnings and not quiet:
-        click.echo(f"{len(warnings)} warning(s):", err=True)
+        _say(f"{counted(len(warnings), 'warning')}:")
         for text in warnings:
-            click.echo(f"  - {text}", err=True)
+            _say(f"  - {text}")
 
 
 def _print_json(content: Any) -> None:
-    click.echo(json.dumps(content, indent=2, ensure_ascii=False))
+    text = json.dumps(content, indent=2, ensure_ascii=False)
+    # half letters, from file names that are no text, keep their escape, which JSON knows too
+    click.echo(text.encode("utf-8", "backslashreplace").decode("utf-8"))
 
 
 def _print_seed(summary: Any, regions: Any) -> None:
@@ -329,10 +353,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except SeedAuditError as error:
         if debug:
             traceback.print_exc()
-        count = len(error.problems)
-        click.echo(f"{count} problem{'s' if count > 1 else ''}:", err=True)
+        _say(f"{counted(len(error.problems), 'problem')}:")
         for problem in error.problems:
-            click.echo(f"  - {problem}", err=True)
+            _say(f"  - {problem}")
         return error.exit_code
     except click.ClickException as error:
         error.show()
@@ -340,6 +363,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except (KeyboardInterrupt, click.Abort):
         _say("interrupted; the same command goes on from here")
         return INTERRUPTED
+    except MemoryError:
+        _say("the memory of the machine does not suffice: fewer --workers, folds or placements")
+        _say("need less; the same command goes on from here")
+        return FAULT
     except BrokenPipeError:  # the reader of the output, such as `head`, has seen enough
         sys.stdout = open(os.devnull, "w")  # noqa: SIM115 - so that closing it does not fail too
         return DONE
@@ -362,10 +389,9 @@ def _report_fault(error: Exception) -> None:
         where = f"; a short report without data is in {path}"
     except OSError:
         where = ""
-    click.echo(
+    _say(
         f"unexpected fault in the program ({type(error).__name__}: {error}){where}; "
-        "--debug shows the trace",
-        err=True,
+        "--debug shows the trace"
     )
 
 

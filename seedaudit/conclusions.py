@@ -3,93 +3,34 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
+from scipy.sparse import csr_array
 
+from seedaudit.consensus.ceiling import Ceiling, time_ceiling
 from seedaudit.consensus.cloud import (
     CloudConsensus,
     Controls,
-    GroupDesign,
     Space,
     conclude,
 )
+from seedaudit.consensus.regional import region_rows
 from seedaudit.errors import DataError, Problem
+from seedaudit.groupstate import GroupState
 from seedaudit.inference.group import ThresholdRule
-from seedaudit.inputs.nuisance import column_mean
 from seedaudit.plan import Plan, SeedPlan
 from seedaudit.report.words import verdict
 from seedaudit.results import SeedAudit, map_image, read_only
 from seedaudit.space.spheres import cloud_exclusion
 from seedaudit.sweep.moments import Moments
-from seedaudit.sweep.schedule import ParticipantRecord, Swept
+from seedaudit.sweep.schedule import Swept
 from seedaudit.tabulation import Found, summary, tables
+from seedaudit.timehalves import time_halves
 from seedaudit.worth import judge_claims, reach, settled_rule
-
-MOTION = "framewise_displacement"
-"""Column of the confounds that tells of motion; else the column that censors volumes."""
-
-
-@dataclass(frozen=True)
-class GroupState:
-    """What all seeds share after the pass: who is used, the working design, and mean motion of
-    those used, in the column's unit; NaN where no table tells it.
-    """
-
-    used: tuple[ParticipantRecord, ...]
-    set_aside: tuple[ParticipantRecord, ...]
-    design: GroupDesign
-    motion: NDArray[np.float64]
-
-
-def group_state(
-    plan: Plan, swept: Swept, matrix: NDArray[np.float64], contrast: NDArray[np.float64]
-) -> GroupState:
-    """Sort the participants, and check that the model still stands without those set aside.
-
-    Raises
-    ------
-    DataError
-        If too few participants are left for the design.
-    """
-    used = tuple(record for record in swept.records if record.used)
-    set_aside = (*plan.set_aside, *(record for record in swept.records if not record.used))
-    rows = matrix[[record.row for record in used]]
-    n, p = len(used), matrix.shape[1]
-    single = len(plan.participants) == 1 and n == 1
-    if not single and (n <= p or np.linalg.matrix_rank(rows) < p):
-        raise DataError(
-            Problem(
-                "participants",
-                f"{n} are left after setting {len(set_aside)} aside, too few or too alike for "
-                f"the {p} columns of the model",
-                f"at least {p + 1}, in every group",
-                "mend the participants set aside, or simplify the model",
-            )
-        )
-    least = n if plan.study.group.missing == "intersection" else max(p + 1, (n + 1) // 2)
-    strata = plan.design.strata[[record.row for record in used]]
-    motion = np.array([_mean_motion(plan, record) for record in used])
-    return GroupState(used, set_aside, GroupDesign(rows, contrast, strata, least), motion)
-
-
-def _mean_motion(plan: Plan, record: ParticipantRecord) -> float:
-    """Mean motion over a participant's runs, each weighted by its volumes."""
-    censor = None if plan.study.cleaning is None else plan.study.cleaning.censor
-    runs = plan.participants[record.row].runs
-    for column in (MOTION, *(() if censor is None else (censor.column,))):
-        means = [
-            np.nan
-            if run.confounds is None
-            else column_mean(run.confounds, column, run.header.n_volumes)
-            for run in runs
-        ]
-        if np.isfinite(means).all():
-            return float(np.average(means, weights=[run.header.n_volumes for run in runs]))
-    return float("nan")
 
 
 def conclude_seed(
@@ -104,7 +45,7 @@ def conclude_seed(
     placements, kept_rows, control_rows = _seen_everywhere(plan, group, number)
     start = sum(len(other.used) for other in plan.seeds[:number])
     folds = [_of_placements(fold, start + kept_rows) for fold in swept.folds]
-    controls = [fold.placements(start + control_rows) for fold in swept.folds]
+    controls = [_of_placements(fold, start + control_rows) for fold in swept.folds]
     means = np.array([record.kept[number].target_means[kept_rows] for record in group.used])
     regions, grid = plan.regions, plan.voxels.grid
     labels = np.zeros(len(plan.voxels), np.int32) if regions is None else regions.labels
@@ -129,6 +70,10 @@ def conclude_seed(
         safe=plan.study.consensus.safe,
         random_state=plan.study.placements.random_state,
     )
+    if found.ceiling is None and len(plan.participants) == 1:
+        found = replace(
+            found, ceiling=_time_ceiling(plan, seed, found, space, kept_rows, control_rows)
+        )
     shifts = placements[["dx", "dy", "dz"]].to_numpy()[seed.used[kept_rows]]
     distance = np.linalg.norm(shifts, axis=1)
     claims = judge_claims(
@@ -228,9 +173,26 @@ def _controls(
     return Controls(folds, keep)
 
 
+def _time_ceiling(
+    plan: Plan,
+    seed: SeedPlan,
+    found: CloudConsensus,
+    space: Space,
+    kept_rows: NDArray[np.int_],
+    control_rows: NDArray[np.int_],
+) -> Ceiling:
+    """Halves of the time series, for one participant."""
+    chosen = seed.used[np.concatenate([kept_rows, control_rows])]
+    first, second = time_halves(plan, csr_array(seed.cloud.weights[chosen]))
+    rows = np.flatnonzero(found.voxels & (first.count > 0) & (second.count > 0))
+    keep = _controls(plan, seed, (), control_rows).keep[:, rows]
+    labels = region_rows(space.labels[rows], space.index)
+    return time_ceiling(first, second, rows, labels, len(space.index), len(keep), keep)
+
+
 def _of_placements(moments: Moments, rows: NDArray[np.int_]) -> Moments:
     """A view where the rows are consecutive, as they are when no placement was dropped."""
-    if len(rows) == rows[-1] - rows[0] + 1:
+    if len(rows) and len(rows) == rows[-1] - rows[0] + 1:
         return moments.placements(slice(int(rows[0]), int(rows[-1]) + 1))
     return moments.placements(rows)
 

@@ -63,7 +63,10 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
         "seed": ("name of the seed", ""),
         "region": ("name of the region; n/a for the whole map", ""),
         "measure": ("spatial_r, ac1 (Gwet's AC1 of two maps), dice_positive or dice_negative", ""),
-        "n_splits": ("half-splits of the participants behind it", COUNT),
+        "n_splits": (
+            "half-splits of the participants behind it (of one participant: of the time series)",
+            COUNT,
+        ),
         "same": ("ceiling: the reported map in one half with itself in the other half", ""),
         "same_low": ("lower end of its 95 % delete-a-fold jackknife interval", ""),
         "same_high": ("upper end of that interval", ""),

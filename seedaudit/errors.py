@@ -114,3 +114,25 @@ def listed(places: Sequence[str], most: int = 10) -> str:
     names = [places[0], *(PurePath(place).name for place in places[1:most])]
     more = f" and {len(places) - most} more" if len(places) > most else ""
     return ", ".join(names) + more
+
+
+def counted(number: int, word: str) -> str:
+    """A number with its word, which takes an s unless there is exactly one."""
+    return f"{number} {word}" if number == 1 else f"{number} {word}s"
+
+
+def brief(value: object, most: int = 120) -> str:
+    """A value as Python writes it, cut where it is long."""
+    text = repr(value)
+    return text if len(text) <= most else f"{text[: most - 3]}..."
+
+
+def printable(text: str) -> str:
+    """The text on one line, its control characters and broken letters written as escapes.
+
+    File names may hold anything: a line break, an order to the terminal, bytes of no alphabet.
+    """
+    return "".join(
+        letter if letter.isprintable() else letter.encode("unicode_escape").decode("ascii")
+        for letter in text
+    )

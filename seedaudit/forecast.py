@@ -1,12 +1,16 @@
-"""What a run will need: time, memory and disk, from headers alone."""
+"""What a run will need: time, memory and disk, from headers alone, against what is there."""
 
 from __future__ import annotations
 
+import shutil
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
+import psutil
 
 from seedaudit.dictionary import MAPS
+from seedaudit.errors import Problem, StudyError
 from seedaudit.plan import Plan
 from seedaudit.sweep.correlate import BLOCK
 from seedaudit.sweep.schedule import assign_folds
@@ -26,11 +30,15 @@ BASE_MEMORY = 300e6
 
 @dataclass(frozen=True)
 class Forecast:
-    """Rough needs of a run: `seconds`, `memory` and `disk` in bytes."""
+    """Rough needs of a run: `seconds`, and in bytes `memory`, `disk` and `progress`.
+
+    `disk` is what the result takes, `progress` what is kept beside it until the result is safe.
+    """
 
     seconds: float
     memory: float
     disk: float
+    progress: float = 0.0
 
 
 def forecast(plan: Plan, workers: int) -> Forecast:
@@ -57,4 +65,44 @@ def forecast(plan: Plan, workers: int) -> Forecast:
     estimates = n_placements * n_voxels * (n_folds + 1)
     seconds = (stored / READ_RATE + products / PRODUCT_RATE) / workers + estimates / ESTIMATE_RATE
     disk = len(plan.seeds) * (2.0 * len(MAPS) * n_voxels + 60.0 * n_placements**2 / 2) + 2e6
-    return Forecast(seconds, memory, disk)
+    # one fold is written anew while its last state is still there
+    progress = (n_folds + 1) * one_state
+    return Forecast(seconds, memory, disk, progress)
+
+
+def strains(needs: Forecast, output: Path) -> list[str]:
+    """What of the machine will be short, for the user's attention.
+
+    Parameters
+    ----------
+    needs : Forecast
+    output : Path
+        Where the result will be; it need not exist.
+
+    Raises
+    ------
+    StudyError
+        If result and progress plainly do not fit on the disk of the output.
+    """
+    there = next(parent for parent in output.absolute().parents if parent.exists())
+    wanted, free = needs.disk + needs.progress, shutil.disk_usage(there).free
+    if wanted > free:
+        raise StudyError(
+            Problem(
+                f"output {output.name}",
+                f"about {_size(wanted)} are needed (result and progress), {_size(free)} are free",
+                "enough space on the disk of the output",
+                "free some, choose another disk with --out, or ask for fewer placements",
+            )
+        )
+    available = psutil.virtual_memory().available
+    if needs.memory <= available:
+        return []
+    return [
+        f"about {_size(needs.memory)} of memory will be needed, {_size(available)} are free: "
+        "fewer --workers, folds or placements need less"
+    ]
+
+
+def _size(count: float) -> str:
+    return f"{count / 1e9:.1f} GB" if count >= 1e8 else f"{count / 1e6:.1f} MB"

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from seedaudit.errors import counted, printable
 from seedaudit.forecast import Forecast
 from seedaudit.plan import Plan
 
@@ -88,7 +89,7 @@ def overview_text(found: dict[str, Any]) -> str:
     """The overview as a person reads it in a terminal."""
     design, needs = found["design"], found["predicted"]
     parts = [
-        found["title"],
+        printable(found["title"]),
         "\nRuns\n"
         + aligned(
             ["participant", "file", "shape", "voxel mm", "TR s", "volumes", "residual df"],
@@ -137,11 +138,13 @@ def overview_text(found: dict[str, Any]) -> str:
         head = ["region", "mask voxels", "outside the first seed's cloud"]
         parts.append("\nRegions\n" + aligned(head, rows))
     parts.append(
-        f"\nDesign\n  {design['participants']} participants, model {design['model']}, "
+        f"\nDesign\n  {counted(design['participants'], 'participant')}, model {design['model']}, "
         f"columns {', '.join(design['columns'])}; tested effect: {design['effect']}"
     )
     if found["choices"]:
-        parts.append("\nChoices made\n" + "\n".join(f"  - {text}" for text in found["choices"]))
+        parts.append(
+            "\nChoices made\n" + "\n".join(f"  - {printable(text)}" for text in found["choices"])
+        )
     parts.append(
         f"\nPredicted, roughly: {_duration(needs['seconds'])}, "
         f"{needs['memory_gb']:g} GB of memory, {needs['disk_mb']:g} MB of disk\nA run would start."
@@ -176,7 +179,7 @@ def number(value: float | None, digits: int = 2) -> str:
 
 def aligned(head: Sequence[str], rows: Iterable[Sequence[Any]]) -> str:
     """Columns padded to their widest cell: text to the left, numbers to the right."""
-    body = [[str(cell) for cell in row] for row in rows]
+    body = [[printable(str(cell)) for cell in row] for row in rows]
     columns = list(zip(head, *body, strict=True))
     right = [all(_is_number(cell) for cell in column[1:]) for column in columns]
     widths = [max(map(len, column)) for column in columns]

@@ -88,10 +88,12 @@ def _run_task(run: Run, header: RunHeader, cleaning: CleaningRecipe, usual: RunH
     task = RunTask(header, run.confounds, run.mask)
     problems = []
     if not header.grid.matches(usual.grid):
+        mirrored = "; one mirrors the other" if header.grid.mirrors(usual.grid) else ""
+        difference = header.grid.difference(usual.grid) + mirrored
         problems.append(
             Problem(
                 run.bold.name,
-                f"is on another grid than {usual.path.name}: {header.grid.difference(usual.grid)}",
+                f"is on another grid than {usual.path.name}: {difference}",
                 "all runs on one grid",
                 "resample the runs to one grid before the audit",
             )

@@ -13,9 +13,10 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from seedaudit.errors import DataError, Findings, Problem, StudyError
+from seedaudit.comparisons import note_copies, note_sides
+from seedaudit.errors import DataError, Findings, Problem, StudyError, counted
 from seedaudit.inputs.design import build_design
-from seedaudit.inputs.discover import find_runs
+from seedaudit.inputs.discover import Run, is_file, list_runs
 from seedaudit.inputs.header import RunHeader
 from seedaudit.inputs.regions import Regions, read_regions
 from seedaudit.inputs.volumes import first_volume, read_mask
@@ -50,12 +51,11 @@ def make_plan(study: Study) -> Plan:
         With every problem found.
     """
     findings = Findings()
-    data = study.data
-    runs = findings.attempt(find_runs, data.runs, study.base, data.bids, data.select)
-    findings.raise_if_any()
-    assert runs is not None
+    runs = _listed_runs(study, findings)
     cleaning = cleaning_recipe(study)
-    participants, set_aside = sort_participants(study, runs, cleaning, findings)
+    # a file that is missing is told already
+    found = [run for run in runs if all(map(is_file, run.files))]
+    participants, set_aside = sort_participants(study, found, cleaning, findings)
     # where a bad run stops the audit, the model is judged with everyone in it
     left_out = {record.participant for record in set_aside}
     people = [name for name in dict.fromkeys(run.participant for run in runs)
@@ -66,14 +66,16 @@ def make_plan(study: Study) -> Plan:
         design = findings.attempt(
             build_design, people, table, study.group.model, study.group.effect
         )
-    else:
+    elif runs:
         findings.wrong(Problem("data", "no participant is left", "at least one"))
-    if not participants:
-        _raise_if_any(findings, set_aside)
-    header = participants[0].runs[0].header
-    note_headers(study, participants, findings)
-    if table is not None:
+    if table is not None and runs:
         findings.attempt(note_people, table, runs, findings)
+    note_copies([run for run in found if run.participant not in left_out], findings)
+    header = None
+    if participants:
+        header = participants[0].runs[0].header
+        note_headers(study, participants, findings)
+        note_sides(participants, findings)
     voxels = findings.attempt(_mask_voxels, study, header, participants, findings)
     regions, seeds = None, []
     if voxels is not None:
@@ -84,10 +86,12 @@ def make_plan(study: Study) -> Plan:
     if voxels is not None and design is not None and (regions or not study.data.regions):
         asserted = (study, design, regions, seeds, voxels, findings)
         seeds = findings.attempt(plan_claims, *asserted) or seeds
-    _check_fwe(study, len(people), findings)
+    if people:
+        _check_fwe(study, len(people), findings)
     _raise_if_any(findings, set_aside)
     assert voxels is not None
     assert design is not None
+    assert participants
     for seed in seeds:
         _note_seed(seed, regions, study, findings)
     return Plan(
@@ -96,12 +100,30 @@ def make_plan(study: Study) -> Plan:
     )  # fmt: skip
 
 
+def _listed_runs(study: Study, findings: Findings) -> tuple[Run, ...]:
+    """All runs that are listed; what is wrong with the list hides no other problem."""
+    data = study.data
+    listed = findings.attempt(list_runs, data.runs, study.base, data.bids, data.select)
+    runs, problems = listed or ((), ())
+    for problem in problems:
+        findings.wrong(problem)
+    return tuple(runs)
+
+
 def _mask_voxels(
-    study: Study, header: RunHeader, participants: list[ParticipantTask], findings: Findings
-) -> VoxelSet:
+    study: Study,
+    header: RunHeader | None,
+    participants: list[ParticipantTask],
+    findings: Findings,
+) -> VoxelSet | None:
+    """The analysis mask; without a run that can be used, what the mask alone tells."""
     if study.data.mask is not None:
-        mask, _ = read_mask(study.path(study.data.mask), header.grid, header.path.name)
+        wanted = () if header is None else (header.grid, header.path.name)
+        mask, grid = read_mask(study.path(study.data.mask), *wanted)
+    elif header is None:
+        return None
     else:
+        grid = header.grid
         mask = _presence(participants, findings)
         findings.choices.append(
             f"no mask was given: {int(mask.sum())} voxels present in the first volume of every run"
@@ -115,7 +137,7 @@ def _mask_voxels(
                 "give a `mask` in the section [data]",
             )
         )
-    return VoxelSet.from_mask(header.grid, mask)
+    return VoxelSet.from_mask(grid if header is None else header.grid, mask)
 
 
 def _presence(participants: list[ParticipantTask], findings: Findings) -> NDArray[np.bool_]:
@@ -274,7 +296,7 @@ def _check_fwe(study: Study, n: int, findings: Findings) -> None:
         return
     least = 0.5 ** (n - 1)
     if least > threshold.level:
-        found = f"flipping the signs of {n} participant(s) gives no p below {least:.2g}"
+        found = f"flipping the signs of {counted(n, 'participant')} gives no p below {least:.2g}"
         allowed = f"participants enough for level {threshold.level:g}"
         findings.wrong(Problem("threshold.rule fwe", found, allowed, "another rule"), StudyError)
     if study.group.missing == "counts":

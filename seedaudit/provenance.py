@@ -6,6 +6,7 @@ Holds file names and the paths of the study file as typed, never an absolute pat
 from __future__ import annotations
 
 import platform
+import re
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import PurePosixPath, PureWindowsPath
@@ -14,9 +15,13 @@ from typing import Any
 import numpy as np
 
 from seedaudit._version import __version__
-from seedaudit.conclusions import GroupState
+from seedaudit.errors import counted
+from seedaudit.groupstate import GroupState
 from seedaudit.plan import Plan
 from seedaudit.sweep.schedule import Swept
+
+HOME = re.compile(r"~[^\s/\\+*:]*[/\\]")
+"""A path from somebody's home on. A model such as `~ a` or `~a+b` is none."""
 
 LIBRARIES = ("numpy", "scipy", "nibabel", "nilearn", "pandas", "scikit-learn", "matplotlib")
 
@@ -97,13 +102,14 @@ def _missing_voxels(plan: Plan, group: GroupState) -> list[str]:
         else "analysed in those who have them"
     )
     return [
-        f"{len(lost)} participant{'s' if len(lost) > 1 else ''} lack{'' if len(lost) > 1 else 's'} some mask voxels (constant or not finite), at most "
+        f"{counted(len(lost), 'participant')} {'lacks' if len(lost) == 1 else 'lack'} some mask "
+        "voxels (constant or not finite), at most "
         f"{worst.n_missing_voxels} of {len(plan.voxels)} in {worst.participant}; {rule}"
     ]
 
 
 def shortened(content: Any) -> Any:
-    """The same content with absolute paths cut to their last part."""
+    """The same content with paths that lead out of the study cut to their last part."""
     if isinstance(content, dict):
         return {key: shortened(value) for key, value in content.items()}
     if isinstance(content, list):
@@ -112,7 +118,10 @@ def shortened(content: Any) -> Any:
 
 
 def file_name(text: str) -> str:
-    """A relative path as typed; of an absolute one, the last part."""
-    home = text.startswith(("~/", "~\\"))
+    """A path below the study as typed; of one that starts elsewhere, the last part.
+
+    The folders above a study may hold a name or a place as well as those above a home.
+    """
     absolute = PurePosixPath(text).is_absolute() or PureWindowsPath(text).is_absolute()
-    return PureWindowsPath(text).name if home or absolute else text
+    elsewhere = absolute or HOME.match(text) or ".." in PureWindowsPath(text).parts
+    return PureWindowsPath(text).name if elsewhere else text

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
 import tempfile
-from collections.abc import Callable, Mapping
+import zlib
+from collections.abc import Callable, Mapping, Sequence
 from io import StringIO
 from pathlib import Path
 from typing import Any
@@ -14,13 +16,17 @@ from typing import Any
 import nibabel as nib
 import numpy as np
 import pandas as pd
+from nibabel.filebasedimages import ImageFileError
+from nibabel.spatialimages import HeaderDataError
 
 from seedaudit._version import __version__
 from seedaudit.consensus.lowrank import LowRank
 from seedaudit.dictionary import COLUMNS, MAPS, PLACEMENT_COMPONENTS
 from seedaudit.errors import DataError, Problem, StudyError
+from seedaudit.guards import inert, live, open_map, own_file, own_path, read_mapping
 from seedaudit.results import SCHEMA, SIGNIFICANT_DIGITS, Audit, SeedAudit, read_only
 from seedaudit.space.grid import Grid, VoxelSet
+from seedaudit.study import SAMPLE_NAME
 
 WORDS = (
     "seed",
@@ -43,6 +49,20 @@ WORDS = (
 
 NUMBERS = (("tolerance", "target"),)
 """Tables in which a column of such a name holds numbers after all."""
+
+UNREADABLE = (
+    OSError,
+    ValueError,
+    LookupError,
+    TypeError,
+    AttributeError,
+    ArithmeticError,
+    EOFError,
+    zlib.error,
+    ImageFileError,
+    HeaderDataError,
+)
+"""What the readers of JSON, tables and images raise on damage; a result may come from anyone."""
 
 Extra = Callable[[Audit, Path], None]
 
@@ -102,7 +122,8 @@ def save(
     DataError
         If the disk refuses.
     """
-    folder = Path(folder)
+    # a link at the output is the user's own, and leads to where the result goes
+    asked, folder = Path(folder), Path(os.path.realpath(folder))
     check_free(folder, replace=replace)
     try:
         folder.parent.mkdir(parents=True, exist_ok=True)
@@ -116,15 +137,18 @@ def save(
         finally:
             shutil.rmtree(partial, ignore_errors=True)
     except OSError as error:
+        # a template that is missing from the installation is no matter of the disk
+        if isinstance(error, LookupError):
+            raise
         raise DataError(
             Problem(
-                f"output {folder.name}",
+                f"output {asked.name}",
                 f"cannot be written ({error.strerror or error})",
                 "a writable folder with enough space",
                 "choose another folder with --out",
             )
         ) from error
-    return folder
+    return asked
 
 
 def _put(partial: Path, folder: Path) -> None:
@@ -215,34 +239,44 @@ def _write_placement_maps(seed: SeedAudit, folder: Path) -> None:
 
 
 def _read_placement_maps(folder: Path, mask: nib.Nifti1Image) -> LowRank | None:
-    if not (folder / f"{_PLACEMENT_MAPS}.json").exists():
+    if not (folder / "maps" / f"{_PLACEMENT_MAPS}.json").exists():
         return None
-    told = json.loads((folder / f"{_PLACEMENT_MAPS}.json").read_text(encoding="utf-8"))
-    stored = nib.Nifti1Image.from_filename(folder / f"{_PLACEMENT_MAPS}.nii.gz")
+    told = read_mapping(own_path(folder, "maps"), f"{_PLACEMENT_MAPS}.json")
+    stored = open_map(folder, "maps", f"{_PLACEMENT_MAPS}.nii.gz", shape=mask.shape)
     inside = np.asarray(stored.dataobj)[tuple(_voxels_of(mask).ijk.T)].T
     codes = np.ascontiguousarray(inside.astype(np.int16) - 128, dtype=np.int8)
-    steps, errors = np.array(told["Steps"]), np.array(told["LargestErrors"])
-    weights = np.array(told["Weights"]).reshape(-1, len(codes) - 1)
-    return LowRank(codes, steps, weights, errors)
+    components = len(codes) - 1
+    steps, errors = (
+        np.array(told[key], dtype=np.float64).reshape(components + 1)
+        for key in ("Steps", "LargestErrors")
+    )
+    weights = np.array(told["Weights"], dtype=np.float64)
+    return LowRank(codes, steps, weights.reshape(len(told["Placements"]), components), errors)
 
 
 def _voxels_of(mask: nib.Nifti1Image) -> VoxelSet:
-    return VoxelSet.from_mask(Grid(mask.shape, mask.affine), np.asarray(mask.dataobj) > 0)
+    x, y, z = mask.shape
+    return VoxelSet.from_mask(Grid((x, y, z), mask.affine), np.asarray(mask.dataobj) > 0)
 
 
 def write_table(path: Path | StringIO, table: pd.DataFrame) -> None:
-    """Write a BIDS table: tabs, `n/a` for missing, true and false in small letters."""
+    """Write a BIDS table: tabs, `n/a` for missing, true and false in small letters.
+
+    Text that a spreadsheet would run as a formula gets an apostrophe in front.
+    """
     shown = table.copy()
     for key in shown.columns:
         if shown[key].dtype == bool:
             shown[key] = np.where(shown[key], "true", "false")
-        elif key in WORDS:
-            shown[key] = [" ".join(str(cell).split()) for cell in shown[key]]
+        elif not pd.api.types.is_numeric_dtype(shown[key]):
+            shown[key] = [inert(" ".join(str(cell).split())) for cell in shown[key]]
             shown[key] = shown[key].replace("", "n/a")
     shown.to_csv(
         path,
         sep="\t",
         index=False,
+        encoding="utf-8",
+        errors="backslashreplace",
         na_rep="n/a",
         float_format=f"%.{SIGNIFICANT_DIGITS}g",
         lineterminator="\n",
@@ -260,9 +294,11 @@ def read_table(path: Path) -> pd.DataFrame:
         dtype={key: str for key in words},
         float_precision="round_trip",
     )
+    if not isinstance(table.index, pd.RangeIndex):  # what pandas makes of rows that are too long
+        raise ValueError(f"rows of {path.name} are longer than its first")
     for key in table.columns:
         if key in words:
-            table[key] = table[key].fillna("n/a" if key == "state" else "")
+            table[key] = table[key].fillna("n/a" if key == "state" else "").map(live)
         elif key == "used":
             table[key] = table[key].astype(bool)
     return table
@@ -270,21 +306,24 @@ def read_table(path: Path) -> pd.DataFrame:
 
 def _write_json(path: Path, content: Mapping[str, Any]) -> None:
     text = json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False)
-    path.write_text(text + "\n", encoding="utf-8")
+    # half letters, from file names that are no text, keep their escape, which JSON knows too
+    path.write_text(text + "\n", encoding="utf-8", errors="backslashreplace")
 
 
 def load_audit(folder: str | Path) -> Audit:
-    """Read a result folder back.
+    """Read a result folder back; one from others can do no harm.
 
     Raises
     ------
     DataError
-        If the folder is no result of this program, of another schema, or incomplete.
+        If the folder is no result of this program, of another schema, incomplete or damaged, or
+        anything in it leads elsewhere or asks for too much memory.
     """
     folder = Path(folder)
     try:
-        summary = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
-        provenance = json.loads((folder / "provenance.json").read_text(encoding="utf-8"))
+        summary, provenance = (
+            read_mapping(folder, f"{name}.json") for name in ("summary", "provenance")
+        )
         if summary["schema"] != SCHEMA:
             raise DataError(
                 Problem(
@@ -294,11 +333,14 @@ def load_audit(folder: str | Path) -> Audit:
                     "run the audit again with this version",
                 )
             )
-        several = len(summary["seeds"]) > 1
+        names = [seed["name"] for seed in summary["seeds"]]
+        _check_names(names)
         seeds = tuple(
-            _load_seed(folder / s["name"] if several else folder, s) for s in summary["seeds"]
+            _load_seed(own_path(folder, name) if len(names) > 1 else folder, told)
+            for name, told in zip(names, summary["seeds"], strict=True)
         )
-    except (OSError, ValueError, KeyError, TypeError) as error:
+        title = str(summary["title"])
+    except UNREADABLE as error:
         raise DataError(
             Problem(
                 f"result folder {folder.name}",
@@ -307,16 +349,36 @@ def load_audit(folder: str | Path) -> Audit:
                 "run the audit again",
             )
         ) from error
-    return Audit(summary["title"], seeds, provenance)
+    return Audit(title, seeds, provenance)
+
+
+def _check_names(names: Sequence[Any]) -> None:
+    """Names of seeds become folders: none may be a path."""
+    for name in names:
+        if not (isinstance(name, str) and re.fullmatch(SAMPLE_NAME, name)):
+            found = f"a seed is named {name!r}"
+            raise DataError(Problem("summary.json", found, "letters, digits, - and _"))
+    if not names or len(set(names)) < len(names):
+        raise DataError(Problem("summary.json", f"names the seeds {names}", "each once"))
 
 
 def _load_seed(folder: Path, summary: dict[str, Any]) -> SeedAudit:
-    tables = {name: read_table(folder / "tables" / f"{name}.tsv") for name in COLUMNS}
-    maps = {}
+    tables = {name: _load_table(folder, name) for name in COLUMNS}
+    maps: dict[str, nib.Nifti1Image] = {}
+    shape = None
     for name in MAPS:
-        stored = nib.Nifti1Image.from_filename(folder / "maps" / f"{name}.nii.gz")
-        data = np.array(stored.dataobj, dtype=stored.get_data_dtype())
+        stored = open_map(folder, "maps", f"{name}.nii.gz", shape=shape)
+        shape = stored.shape
+        data = np.array(np.asarray(stored.dataobj), dtype=stored.get_data_dtype())
         data.setflags(write=False)
         maps[name] = nib.Nifti1Image(data, stored.affine, stored.header)
-    kept = _read_placement_maps(folder / "maps", maps["analysis_mask"])
+    kept = _read_placement_maps(folder, maps["analysis_mask"])
     return SeedAudit(summary["name"], read_only(summary), read_only(tables), read_only(maps), kept)
+
+
+def _load_table(folder: Path, name: str) -> pd.DataFrame:
+    table = read_table(own_file(folder, "tables", f"{name}.tsv"))
+    first = next(iter(COLUMNS[name]))
+    if first not in table.columns:
+        raise DataError(Problem(f"{name}.tsv", f"no column {first!r}", ", ".join(COLUMNS[name])))
+    return table

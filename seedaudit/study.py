@@ -7,6 +7,7 @@ All problems of a file are collected and raised together.
 from __future__ import annotations
 
 import json
+import os
 import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
@@ -271,7 +272,7 @@ class Study(Section):
 
     def path(self, text: str) -> Path:
         """The file that a path of the study file means."""
-        return self._base / Path(text).expanduser()
+        return self._base / os.path.expanduser(text)
 
     @classmethod
     def load(cls, path: str | Path) -> Study:
@@ -300,6 +301,9 @@ class Study(Section):
             raise StudyError(
                 Problem(path.name, f"is not valid TOML: {error}", "TOML 1.0", "mend that line")
             ) from error
+        except RecursionError as error:
+            found = "brackets are nested too deeply"
+            raise StudyError(Problem(path.name, found, "a study file (TOML)")) from error
         return cls.from_mapping(content, path.parent)
 
     @classmethod
@@ -340,8 +344,8 @@ def _missing_files(content: Mapping[str, Any], base: Path) -> Iterator[Problem]:
         if key == "runs" and any(mark in text for mark in "*?["):
             continue
         try:
-            present = (base / Path(text).expanduser()).exists()
-        except (OSError, ValueError, RuntimeError):
+            present = (base / os.path.expanduser(text)).exists()
+        except (OSError, ValueError):  # a name that is too long, or holds a zero byte
             present = False
         if not present:
             also = f", or one of {', '.join(PUBLISHED_REGIONS)}" if key == "regions" else ""

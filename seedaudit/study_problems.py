@@ -69,9 +69,12 @@ def _problem(detail: Any, root: type[BaseModel]) -> Problem:
         kind, location = "runs", RUNS
     elif kind == "missing" and isinstance(location[-1], int):
         kind, location, context = "too_long", location[:-1], {"max_length": location[-1] + 1}
-    where = "".join(
-        f"[{part + 1}]" if isinstance(part, int) else f".{part}" for part in location
-    ).lstrip(".")
+    where = (
+        "".join(
+            f"[{part + 1}]" if isinstance(part, int) else f".{part}" for part in location
+        ).lstrip(".")
+        or "study"
+    )
     found = f"is {_shown(detail['input'])}"
     match kind:
         case "extra_forbidden":
@@ -84,7 +87,7 @@ def _problem(detail: Any, root: type[BaseModel]) -> Problem:
         case "value_error":
             # a section is no value to show: its keys do not go together
             found = found if "." in where else "does not fit together"
-            return Problem(where or "study", found, str(context["error"]))
+            return Problem(where, found, str(context["error"]))
     return Problem(where, found, *_rule(kind, where, detail["input"], context, detail["msg"]))
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -13,12 +13,10 @@ from scipy import stats
 from seedaudit.consensus.cloud import CloudConsensus, Table
 from seedaudit.consensus.components import instability_influence
 from seedaudit.dictionary import COLUMNS
+from seedaudit.groupstate import GroupState
 from seedaudit.plan import Plan, SeedPlan
 from seedaudit.results import frozen_table
 from seedaudit.worth import Reach
-
-if TYPE_CHECKING:
-    from seedaudit.conclusions import GroupState
 
 VERDICTS = ("holds", "breaks", "open")
 
@@ -228,6 +226,8 @@ def _worth(found: Found, made: dict[str, pd.DataFrame]) -> dict[str, Any]:
         "ceiling_relative_low": relative[1],
         "ceiling_relative_high": relative[2],
         "n_half_splits": 0 if top is None else top.n_splits,
+        "n_class_half_splits": 0 if top is None else top.n_class_splits,
+        "n_class_placements": 0 if top is None else top.n_class_placements,
         "floor": float(np.nanmedian(floor)) if np.isfinite(floor).any() else None,
         "n_controls": len(floor),
         "smoothness_mm": found.cloud.fwhm,

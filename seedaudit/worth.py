@@ -291,12 +291,15 @@ def _headline(tolerance: Table) -> dict[str, Any]:
                 "most_fragile_direction": most_fragile(tolerance, measure),
             }
     first = next(iter(told.values()), {})
+    # directions are compared by what is least noisy, and no threshold has a say in
+    compared = "ceiling_relative" if "ceiling_relative" in told else next(iter(told), None)
     return {
         "tolerance_measure": next(iter(told), None),
         "tolerance_target": first.get("target"),
         "tolerance_mm": first.get("mm"),
         "tolerance_censored": first.get("censored"),
-        "most_fragile_direction": first.get("most_fragile_direction"),
+        "most_fragile_direction": told.get(compared or "", {}).get("most_fragile_direction"),
+        "most_fragile_measure": compared,
         "tolerances": told,
     }
 

@@ -335,10 +335,10 @@ DATA_FAULTS = (
     Fault("data shorter than the header says", inflated(4, shortened), 3,
           ("participant sub-04", FOURTH, "end within volume 60 of 60")),
     Fault("all-constant run", image(4, filled(700.0)), 3,
-          ("participant sub-04", FOURTH, "0%", "signal that varies",
+          ("participant sub-04", FOURTH, "0%", "finite values that vary",
            "min_coverage", "set-aside")),
     Fault("all-NaN run", image(4, filled(np.nan)), 3,
-          ("participant sub-04", FOURTH, "0%", "signal that varies")),
+          ("participant sub-04", FOURTH, "0%", "finite values that vary")),
     Fault("one NaN volume", image(4, filled(np.nan, volumes=slice(9, 10))), 3,
-          ("participant sub-04", FOURTH, "0%", "signal")),
+          ("participant sub-04", FOURTH, "0%", "finite values")),
 )  # fmt: skip

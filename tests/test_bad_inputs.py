@@ -248,7 +248,7 @@ def test_missing_voxels_are_recorded(try_it):
     assert outcome.code == 0
     missing = outcome.participants["n_missing_voxels"]
     assert missing.to_dict() == {"sub-01": 0, "sub-02": 4, "sub-03": 5, "sub-04": 0}
-    assert "2 participant(s) lack some mask voxels" in outcome.err
+    assert "2 participants lack some mask voxels" in outcome.err
     assert "at most 5 of" in outcome.err
     assert "left out for everyone" in outcome.err
     effect = nib.load(outcome.folder / "audit" / "maps" / "effect_reported.nii.gz").get_fdata()

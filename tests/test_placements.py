@@ -7,7 +7,14 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from seedaudit.errors import DataError, StudyError
-from seedaudit.placements import _snapped, build_cloud, draw_shifts, uncertainty_sd
+from seedaudit.placements import (
+    CONTROL_DISTANCE,
+    _snapped,
+    add_controls,
+    build_cloud,
+    draw_shifts,
+    uncertainty_sd,
+)
 from seedaudit.space import Grid, VoxelSet, sphere_coverage, sphere_weights
 from tests.space.samples import full, isotropic, oblique, restored, storages, turns
 
@@ -298,3 +305,63 @@ def test_uncertainty_is_the_root_of_the_sum_of_squares(budget, sd):
 def test_an_uncertainty_without_sense_is_refused(budget):
     with pytest.raises(StudyError, match="uncertainty"):
         uncertainty_sd(budget)
+
+
+WIDE = (26, 30, 24)
+
+
+def with_controls(voxels=None, count=12, **options):
+    voxels = full(oblique(WIDE)) if voxels is None else voxels
+    own = cloud(voxels, voxels.grid.to_world((5.3, 6.1, 5.2)))
+    return own, add_controls(own, voxels, count, random_state=3, **options), voxels
+
+
+def test_controls_are_further_rows_far_away():
+    own, made, voxels = with_controls()
+    assert made.table["kind"].tolist() == own.table["kind"].tolist() + ["control"] * 12
+    np.testing.assert_array_equal(made.table["placement"], np.arange(43))
+    pd.testing.assert_frame_equal(made.table[:31], own.table)
+    controls = made.table[31:]
+    assert (controls["distance"] >= CONTROL_DISTANCE).all()
+    assert (controls["radius"] == 5).all()
+    assert controls["used"].all()
+    centres = controls[["x", "y", "z"]].to_numpy(dtype=float)
+    expected = sphere_weights(voxels, centres, np.full(12, 5.0))
+    np.testing.assert_array_equal(made.weights[31:].toarray(), expected.toarray())
+    np.testing.assert_array_equal(made.weights[:31].toarray(), own.weights.toarray())
+    again = with_controls()[1]
+    pd.testing.assert_frame_equal(made.table, again.table)
+    _, farther, _ = with_controls(apart=45.0)
+    assert (farther.table["distance"][31:] >= 45).all()
+
+
+def test_controls_stay_inside_and_covered():
+    voxels = full(oblique(WIDE))
+    area = VoxelSet.from_mask(voxels.grid, np.indices(WIDE)[0] > 20)
+    _, made, _ = with_controls(voxels, inside=area, min_coverage=0.7)
+    controls = made.table[31:]
+    centres = controls[["x", "y", "z"]].to_numpy(dtype=float)
+    assert (area.rows_at(area.grid.voxel_of(centres)) >= 0).all()
+    assert (controls["coverage"] >= 0.7).all()
+
+
+def test_no_room_for_controls():
+    small = full(oblique((9, 8, 7)))
+    own = cloud(small, small.grid.to_world((4.2, 4.1, 3.3)), within=2.0)
+    assert add_controls(own, small, 5) is own
+    _, made, _ = with_controls(count=0)
+    assert len(made.table) == 31
+
+
+@pytest.mark.parametrize(
+    "storage", [((1, 2, 0), (1, -1, 1)), ((0, 1, 2), (-1, -1, -1)), ((2, 1, 0), (1, 1, -1))]
+)
+def test_controls_do_not_depend_on_the_storage_order(storage):
+    voxels = full(oblique(WIDE))
+    _, made, _ = with_controls(voxels)
+    turned = full(restored(voxels.grid, np.ones(WIDE), storage)[0])
+    own = cloud(turned, voxels.grid.to_world((5.3, 6.1, 5.2)))
+    found = add_controls(own, turned, 12, random_state=3)
+    np.testing.assert_allclose(
+        found.table[["x", "y", "z"]].to_numpy(float), made.table[["x", "y", "z"]].to_numpy(float)
+    )

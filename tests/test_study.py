@@ -117,7 +117,7 @@ def base(tmp_path_factory) -> Path:
 @pytest.fixture
 def audited(base, tmp_path, monkeypatch, capsys) -> Callable[..., SimpleNamespace]:
     """Run a changed copy of the study; the saved result, its first placement table and folder."""
-    monkeypatch.setattr("seedaudit.store._report", lambda: lambda audit, folder: None)
+    monkeypatch.setattr("seedaudit.report.write_report", lambda audit, folder: None)
     folder = tmp_path / "study"
     shutil.copytree(base, folder)
 

@@ -189,6 +189,5 @@ def _interval(values: FloatArray, fold_sizes: Sequence[int]) -> tuple[float, flo
     full, without = values[0], values[1:]
     if len(without) != len(fold_sizes):
         return float("nan"), float("nan")
-    # the upper bound of the jackknife is that of a share, which a ratio is not
-    low, high = delete_fold_interval(full - 2, without - 2, fold_sizes)
-    return float(low) + 2, float(high) + 2
+    low, high = delete_fold_interval(full, without, fold_sizes, most=np.inf)
+    return float(low), float(high)

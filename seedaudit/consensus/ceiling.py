@@ -79,7 +79,7 @@ def ceiling(
     sizes: Sequence[int],
     contrast: FloatArray,
     voxels: NDArray[np.bool_],
-    classes: Classes,
+    tails: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     *,
@@ -98,8 +98,9 @@ def ceiling(
     contrast : (p,)
     voxels : (V,) bool
         A voxels that every participant has.
-    classes : (1 + N, A) int8
-        Classes of all participants' maps, whose sizes the maps of halves are given.
+    tails : (1 + G, 1 + N, 2) int
+        Sizes in voxels of the + and - classes of every placement's map with all participants, and
+        without each fold (of those that hold anyone), which the maps of halves are given.
     regions : (A,) int
         Position of the region of each of these voxels, -1 for none.
     n_regions : int
@@ -130,25 +131,85 @@ def ceiling(
     rows = np.flatnonzero(voxels)
     r = _spatial(folds, rows, regions, n_regions, split)
     picked = some[_spread(len(some), CLASS_SPLITS)]
-    chosen = 1 + _spread(len(classes) - 1, CLASS_PLACEMENTS)
+    chosen = 1 + _spread(tails.shape[1] - 1, CLASS_PLACEMENTS)
     by_class = class_similarity(
-        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, classes, regions, n_regions,
+        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, tails, regions, n_regions,
         members[picked],
     )  # fmt: skip
+    floor = _controls(folds, controls, rows, control_keep, split)
+    return _assembled(r, by_class, floor, sizes, (len(some), len(picked), len(chosen)))
+
+
+def time_ceiling(
+    first: Moments,
+    second: Moments,
+    rows: NDArray[np.integer[Any]],
+    regions: NDArray[np.integer[Any]],
+    n_regions: int,
+    n_controls: int,
+    control_keep: NDArray[np.bool_],
+) -> Ceiling:
+    """Compare the halves of one participant's time series, by spatial r alone.
+
+    There is no interval: one participant says nothing about others.
+
+    Parameters
+    ----------
+    first, second : Moments
+        Of the two halves, for the placements of a cloud, the reported one first, and after them
+        the control seeds.
+    rows : (A,) int
+        Voxels to compare on.
+    regions : (A,) int
+    n_regions : int
+    n_controls : int
+        C
+    control_keep : (C, A) bool
+        As in `ceiling`.
+    """
+    usable = np.array([[True], [False], [False]])
+    halves_of = np.eye(2)[:, None, None, :] * usable[None, ..., None]
+    split = Halves(np.array([[True, False]]), usable, halves_of)
+    folds = (first, second)
+    r = _spatial(folds, rows, regions, n_regions, split)
+    n_cloud = len(r) - n_controls
+    controls = [fold.placements(slice(n_cloud, None)) for fold in folds]
+    floor = _controls(folds, controls, rows, control_keep, split)
+    return _assembled(r[:n_cloud], {}, floor, [1, 1], (1, 0, 0))
+
+
+def _controls(
+    folds: Sequence[Moments],
+    controls: Sequence[Moments],
+    rows: NDArray[np.integer[Any]],
+    keep: NDArray[np.bool_] | None,
+    split: Halves,
+) -> FloatArray:
+    """Cross-half spatial r of the control seeds, (C,)."""
+    return np.array(
+        [
+            cross_half_r(
+                fold_sums(folds, 0, rows[inside]),
+                fold_sums(controls, c, rows[inside]),
+                np.array([[0, np.count_nonzero(inside)]]),
+                split,
+            )[0, 0]
+            for c, inside in enumerate([] if keep is None else keep)
+        ]
+    )
+
+
+def _assembled(
+    r: FloatArray,
+    by_class: dict[str, FloatArray],
+    floor: FloatArray,
+    sizes: Sequence[int],
+    counts: tuple[int, int, int],
+) -> Ceiling:
+    """All similarities with their intervals; `counts` are those at the end of `Ceiling`."""
     values = {"spatial_r": (r[0], r[1:].mean(axis=0))}
     for name, found in by_class.items():
         values[name] = found[:, 0], mean_defined(found[:, 1:], axis=1)
-    floor = np.array(
-        [
-            cross_half_r(
-                fold_sums(folds, 0, rows[keep]),
-                fold_sums(controls, c, rows[keep]),
-                np.array([[0, np.count_nonzero(keep)]]),
-                split,
-            )[0, 0]
-            for c, keep in enumerate([] if control_keep is None else control_keep)
-        ]
-    )
     same = {name: _interval(found[0], sizes) for name, found in values.items()}
     shifted = {name: _interval(found[1], sizes) for name, found in values.items()}
     relative = {
@@ -158,8 +219,13 @@ def ceiling(
     whole, known = r[0, 0, 0], _known(same["spatial_r"])[0]
     return Ceiling(
         same, shifted, relative, _ratio(r[1:, 0, 0], whole, known), _ratio(floor, whole, known),
-        len(some), len(picked), len(chosen),
+        *counts,
     )  # fmt: skip
+
+
+def map_sizes(classes: Classes) -> NDArray[np.int_]:
+    """Voxels in class + and in class - of each map, (N, 2), from classes (N, V)."""
+    return np.stack([np.count_nonzero(classes == sign, axis=1) for sign in (1, -1)], axis=1)
 
 
 def _spread(total: int, most: int) -> NDArray[np.int_]:
@@ -193,7 +259,7 @@ def class_similarity(
     contrast: FloatArray,
     placements: NDArray[np.integer[Any]],
     voxels: NDArray[np.bool_],
-    classes: Classes,
+    tails: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     members: NDArray[np.bool_],
@@ -218,9 +284,8 @@ def class_similarity(
     reported: list[dict[tuple[int, int], Classes | None]] = []
     for m, placement in enumerate(placements):
         parts = [fold.placements(slice(placement, placement + 1)).voxels(voxels) for fold in folds]
-        tails = [int((classes[placement] == sign).sum()) for sign in (1, -1)]
         for s, inside in enumerate(members):
-            here = _half_classes(parts, sizes, contrast, inside, tails)
+            here = _half_classes(parts, sizes, contrast, inside, tails[:, placement])
             if m == 0:
                 reported.append(here)
             for variant in range(1 + len(folds)):
@@ -238,7 +303,7 @@ def _half_classes(
     sizes: Sequence[int],
     contrast: FloatArray,
     inside: NDArray[np.bool_],
-    tails: Sequence[int],
+    tails: NDArray[np.integer[Any]],
 ) -> dict[tuple[int, int], Classes | None]:
     """Classes by half and variant: 0 has all folds, variant 1 + g is without fold g.
 
@@ -248,21 +313,23 @@ def _half_classes(
     for half, chosen in enumerate((inside, ~inside)):
         total = merged(part for part, taken in zip(parts, chosen, strict=True) if taken)
         n = int(np.asarray(sizes)[chosen].sum())
-        made[half, 0] = _classes(uniform_estimate(total, n, contrast), tails)
-        for g, part in enumerate(parts):
-            made[half, 1 + g] = made[half, 0]
-            if chosen[g]:
-                rest = uniform_estimate(total - part, n - sizes[g], contrast)
-                made[half, 1 + g] = _classes(rest, tails)
+        everyone = uniform_estimate(total, n, contrast)
+        for variant, sizes_then in enumerate(tails):
+            g = variant - 1
+            if variant and chosen[g]:
+                found = uniform_estimate(total - parts[g], n - sizes[g], contrast)
+            else:
+                found = everyone
+            made[half, variant] = _classes(found, sizes_then)
     return made
 
 
-def _classes(estimate: Estimate | None, tails: Sequence[int]) -> Classes | None:
+def _classes(estimate: Estimate | None, tails: NDArray[np.integer[Any]]) -> Classes | None:
     """The so many largest t as class +, and the so many smallest as class -."""
     if estimate is None:
         return None
     t = np.nan_to_num(estimate.statistic)
-    positive, negative = tails
+    positive, negative = (int(size) for size in tails)
     ranks = [len(t) - max(positive, 1), max(negative, 1) - 1]
     upper, lower = np.partition(t, ranks)[ranks]
     # no class against the sign, also where the half has fewer voxels of it

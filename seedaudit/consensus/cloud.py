@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +19,7 @@ from seedaudit.consensus.agreement import (
     placement_to_sampling,
     safe_map,
 )
-from seedaudit.consensus.ceiling import Ceiling, ceiling
+from seedaudit.consensus.ceiling import Ceiling, ceiling, map_sizes
 from seedaudit.consensus.chance import fleiss_kappa, gwet_ac1
 from seedaudit.consensus.components import placement_share
 from seedaudit.consensus.floor import control_similarity, fold_residuals, residual_smoothness
@@ -41,7 +41,7 @@ from seedaudit.sweep.moments import Moments, merged
 DENSITIES = np.arange(1, 51) / 100
 VALUE_CUTS = np.arange(1, 21) / 20
 """Fisher z"""
-MAP_TOLERANCE, MAP_BYTES = 0.02, 4_500_000
+MAP_TOLERANCE, MAP_BYTES = 0.02, 5_000_000
 """Placement maps are kept with this largest error, Fisher z, as far as the space allows."""
 
 Table = dict[str, NDArray[Any]]
@@ -174,7 +174,7 @@ def conclude(
     classes_of = classifier(rule, space.ijk[voxels], space.shape)
     maps = group_maps(kept, design.contrast, design.least_count, classes_of)
     labels = space.labels[voxels]
-    whole, by_region = _without_each_fold(
+    without = _without_each_fold(
         kept, folds, fold_sizes, design, voxels, classes_of, labels, space.index
     )
     complete = voxels.copy()
@@ -183,9 +183,9 @@ def conclude(
     counts = class_counts(maps.classes[1:])
     stability = gwet_ac1(counts)
     sizes = [size for size in fold_sizes if size]
-    low, high = delete_fold_interval(np.array(stability), whole, sizes)
+    low, high = delete_fold_interval(np.array(stability), without.whole, sizes)
     regional = delete_fold_interval(
-        regional_stability(labels, space.index, maps.classes[1:]), by_region, sizes
+        regional_stability(labels, space.index, maps.classes[1:]), without.regional, sizes
     )
     effects = region_effects(maps.effects, labels, space.index)
     interval = bootstrap_interval(
@@ -197,7 +197,7 @@ def conclude(
         fold_sizes,
         design.contrast,
         complete,
-        maps.classes[:, complete[voxels]],
+        np.concatenate([map_sizes(maps.classes[:, complete[voxels]])[None], without.sizes]),
         region_rows(space.labels[complete], space.index),
         len(space.index),
         controls=controls.folds,
@@ -266,6 +266,16 @@ def region_effects(
     return result
 
 
+class _WithoutFold(NamedTuple):
+    """Stability of the whole map (G,) and of the regions (G, K), and map sizes (G, 1 + N, 2) in
+    voxels that everybody has, with each fold left out in turn.
+    """
+
+    whole: NDArray[np.float64]
+    regional: NDArray[np.float64]
+    sizes: NDArray[np.int_]
+
+
 def _without_each_fold(
     kept: Moments,
     folds: Sequence[Moments],
@@ -275,19 +285,23 @@ def _without_each_fold(
     classes_of: Classifier,
     labels: NDArray[np.int32],
     index: NDArray[np.int_],
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Stability of the whole map (G,) and of the regions (G, K) with one fold left out."""
-    whole, regional = [], []
+) -> _WithoutFold:
+    whole, regional, sizes = [], [], []
+    complete = kept.count == len(design.matrix)
     for fold, size in zip(folds, fold_sizes, strict=True):
         if not size or len(fold_sizes) < 2:
             continue
         rest = kept - fold.voxels(voxels)
-        classes = group_maps(rest, design.contrast, design.least_count - size, classes_of).classes[
-            1:
-        ]
-        whole.append(gwet_ac1(class_counts(classes)))
-        regional.append(regional_stability(labels, index, classes))
-    return np.array(whole), np.array(regional).reshape(len(regional), len(index))
+        needed = design.least_count - size
+        classes = group_maps(rest, design.contrast, needed, classes_of).classes
+        whole.append(gwet_ac1(class_counts(classes[1:])))
+        regional.append(regional_stability(labels, index, classes[1:]))
+        sizes.append(map_sizes(classes[:, complete]))
+    return _WithoutFold(
+        np.array(whole),
+        np.array(regional).reshape(len(regional), len(index)),
+        np.array(sizes).reshape(len(sizes), kept.zz.shape[0], 2),
+    )
 
 
 def _maps(maps: GroupMaps, counts: NDArray[np.int32], safe: float) -> Table:

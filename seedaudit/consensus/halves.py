@@ -112,7 +112,7 @@ def fold_sums(
     folds: Sequence[Moments], placement: int, voxels: NDArray[np.integer[Any]]
 ) -> FloatArray:
     """The x'z of every fold at one placement, (G * p, V) in the order of `voxels`."""
-    return np.concatenate([fold.xtz[:, placement][:, voxels] for fold in folds])
+    return np.concatenate([fold.xtz[:, placement][:, voxels] for fold in folds], dtype=np.float64)
 
 
 def cross_half_r(

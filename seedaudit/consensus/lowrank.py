@@ -89,14 +89,15 @@ def low_rank(
     offset = codes[0] * mean_step
     left = maps - offset.astype(np.float32)
     lengths, vectors = _principal(left)
-    steps, size = [mean_step], len(packed(codes[0]))
-    errors = [_largest(left)]
-    for length, vector in zip(lengths, vectors.T, strict=True):
-        if errors[-1] < tolerance:
-            break
-        # components are orthogonal, so what is left gives the same pattern as the maps
-        pattern = vector.astype(np.float32) @ left / length
-        weight = vector * length
+    steps, weights = [mean_step], [np.zeros(0)]
+    size, errors = len(packed(codes[0])), [_largest(left)]
+    while errors[-1] >= tolerance and lengths.max(initial=0.0) > 0:
+        # a vector may come again, for what the rounding of its pattern has left over
+        k = int(lengths.argmax())
+        pattern = vectors[:, k].astype(np.float32) @ left
+        length = float(np.linalg.norm(pattern))
+        pattern /= length
+        weight = vectors[:, k] * length
         step = max(
             _largest(pattern) / LARGEST_CODE,
             2 * tolerance * _ROUNDING_SHARE / _largest(weight),
@@ -105,14 +106,15 @@ def low_rank(
         size += len(packed(code))
         if size > most_bytes:
             break
-        codes.append(code)
-        steps.append(step)
         for part in _blocks(left):
             left[:, part] -= np.outer(weight, code[part] * step).astype(np.float32)
+        lengths[k] = length * np.linalg.norm(pattern - code * step)
+        codes.append(code)
+        steps.append(step)
+        weights.append(weight)
         errors.append(_largest(left))
-    kept = len(codes) - 1
-    weights = vectors[:, :kept] * lengths[:kept]
-    return LowRank(np.array(codes), np.array(steps), weights, np.array(errors))
+    kept = np.array(weights[1:]).reshape(-1, len(maps)).T
+    return LowRank(np.array(codes), np.array(steps), kept, np.array(errors))
 
 
 def packed(codes: NDArray[np.int8]) -> bytes:

@@ -114,8 +114,8 @@ def steadier_seed(
         ``share_chosen``, the share of choices that fell on the candidate; ``on_front``: no
         candidate that moves as little or less is as steady or steadier; ``recommended``.
 
-        In the row of a recommended move, ``stability_out`` and the gain with its interval are
-        those of the search, so that the choice among all candidates is paid for.
+        In the row of a recommended move the gain and its interval are those of the search, so that
+        the choice among all candidates is paid for.
 
     Raises
     ------
@@ -138,9 +138,10 @@ def steadier_seed(
     needed = np.concatenate([everybody, *(np.concatenate(pair) for pair in sides)])
     sets, where = np.unique(needed, axis=0, return_inverse=True)
     found = scores_of(sets)
+    # a candidate without a score in some set is never chosen in any
+    known = np.isfinite(found.stability).all(axis=0)
     scores = Scores(
-        np.where(np.isnan(found.stability), -np.inf, found.stability),
-        np.nan_to_num(found.likeness, nan=-1.0),
+        np.where(known, found.stability, -np.inf), np.nan_to_num(found.likeness, nan=-1.0)
     )
 
     ends = np.cumsum([1, *(2 * len(choosing) for choosing, _ in sides)])
@@ -156,7 +157,6 @@ def steadier_seed(
     table = _table(full, without, total, moved, fold_sizes, keep_similarity, level)
     table["recommended"] = np.arange(len(moved)) == recommended
     if recommended:
-        table["stability_out"][recommended] = full.chosen_out
         for name, value in (("gain", full.gain), ("gain_low", low), ("gain_high", high)):
             table[name][recommended] = value
     return Search(
@@ -222,7 +222,6 @@ def _table(
     keep_similarity: float,
     level: float,
 ) -> dict[str, NDArray[Any]]:
-    # a candidate without a score in some half has none at all
     finite = [
         np.where(np.isfinite(one.stability), one.stability, np.nan) for one in (full, *without)
     ]
@@ -234,7 +233,7 @@ def _table(
     return {
         "moved_mm": np.asarray(moved, dtype=np.float64),
         "stability_in": np.where(np.isfinite(total.stability[0]), total.stability[0], np.nan),
-        "stability_out": stability.copy(),
+        "stability_out": stability,
         "gain": gains[0],
         "gain_low": low,
         "gain_high": high,

@@ -11,7 +11,8 @@ from sklearn.isotonic import IsotonicRegression
 
 FloatArray = NDArray[np.float64]
 
-DIRECTIONS = ("all", "left", "right", "anterior", "posterior", "superior", "inferior")
+DIRECTIONS = ("all", "left", "right", "posterior", "anterior", "inferior", "superior")
+"""All placements, then the sectors in the order -x, +x, -y, +y, -z, +z."""
 
 TARGETS = {
     "dice_positive": 0.8,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -86,9 +87,12 @@ def solve_model(moments: Moments, contrast: NDArray[np.float64], needed: int) ->
     else:
         usable = moments.count >= max(needed, 1)
         df = np.where(usable, np.inf, np.nan)
-    inverse = np.full_like(moments.xtx, np.nan)
-    if usable.any():
-        inverse[:, :, usable] = _inverse(moments.xtx[:, :, usable])
+    if usable.all():
+        inverse = _inverse(moments.xtx)
+    else:
+        inverse = np.full_like(moments.xtx, np.nan)
+        if usable.any():
+            inverse[:, :, usable] = _inverse(moments.xtx[:, :, usable])
     weights = np.einsum("ijv,j->iv", inverse, contrast)
     return Model(inverse, weights, np.einsum("iv,i->v", weights, contrast), df)
 
@@ -108,15 +112,41 @@ def estimate(moments: Moments, model: Model, placement: int) -> Estimate:
 
     The residual sum of squares is z'z - (X'z)'(X'X)^-1(X'z).
     """
-    xtz = moments.xtz[:, placement]
-    effect = np.einsum("iv,iv->v", model.weights, xtz)
-    if moments.variance is None:
-        explained = np.einsum("iv,ijv,jv->v", xtz, model.inverse, xtz)
-        residual = np.maximum(moments.zz[placement] - explained, 0)
-        variance = residual / model.df * model.spread
+    known = None if moments.variance is None else moments.variance[placement]
+    return estimate_sums(moments.xtz[:, placement], moments.zz[placement], known, model)
+
+
+def estimate_sums(
+    xtz: NDArray[np.floating[Any]],
+    zz: NDArray[np.floating[Any]],
+    known: NDArray[np.floating[Any]] | None,
+    model: Model,
+) -> Estimate:
+    """Estimate the contrast from the sums of one placement.
+
+    Parameters
+    ----------
+    xtz : (p, V)
+        X'z
+    zz : (V,)
+        z'z
+    known : (V,) or None
+        Sampling variance of z, where it is known (one participant: the effect is z itself).
+    model : Model
+    """
+    same = model.inverse.strides[-1] == 0
+    inverse, weights = model.inverse, model.weights
+    if same:
+        # one design for all voxels: small matrices in the place of fields of matrices
+        effect = weights[:, 0] @ xtz
+        explained = np.einsum("iv,iv->v", xtz, inverse[:, :, 0] @ xtz)
     else:
-        # one participant: the effect is z itself
-        variance = moments.variance[placement] * model.weights[0] ** 2
+        effect = np.einsum("iv,iv->v", weights, xtz)
+        explained = np.einsum("iv,ijv,jv->v", xtz, inverse, xtz)
+    if known is None:
+        variance = np.maximum(zz - explained, 0) / model.df * model.spread
+    else:
+        variance = known * weights[0] ** 2
     standard_error = np.sqrt(variance)
     statistic = np.full_like(effect, np.nan)
     np.divide(effect, standard_error, out=statistic, where=standard_error > 0)

@@ -67,8 +67,16 @@ class GroupMaps:
 
 
 Classifier = Callable[
-    [NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]], NDArray[np.int8]
+    [NDArray[np.float64], NDArray[np.float64], float | NDArray[np.float64]], NDArray[np.int8]
 ]
+
+
+def common_df(df: NDArray[np.float64]) -> float | NDArray[np.float64]:
+    """One number where all estimable voxels have the same degrees of freedom, else the field."""
+    known = df[~np.isnan(df)]
+    if len(known) and (known == known[0]).all():
+        return float(known[0])
+    return df
 
 
 def classifier(
@@ -77,7 +85,9 @@ def classifier(
     """A function (statistic, effect, df) -> classes for the voxels `ijk` (V, 3)."""
 
     def classes(
-        statistic: NDArray[np.float64], effect: NDArray[np.float64], df: NDArray[np.float64]
+        statistic: NDArray[np.float64],
+        effect: NDArray[np.float64],
+        df: float | NDArray[np.float64],
     ) -> NDArray[np.int8]:
         made = classify(
             statistic, effect, df, rule.rule, rule.level, scale=rule.scale, per_tail=rule.per_tail
@@ -108,10 +118,11 @@ def group_maps(
     statistics = np.empty(shape, np.float32)
     classes = np.empty(shape, np.int8)
     standard_error = np.empty(shape[1])
+    df = common_df(model.df)
     for i in range(shape[0]):
         found = estimate(moments, model, i)
         effects[i], statistics[i] = found.effect, found.statistic
-        classes[i] = classes_of(found.statistic, found.effect, model.df)
+        classes[i] = classes_of(found.statistic, found.effect, df)
         if i == 0:
             standard_error = found.standard_error
     return GroupMaps(effects, statistics, classes, standard_error, model.df)

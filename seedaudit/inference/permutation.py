@@ -46,7 +46,7 @@ class MaximumTest:
         """Share of the rearrangements whose maximum is at least as large, (M,)."""
         tested = self.statistics if statistics is None else statistics
         below = np.searchsorted(np.sort(self.maxima), tested * (1 - _SLACK), side="left")
-        return 1 - below / len(self.maxima)
+        return (len(self.maxima) - below) / len(self.maxima)
 
     def critical_value(self, level: float) -> float:
         """Smallest statistic whose family-wise p is at most `level`; inf where none can be."""

@@ -149,7 +149,11 @@ def classify(
         below = signed <= -density_cuts(-signed, [level])[0]
         passes = np.where(signed > 0, above, below)
     else:
-        passes = np.abs(signed) >= critical_value(signed, df, rule, level)
+        cut = critical_value(signed, df, rule, level)
+        # a comparison with NaN is false: class 0; a statistic of 0 has no sign
+        above = (signed >= cut) & (signed > 0)
+        below = (signed <= -cut) & (signed < 0)
+        return above.astype(np.int8) - below.astype(np.int8)
     return np.where(passes & tested, np.sign(signed), 0).astype(np.int8)
 
 
@@ -234,16 +238,15 @@ def _step_up_cut(
     """
     first = _two_sided_quantile(level, dfs)
     if dfs.size == 1:
-        ascending = [np.sort(magnitude[magnitude >= first[0]])]
+        survivors = [magnitude[magnitude >= first[0]]]
     else:
         passes = magnitude >= first[which]
-        ascending = [np.sort(magnitude[passes & (which == d)]) for d in range(dfs.size)]
-    k, passing = count, sum(part.size for part in ascending)
+        survivors = [magnitude[passes & (which == d)] for d in range(dfs.size)]
+    k, passing = count, sum(part.size for part in survivors)
     while passing < k:
+        # the cut only rises, so that what fails once is never looked at again
         k = passing
         values = _two_sided_quantile(k * level / count, dfs)
-        passing = sum(
-            part.size - int(np.searchsorted(part, value))
-            for part, value in zip(ascending, values, strict=True)
-        )
+        survivors = [part[part >= value] for part, value in zip(survivors, values, strict=True)]
+        passing = sum(part.size for part in survivors)
     return k * level / count

@@ -16,7 +16,7 @@ from formulaic.parser.algos.tokenize import tokenize
 from numpy.typing import NDArray
 from scipy import linalg
 
-from seedaudit.errors import DataError, Problem, StudyError
+from seedaudit.errors import DataError, Problem, StudyError, brief
 from seedaudit.inputs.effect import parse_effect
 from seedaudit.inputs.tables import nearest, read_table
 
@@ -93,7 +93,7 @@ def build_design(
         if len(names) > 1:
             raise StudyError(
                 Problem(
-                    f"model {model!r}",
+                    f"model {brief(model)}",
                     f"{len(names)} columns, but no effect says what is tested",
                     f"effect = a sum of {', '.join(terms)}",
                 )
@@ -125,13 +125,13 @@ def _model_columns(model: str) -> tuple[set[str], set[str]]:
                 or (kind == "context" and text in "()")
             ):
                 refused.append(text)
-    except FormulaicError as error:
+    except (FormulaicError, RecursionError) as error:
         raise _model_error(model, error) from error
     if "~" in model.strip().lstrip("~") or model.count("~") > 1:
         refused.append("~ after the first place")
     problems = [
         Problem(
-            f"model {model!r}",
+            f"model {brief(model)}",
             f"{text!r} is not part of the notation",
             "columns of the table, + - * : ( ) 0 1, C(x), center(x), scale(x)",
         )
@@ -139,7 +139,7 @@ def _model_columns(model: str) -> tuple[set[str], set[str]]:
     ]
     problems += [
         Problem(
-            f"model {model!r}", f"{name!r} stands both as {name} and as C({name})", "one of them"
+            f"model {brief(model)}", f"{name!r} stands both as {name} and as C({name})", "one of them"
         )
         for name in sorted(factors & others)
     ]
@@ -161,7 +161,7 @@ def _read_columns(
     if table_path is None:
         if needed:
             found = f"it names {', '.join(needed)}, but there is no participants table"
-            raise StudyError(Problem(f"model {model!r}", found, remedy="set [group] table"))
+            raise StudyError(Problem(f"model {brief(model)}", found, remedy="set [group] table"))
         return empty
     table = read_table(Path(table_path))
     if not needed:
@@ -175,7 +175,7 @@ def _read_columns(
         raise StudyError(
             *(
                 Problem(
-                    f"model {model!r}",
+                    f"model {brief(model)}",
                     f"{name!r} is no column of {where}",
                     remedy=nearest(name, table.columns),
                 )
@@ -251,21 +251,22 @@ def _model_matrix(model: str, data: pd.DataFrame) -> ModelMatrix:
         # An empty context, so that no name of this module is seen; and no row dropped in silence.
         with np.errstate(divide="ignore", invalid="ignore"):
             matrix = Formula(model).get_model_matrix(data, context={}, na_action="ignore")
-    except (FormulaicError, TypeError, ValueError) as error:
+    except (FormulaicError, TypeError, ValueError, RecursionError) as error:
         raise _model_error(model, error) from error
     if not isinstance(matrix, ModelMatrix) or matrix.shape[1] == 0:
-        raise StudyError(Problem(f"model {model!r}", "it has no columns", "~ 1, ~ arm + age, ..."))
+        raise StudyError(Problem(f"model {brief(model)}", "it has no columns", "~ 1, ~ arm + age, ..."))
     return matrix
 
 
 def _model_error(model: str, error: Exception) -> StudyError:
     text = str(error).strip().splitlines()[0] if str(error).strip() else type(error).__name__
-    return StudyError(Problem(f"model {model!r}", text, "Wilkinson notation, such as ~ arm + age"))
+    text = "it is nested too deeply" if isinstance(error, RecursionError) else text
+    return StudyError(Problem(f"model {brief(model)}", text, "Wilkinson notation, such as ~ arm + age"))
 
 
 def _check_rank(model: str, values: NDArray[np.float64], names: tuple[str, ...]) -> None:
     n, p = values.shape
-    where = f"model {model!r}"
+    where = f"model {brief(model)}"
     if not np.isfinite(values).all():
         bad = [
             name

@@ -40,6 +40,11 @@ class Run:
     confounds: Path | None = None
     mask: Path | None = None
 
+    @property
+    def files(self) -> tuple[Path, ...]:
+        """The files that there must be."""
+        return tuple(path for path in (self.bold, self.confounds, self.mask) if path is not None)
+
 
 def find_runs(
     runs: str | Sequence[str] | None,
@@ -73,20 +78,35 @@ def find_runs(
     DataError
         With every problem of the table and every missing or repeated file.
     """
+    found, problems = list_runs(runs, base, bids, select)
+    if problems:
+        raise DataError(*problems)
+    return found
+
+
+def list_runs(
+    runs: str | Sequence[str] | None,
+    base: Path,
+    bids: str | None = None,
+    select: Mapping[str, str] | None = None,
+) -> tuple[tuple[Run, ...], list[Problem]]:
+    """As `find_runs`, but what is wrong with some runs is given beside all that are listed."""
     if isinstance(runs, str) and runs.endswith(".tsv"):
-        found, problems = _from_table(base / runs)
+        found, problems = _from_table(_expanded(base, runs))
     elif isinstance(runs, str):
         found, problems = _from_paths(_matching(runs, base)), []
     elif runs is not None:
-        found, problems = _from_paths([base / path for path in runs]), []
+        found, problems = _from_paths([_expanded(base, path) for path in runs]), []
     elif bids is not None:
-        found, problems = _from_paths(_bids_files(base / bids, select or {})), []
+        found, problems = _from_paths(_bids_files(_expanded(base, bids), select or {})), []
     else:
         raise StudyError(Problem("data", "no runs are given", "runs or bids"))
-    problems += _missing_files(found) + _repeated(found)
-    if problems:
-        raise DataError(*problems)
-    return tuple(found)
+    return tuple(found), problems + _missing_files(found) + _repeated(found)
+
+
+def _expanded(base: Path, text: str) -> Path:
+    """A path as typed, from the base on; ~ is the home of the user, as everywhere in a study."""
+    return base / os.path.expanduser(text)
 
 
 def _from_table(path: Path) -> tuple[list[Run], list[Problem]]:
@@ -108,15 +128,20 @@ def _from_table(path: Path) -> tuple[list[Run], list[Problem]]:
         ]
         if gaps:
             continue
-        files = {name: path.parent / row[name] for name in ("confounds", "mask") if row.get(name)}
-        bold = path.parent / row["bold"]
+        files = {
+            name: _expanded(path.parent, row[name])
+            for name in ("confounds", "mask")
+            if row.get(name)
+        }
+        bold = _expanded(path.parent, row["bold"])
         found.append(Run(row["participant_id"], row.get("run") or "", bold, **files))
     return found, problems
 
 
 def _matching(pattern: str, base: Path) -> list[Path]:
     # Joining leaves an absolute pattern as it is; the base itself is no pattern.
-    paths = glob.glob(str(Path(glob.escape(str(base)), pattern)), recursive=True)
+    full = Path(glob.escape(str(base)), os.path.expanduser(pattern))
+    paths = glob.glob(str(full), recursive=True)
     images = sorted(Path(path) for path in paths if path.endswith(_IMAGE))
     if not images:
         found = f"{pattern!r} matches no .nii or .nii.gz file"
@@ -186,7 +211,7 @@ def _confounds(image: Path) -> Path | None:
         f"{image.name.removesuffix('.gz').removesuffix('.nii')}_confounds.tsv",
         f"{stem}_confounds.tsv",
     )
-    return next((path for name in names if (path := image.with_name(name)).is_file()), None)
+    return next((path for name in names if is_file(path := image.with_name(name))), None)
 
 
 def _stem(image: Path) -> str:
@@ -202,15 +227,24 @@ def _missing_files(runs: Sequence[Run]) -> list[Problem]:
     return [
         Problem(str(path), f"no such file ({what} of {run.participant})", "", "mend the path")
         for run, what, path in files
-        if path is not None and not path.is_file()
+        if path is not None and not is_file(path)
     ]
+
+
+def is_file(path: Path) -> bool:
+    """Whether there is such a file; a text that can be no path is none."""
+    try:
+        return path.is_file()
+    except (OSError, ValueError):  # a name that is too long, or holds a zero byte
+        return False
 
 
 def _repeated(runs: Sequence[Run]) -> list[Problem]:
     by_file: dict[Path, list[str]] = {}
     by_label: dict[tuple[str, str], list[str]] = {}
     for run in runs:
-        by_file.setdefault(run.bold.resolve(), []).append(f"{run.participant} {run.run}".strip())
+        file = Path(os.path.realpath(run.bold)) if is_file(run.bold) else run.bold
+        by_file.setdefault(file, []).append(f"{run.participant} {run.run}".strip())
         by_label.setdefault((run.participant, run.run), []).append(run.bold.name)
     problems = [
         Problem(

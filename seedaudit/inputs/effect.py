@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping
+from typing import NoReturn
 
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.errors import Problem, StudyError
+from seedaudit.errors import Problem, StudyError, brief
 from seedaudit.inputs.tables import nearest
 
 _NUMBER = re.compile(r"\d+(\.\d*)?([eE][+-]?\d+)?|\.\d+([eE][+-]?\d+)?")
@@ -37,11 +38,17 @@ def parse_effect(text: str, terms: Mapping[str, NDArray[np.float64]]) -> NDArray
         number that stands alone, or weights that cancel to nothing.
     """
     parser = _Parser(text, terms)
-    weights = parser.sum()
+    try:
+        with np.errstate(over="ignore", invalid="ignore"):
+            weights = parser.sum()
+    except RecursionError:
+        parser.fail("parentheses and signs are nested too deeply")
     if parser.kind != "end":
         parser.fail(f"{parser.token!r} is not expected here")
     if weights[-1] != 0:
         parser.fail("a number stands alone")
+    if not np.isfinite(weights).all():
+        parser.fail("the weights are not finite")
     if np.allclose(weights, 0, rtol=0, atol=1e-12):
         parser.fail("the weights cancel: nothing is asked")
     return weights[:-1]
@@ -58,9 +65,9 @@ class _Parser:
         self.at = 0
         self.advance()
 
-    def fail(self, found: str, remedy: str = "") -> None:
+    def fail(self, found: str, remedy: str = "") -> NoReturn:
         allowed = "a sum of names, with numbers as factors: arm[a] - arm[b]"
-        raise StudyError(Problem(f"effect {self.text!r}", found, allowed, remedy))
+        raise StudyError(Problem(f"effect {brief(self.text)}", found, allowed, remedy))
 
     def advance(self) -> None:
         """Move to the next token; known names are matched whole, whatever signs they hold."""
@@ -78,7 +85,7 @@ class _Parser:
             self.kind, self.token = "number", number.group()
         else:
             unknown = word.group() if word else rest[0]
-            self.fail(f"unknown name {unknown!r}", nearest(unknown, self.terms))
+            self.fail(f"unknown name {brief(unknown)}", nearest(unknown, self.terms))
         self.at += len(self.token) if rest else 0
 
     def take(self, signs: str) -> str:

@@ -80,7 +80,12 @@ def read_image_header(path: str | Path) -> RunHeader:
     return _judged(Path(path), single=True)
 
 
-def _judged(path: Path, *, single: bool, declared: RunHeader | None = None) -> RunHeader:
+def read_map_header(path: str | Path) -> RunHeader:
+    """Read and judge the header of an image of one or more volumes, as `read_header` does."""
+    return _judged(Path(path), single=None)
+
+
+def _judged(path: Path, *, single: bool | None, declared: RunHeader | None = None) -> RunHeader:
     where = str(path)
     header, compressed = _nifti_header(path)
     problems: list[Problem] = []
@@ -99,7 +104,7 @@ def _judged(path: Path, *, single: bool, declared: RunHeader | None = None) -> R
     elif single and n_volumes > 1:
         found, remedy = f"a 4-D image ({n_volumes} volumes)", "give one volume of it"
         problems.append(Problem(where, found, "a 3-D image", remedy))
-    elif not single and n_volumes < 2:
+    elif single is False and n_volumes < 2:
         allowed = "a 4-D run of at least two volumes"
         remedy = "give the whole series, all volumes in one file"
         problems.append(Problem(where, "a 3-D image (one volume)", allowed, remedy))
@@ -136,11 +141,13 @@ def _nifti_header(path: Path) -> tuple[nib.Nifti1Header, bool]:
         del block[stream.fill(block) :]
     if not block:
         raise DataError(Problem(str(path), "an empty file", "NIfTI", "copy the file again"))
-    sizes = {int.from_bytes(block[:4], "little"), int.from_bytes(block[:4], "big")}
+    # the size of the header tells the byte order: any other field may be damaged
+    orders = {int.from_bytes(block[:4], "little"): "<", int.from_bytes(block[:4], "big"): ">"}
     for size, (header_class, magic) in _FORMATS.items():
         at = slice(344, 348) if size == 348 else slice(4, 12)
-        if size in sizes and len(block) >= size and block[at] == magic:
-            return header_class(bytes(block[:size]), check=False), stream.compressed
+        if size in orders and len(block) >= size and block[at] == magic:
+            header = header_class(bytes(block[:size]), endianness=orders[size], check=False)
+            return header, stream.compressed
     raise DataError(
         Problem(
             str(path),
@@ -209,7 +216,10 @@ def _affine(
                 f"the {form} (code {codes[form]}) {grid.affine[:3].round(4).tolist()}"
                 for form, grid in zip(("sform", "qform"), grids, strict=True)
             )
-            warnings.append(f"{both} disagree by up to {gap:.3g} mm at a corner; the sform is used")
+            mirrored = " and one mirrors the other" if grids[0].mirrors(grids[1]) else ""
+            warnings.append(
+                f"{both} disagree by up to {gap:.3g} mm at a corner{mirrored}; the sform is used"
+            )
     return usable[chosen].affine, codes[chosen]
 
 

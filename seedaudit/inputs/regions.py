@@ -18,6 +18,7 @@ from seedaudit.space.grid import Grid, VoxelSet
 
 DOSENBACH = "dosenbach2010"
 _DOSENBACH_RADIUS = 5.0  # mm
+_LARGEST_LABEL = 2**31 - 1
 _SLACK = 1e-6  # mm, as for every sphere
 
 
@@ -99,9 +100,10 @@ def _look_up(image: Path) -> tuple[NDArray[np.int64], tuple[str, ...]]:
         )
     problems = []
     numbers = pd.to_numeric(table["index"], errors="coerce")
-    for row in np.flatnonzero(numbers.isna() | (numbers < 0) | (numbers % 1 != 0)):
+    for row in np.flatnonzero(~numbers.between(0, _LARGEST_LABEL) | (numbers % 1 != 0)):
         found = f"row {row + 1}: index {table['index'].iloc[row] or 'n/a'}"
-        problems.append(Problem(where, found, "a whole number, 0 (background) or more"))
+        allowed = f"a whole number, 0 (background) to {_LARGEST_LABEL}"
+        problems.append(Problem(where, found, allowed))
     for row in np.flatnonzero(table["name"].isna()):
         problems.append(Problem(where, f"row {row + 1}: no name"))
     table = table.assign(index=numbers)[numbers != 0]  # 0 is the background (BIDS)

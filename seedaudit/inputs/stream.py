@@ -55,6 +55,12 @@ class Stream:
             count += got
         return count
 
+    def skip(self, count: int) -> None:
+        """Leave out so many bytes, or what there is of them."""
+        while count > 0:
+            got = len(self._source.read(min(count, _CHUNK)))
+            count = count - got if got else 0
+
     def finish(self) -> str:
         """Read to the end and return the SHA-256 of the file as stored.
 

@@ -28,6 +28,10 @@ __all__ = [
 ]
 
 
+LARGEST_VALUE = 1e15
+"""No signal is larger: what is beyond (values of the wrong byte order) counts as not finite."""
+
+
 @dataclass(frozen=True)
 class RunData:
     """The voxel series of one run.
@@ -39,7 +43,7 @@ class RunData:
     background : (V,) float32
         The first volume, in stored units.
     finite : (V,) bool
-        Whether the voxel holds finite values in every volume.
+        Whether the voxel holds finite values, none beyond `LARGEST_VALUE`, in every volume.
     digest : str
         SHA-256 of the file as stored.
     """
@@ -89,7 +93,7 @@ def read_run(
         out = np.empty((header.n_volumes, len(voxels)), np.float32)
     series = out[: header.n_volumes]
     finite = np.ones(len(voxels), bool)
-    may_lack_values = header.dtype.kind == "f" or smooth > 0
+    may_lack_values = header.dtype.kind == "f" or header.dtype.itemsize == 8 or smooth > 0
 
     def at_voxels(values: NDArray[Any]) -> NDArray[Any]:
         return _smoothed(values, header.grid, smooth)[order] if smooth > 0 else values
@@ -99,7 +103,7 @@ def read_run(
             values = stored[taken]
             if smooth > 0:
                 values = values.astype(work)
-                bad = ~np.isfinite(values)
+                bad = ~_plausible(values)
                 values[bad] = zero
                 finite &= ~bad[order]
             if t == 0:
@@ -109,7 +113,7 @@ def read_run(
             else:
                 np.subtract(values, first, out=series[t], casting="same_kind")
             if may_lack_values:
-                finite &= np.isfinite(series[t])
+                finite &= _plausible(series[t])
         digest = stream.finish()
         background = at_voxels(first).astype(np.float32)
     if not finite.all():
@@ -191,6 +195,11 @@ def _check_grid(path: str | Path, own: Grid, wanted: Grid, beside: str = "the au
         )
 
 
+def _plausible(values: NDArray[Any]) -> NDArray[np.bool_]:
+    """Whether each value is a number of a size that a sum of squares in float32 can bear."""
+    return np.asarray(np.abs(values) <= LARGEST_VALUE)
+
+
 def _difference_type(dtype: np.dtype) -> type[np.float32] | type[np.float64]:
     # float32 holds the difference of two 16-bit integers exactly, and that of two float32 values
     # as well as its result can be stored; anything wider needs float64.
@@ -207,13 +216,14 @@ def _smoothed(values: NDArray[Any], grid: Grid, fwhm: float) -> NDArray[Any]:
 
 def _scaled(stored: NDArray[Any], header: RunHeader) -> NDArray[np.float64]:
     slope, intercept = header.scaling
-    values = stored.astype(np.float64) * slope + intercept
+    with np.errstate(over="ignore", invalid="ignore"):
+        values = stored.astype(np.float64) * slope + intercept
     return values.reshape(header.grid.shape, order="F")
 
 
 def _volumes(header: RunHeader, stream: Stream) -> Iterator[NDArray[Any]]:
     """Yield each volume flat, in file order; the next one overwrites it."""
-    stream.fill(bytearray(header.offset))
+    stream.skip(header.offset)
     buffer = bytearray(prod(header.grid.shape) * header.dtype.itemsize)
     values = np.frombuffer(buffer, header.dtype)
     for t in range(header.n_volumes):

@@ -6,7 +6,6 @@ import base64
 import hashlib
 import re
 from collections.abc import Iterable
-from dataclasses import dataclass
 from io import StringIO
 from pathlib import Path
 from typing import Any
@@ -14,7 +13,6 @@ from urllib.parse import quote
 
 import numpy as np
 import pandas as pd
-from jinja2 import Environment
 from markupsafe import Markup
 
 from seedaudit.report import CAUTION, explorer_charts
@@ -34,7 +32,14 @@ IDENTIFYING = ("participant_id", "reason")
 """Columns that may name a participant."""
 
 
-def write_explorer(seed: SeedAudit, audit: Audit, folder: Path, *, labels: bool = False) -> None:
+def write_explorer(
+    seed: SeedAudit,
+    audit: Audit,
+    folder: Path,
+    *,
+    between: pd.DataFrame | None = None,
+    labels: bool = False,
+) -> None:
     """Write report.html of one seed into its folder.
 
     Parameters
@@ -43,26 +48,28 @@ def write_explorer(seed: SeedAudit, audit: Audit, folder: Path, *, labels: bool 
         One of the seeds of `audit`.
     audit : Audit
     folder : path
+    between : DataFrame, optional
+        The table `seeds`, which compares the seeds of the audit.
     labels : bool
         Name the participants.
     """
-    page = explorer_page(seed, audit, labels=labels)
+    page = explorer_page(seed, audit, between=between, labels=labels)
     (folder / "report.html").write_text(page, encoding="utf-8", newline="\n")
 
 
-def explorer_page(seed: SeedAudit, audit: Audit, *, labels: bool = False) -> str:
+def explorer_page(
+    seed: SeedAudit, audit: Audit, *, between: pd.DataFrame | None = None, labels: bool = False
+) -> str:
     """The page of one seed as text; see `write_explorer`."""
-    environment = templates()
-    script = "\n".join(_source(environment, name) for name in SCRIPTS)
-    script = f'"use strict";\n{{\n{script}}}\n'
-    style = _source(environment, "explorer.css")
+    script, style = page_script(), _source("explorer.css")
     facts = page_facts(seed, audit, labels=labels) | {
+        "between": _rows(between),
         "script": Markup(script),
         "style": Markup(style),
         "policy": _policy(script, style),
     }
     numbers, arrays = page_data(seed)
-    template = environment.get_template("explorer.html.jinja")
+    template = templates().get_template("explorer.html.jinja")
     maps = seed.placement_maps
     if maps is None or not seed.summary["n_analysis_voxels"]:
         return template.render(facts, numbers=numbers, arrays=arrays)
@@ -81,15 +88,23 @@ def explorer_page(seed: SeedAudit, audit: Audit, *, labels: bool = False) -> str
             over -= len(texts.pop())
 
 
-def _source(environment: Environment, name: str) -> str:
-    assert environment.loader is not None
-    return environment.loader.get_source(environment, name)[0]
+def page_script() -> str:
+    """The script of the page: its parts in one block, so that nothing of it is global."""
+    parts = "\n".join(_source(name) for name in SCRIPTS)
+    return f'"use strict";\n{{\n{parts}}}\n'
+
+
+def _source(name: str) -> str:
+    loader = templates().loader
+    assert loader is not None
+    return loader.get_source(templates(), name)[0]
 
 
 def _policy(script: str, style: str) -> str:
     """What the page may do: run its own script, and nothing from anywhere else."""
     script_digest, style_digest = (
-        base64.b64encode(hashlib.sha256(text.encode()).digest()).decode() for text in (script, style)
+        base64.b64encode(hashlib.sha256(text.encode()).digest()).decode()
+        for text in (script, style)
     )
     return (
         f"default-src 'none'; script-src 'sha256-{script_digest}'; "
@@ -121,7 +136,9 @@ def page_facts(seed: SeedAudit, audit: Audit, *, labels: bool) -> dict[str, Any]
         "region_places": _region_places(seed),
         "scale": charts.effect_scale(regions),
         "pairs": _pair_summary(tables.get("pairs")),
-        "thresholds": charts.threshold_charts(tables["thresholds"]) if "thresholds" in tables else [],
+        "thresholds": charts.threshold_charts(tables["thresholds"])
+        if "thresholds" in tables
+        else [],
         "claims": _rows(tables.get("claims")),
         "claims_asked": "claims" in audit.provenance["study"],
         "participants": charts.participant_chart(tables["participants"])
@@ -130,9 +147,8 @@ def page_facts(seed: SeedAudit, audit: Audit, *, labels: bool) -> dict[str, Any]
         "people": _people(tables.get("participants")),
         "labels": labels,
         "named": _named(tables.get("participants")) if labels else [],
-        "steadier": _rows(tables.get("steadier")),
+        **_steadier(tables.get("steadier")),
         "steadier_asked": "steadier" in audit.provenance["study"],
-        "seeds": _rows(tables.get("seeds")),
         "methods": methods_text(seed, audit),
         "downloads": _downloads(tables, labels=labels),
         "choices": _unnamed(audit.provenance.get("choices", ()), names, labels=labels),
@@ -144,6 +160,15 @@ def page_facts(seed: SeedAudit, audit: Audit, *, labels: bool) -> dict[str, Any]
 
 def _rows(table: pd.DataFrame | None) -> list[dict[str, Any]]:
     return [] if table is None else table.to_dict("records")
+
+
+def _steadier(table: pd.DataFrame | None) -> dict[str, Any]:
+    """The candidates worth a row, and the recommended one unless it is the reported seed."""
+    if table is None or not len(table):
+        return {"steadier": [], "moved": None}
+    shown = table[table["on_front"] | table["recommended"] | (table["moved_mm"] == 0)]
+    moved = shown[shown["recommended"] & (shown["moved_mm"] > 0)]
+    return {"steadier": _rows(shown), "moved": _rows(moved)[0] if len(moved) else None}
 
 
 def _roses(table: pd.DataFrame | None, farthest: float) -> list[dict[str, Any]]:
@@ -172,10 +197,9 @@ def _roses(table: pd.DataFrame | None, farthest: float) -> list[dict[str, Any]]:
 def _region_places(seed: SeedAudit) -> list[tuple[float, float, float] | None]:
     """A place to look at each region: its analysis voxel nearest to its centre of gravity, mm."""
     mask = seed.maps["analysis_mask"]
-    labels = np.asarray(seed.maps["region_labels"].dataobj) if len(seed.tables["regions"]) else None
+    labels = np.asarray(seed.maps["region_labels"].dataobj)
     places: list[tuple[float, float, float] | None] = []
     for index in seed.tables["regions"]["index"]:
-        assert labels is not None
         ijk = np.argwhere((labels == index) & (np.asarray(mask.dataobj) > 0))
         if not len(ijk):
             places.append(None)
@@ -245,7 +269,7 @@ def _unnamed(texts: Iterable[str], words: set[str], *, labels: bool) -> tuple[li
 def _downloads(tables: Any, *, labels: bool) -> list[dict[str, Any]]:
     """Each table as a data URL, or without one where it is too large to be carried."""
     offered = []
-    for name, table in tables.items():
+    for name, table in sorted(tables.items()):
         shown = table
         if name == "participants" and not labels:
             # in an order that comes from the numbers, so that it tells nobody apart

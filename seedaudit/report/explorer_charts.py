@@ -239,7 +239,7 @@ def participant_chart(table: pd.DataFrame) -> Chart | None:
     n = len(used)
     chart = Chart(
         "spatial r with the reported placement's map", (0.5, n + 0.5),
-        (np.floor(low * 10) / 10, 1.02), ("participants, in the order of their median", "spatial r"),
+        (np.floor(low * 10) / 10, 1.02), ("participants, ordered by their median", "spatial r"),
         whole=True,
     )  # fmt: skip
     rows = zip(used["median_spatial_r"], used["min_spatial_r"], strict=True)

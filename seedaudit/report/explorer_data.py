@@ -15,7 +15,7 @@ from matplotlib.colors import Colormap, LinearSegmentedColormap, to_rgb
 from numpy.typing import NDArray
 
 from seedaudit.consensus.lowrank import LowRank, packed
-from seedaudit.report.slices import body_frame, contested_places, grid_of
+from seedaudit.report.slices import body_frame, grid_of
 from seedaudit.report.style import ANATOMY, DIVERGING, INK
 from seedaudit.results import SeedAudit
 from seedaudit.space.grid import Grid, VoxelSet
@@ -37,8 +37,6 @@ GREYS = 63
 """Levels of the anatomy; more cannot be told apart under a map and cost space."""
 SHARES = 250
 """Code of a share of 1."""
-NEARLY = 1e-4
-"""Shorter shifts are no shift, mm."""
 
 
 def page_data(seed: SeedAudit) -> tuple[dict[str, Any], dict[str, str]]:
@@ -74,6 +72,7 @@ def page_data(seed: SeedAudit) -> tuple[dict[str, Any], dict[str, str]]:
         "voxels": len(voxels),
         "frame": body_frame(seed).tolist(),
         "edge": float(grid.voxel_sizes.min()),
+        "diagonal": float(np.linalg.norm(grid.voxel_sizes)),
         "at": list(seed.summary["at_mm"]),
         "within": float(seed.summary["within_mm"]),
         "radius": float(seed.summary["radius_mm"]),
@@ -82,10 +81,8 @@ def page_data(seed: SeedAudit) -> tuple[dict[str, Any], dict[str, str]]:
             int(seed.summary["n_reported_positive"]),
             int(seed.summary["n_reported_negative"]),
         ],
-        "rule": seed.summary["threshold"],
         "placements": placement_list(seed),
-        "regions": _region_list(seed.tables["regions"]),
-        "places": [{"at": place.at, "voxels": place.n_voxels} for place in contested_places(seed)],
+        "regions": [" ".join(str(name).split()) for name in seed.tables["regions"]["region"]],
         "colours": page_colours(),
     }
     return json_ready(numbers), arrays
@@ -172,33 +169,20 @@ def placement_list(seed: SeedAudit) -> list[dict[str, Any]]:
     where = seed.tables["placements"].set_index("placement").loc[similar["placement"]]
     columns = {
         "name": similar["placement"].to_numpy(),
-        **{axis: where[axis].to_numpy() for axis in "xyz"},
-        "radius": where["radius"].to_numpy(),
-        "distance": similar["distance"].to_numpy(),
+        **{name: where[name].to_numpy(float) for name in ("x", "y", "z", "radius")},
+        "distance": similar["distance"].to_numpy(float),
         **{
-            short: similar[name].to_numpy()
+            short: similar[name].to_numpy(float)
             for short, name in (
                 ("positive", "dice_positive"),
                 ("negative", "dice_negative"),
                 ("r", "spatial_r"),
-                ("nPositive", "n_positive"),
-                ("nNegative", "n_negative"),
             )
         },
+        "nPositive": similar["n_positive"].to_numpy(),
+        "nNegative": similar["n_negative"].to_numpy(),
     }
     return [dict(zip(columns, row, strict=True)) for row in zip(*columns.values(), strict=True)]
-
-
-def _region_list(table: pd.DataFrame) -> list[dict[str, Any]]:
-    return [
-        {
-            "name": " ".join(str(row.region).split()),
-            "effect": row.reported_effect,
-            "low": row.effect_min,
-            "high": row.effect_max,
-        }
-        for row in table.itertuples()
-    ]
 
 
 def _pairs(table: pd.DataFrame | None) -> dict[str, str]:

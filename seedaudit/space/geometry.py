@@ -57,32 +57,32 @@ def ball_mean_correlation(distances: ArrayLike, radius: float, fwhm: float) -> F
 
 
 def lag_correlation(
-    residuals: NDArray[np.floating[Any]], first: NDArray[np.integer[Any]],
+    residuals: NDArray[np.floating[Any]],
+    first: NDArray[np.integer[Any]],
     second: NDArray[np.integer[Any]],
-) -> float:  # fmt: skip
+) -> float:
     """Correlation of neighbouring voxels over noise maps of mean zero.
 
     Parameters
     ----------
     residuals : (M, V) array
-        Residual maps; each voxel is scaled to unit length over the maps.
+        Residual maps; one is enough.
     first, second : (E,) int arrays
         Rows of the voxels of each pair of neighbours.
 
     Returns
     -------
     float
-        Mean over the pairs; NaN without a pair.
+        Over all maps and pairs together; NaN without a pair or variation.
     """
-    if not len(first):
-        return float("nan")
-    length = np.sqrt(np.einsum("mv,mv->v", residuals, residuals, dtype=np.float64))
-    products = np.zeros(len(first))
-    for row in residuals:
-        products += row[first].astype(np.float64) * row[second]
-    scale = length[first] * length[second]
-    varies = scale > 0
-    return float((products[varies] / scale[varies]).mean()) if varies.any() else float("nan")
+    products, squares_first, squares_second = 0.0, 0.0, 0.0
+    for row in residuals.astype(np.float64):
+        one, other = row[first], row[second]
+        products += one @ other
+        squares_first += one @ one
+        squares_second += other @ other
+    scale = np.sqrt(squares_first * squares_second)
+    return float(products / scale) if scale > 0 else float("nan")
 
 
 def smoothness(lag_one: ArrayLike, steps: ArrayLike) -> float:

@@ -13,6 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 from seedaudit.errors import DataError, Problem
 
 _FACE_SLACK = 1e-6  # voxels; a point this close to a face counts as lying on it
+_FARTHEST = 1e7  # mm; no image of a body is there
 _WORLD_LETTERS = ("LR", "PA", "IS")
 
 
@@ -46,7 +47,7 @@ class Grid:
                 Problem(
                     "grid affine",
                     str(affine.tolist()),
-                    "4 x 4, finite, last row 0 0 0 1, three axes that span space",
+                    "4 x 4, finite, within 10 km, last row 0 0 0 1, three axes that span space",
                     "set the orientation in the header of the image again",
                 )
             )
@@ -134,6 +135,12 @@ class Grid:
         if self.shape == other.shape:
             words.append(f"corners up to {self._corner_distance(other):.4g} mm apart")
         return "; ".join(words)
+
+    def mirrors(self, other: Grid) -> bool:
+        """Whether the same voxel lies on the other side, or the handedness is the opposite one."""
+        sides = self.affine[0, :3] @ other.affine[0, :3]
+        hands = np.linalg.det(self.affine[:3, :3]) * np.linalg.det(other.affine[:3, :3])
+        return bool(sides < 0 or hands < 0)
 
     def _corner_distance(self, other: Grid) -> float:
         return float(np.linalg.norm(self.corners() - other.corners(), axis=1).max())
@@ -296,7 +303,7 @@ class VoxelSet:
 def _is_usable(affine: NDArray[np.float64]) -> bool:
     if affine.shape != (4, 4) or not np.isfinite(affine).all():
         return False
-    if not np.array_equal(affine[3], (0, 0, 0, 1)):
+    if not np.array_equal(affine[3], (0, 0, 0, 1)) or np.abs(affine).max() > _FARTHEST:
         return False
     sizes = np.linalg.norm(affine[:3, :3], axis=0)
     return bool(sizes.min() > 0 and abs(np.linalg.det(affine[:3, :3] / sizes)) > 1e-6)

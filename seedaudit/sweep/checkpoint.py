@@ -27,7 +27,7 @@ from seedaudit.sweep.digests import file_digest
 from seedaudit.sweep.fold import FoldProgress
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.participant import Kept
-from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
+from seedaudit.sweep.task import ParticipantRecord, ParticipantTask, SearchSums
 
 EVERY = 30.0
 """Seconds of work that may be lost, if a participant does not take longer."""
@@ -186,13 +186,24 @@ def _write(path: Path, progress: FoldProgress) -> None:
     rows = []
     for i, record in enumerate(progress.records):
         row = {name: getattr(record, name) for name in SCALARS}
-        rows.append({**row, "digests": list(record.digests), "clouds": len(record.kept)})
+        rows.append(
+            {
+                **row,
+                "digests": list(record.digests),
+                "clouds": len(record.kept),
+                "searches": len(record.search_coverage),
+            }
+        )
         for name in ("coverage", "reported_z"):
             if (value := getattr(record, name)) is not None:
                 arrays[f"{i}_{name}"] = value
         for c, kept in enumerate(record.kept):
             arrays[f"{i}_{c}_similarity"] = kept.similarity
             arrays[f"{i}_{c}_targets"] = kept.target_means
+        for c, coverage in enumerate(record.search_coverage):
+            arrays[f"{i}_{c}_search"] = coverage
+    for c, search in enumerate(progress.searches):
+        arrays[f"search_{c}_z"], arrays[f"search_{c}_count"] = search.z, search.count
     arrays["records"] = np.frombuffer(json.dumps(rows).encode(), np.uint8)
     partial = path.with_suffix(".partial")
     with open(partial, "wb") as file:
@@ -209,6 +220,7 @@ def _read(path: Path) -> FoldProgress:
     records = []
     for i, row in enumerate(rows):
         clouds, digests = row.pop("clouds"), tuple(row.pop("digests"))
+        searched = range(row.pop("searches"))
         kept = tuple(
             Kept(arrays[f"{i}_{c}_similarity"], arrays[f"{i}_{c}_targets"]) for c in range(clouds)
         )
@@ -219,12 +231,17 @@ def _read(path: Path) -> FoldProgress:
                 coverage=arrays.get(f"{i}_coverage"),
                 kept=kept,
                 reported_z=arrays.get(f"{i}_reported_z"),
+                search_coverage=tuple(arrays[f"{i}_{c}_search"] for c in searched),
             )
         )
     prefix = "moments_"
     state = {n.removeprefix(prefix): a for n, a in arrays.items() if n.startswith(prefix)}
+    searches: list[SearchSums] = []
+    while f"search_{len(searches)}_z" in arrays:
+        name = f"search_{len(searches)}"
+        searches.append(SearchSums(arrays[f"{name}_z"], arrays[f"{name}_count"]))
     # those set aside are tried again: nothing of them is in the state
-    return FoldProgress(Moments(**state), [record for record in records if record.used])
+    return FoldProgress(Moments(**state), searches, [r for r in records if r.used])
 
 
 def _write_whole(path: Path, content: bytes) -> None:

@@ -10,6 +10,7 @@ from seedaudit.errors import Problem, StudyError
 from seedaudit.sweep.checkpoint import Checkpoint
 from seedaudit.sweep.fold import FoldProgress, run_fold
 from seedaudit.sweep.task import ParticipantRecord, ParticipantTask, SweepTask
+from seedaudit.workers import reuse_freed_memory
 
 CONNECT = 30
 """Seconds to wait for the scheduler."""
@@ -99,5 +100,6 @@ def fold_on_worker(
     task: SweepTask, fold: Sequence[ParticipantTask], before: FoldProgress | None
 ) -> FoldProgress:
     """One fold with single-threaded products, as on one machine: the same digits."""
+    reuse_freed_memory()
     with threadpool_limits(limits=1):
         return run_fold(task, fold, before)

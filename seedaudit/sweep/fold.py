@@ -10,6 +10,7 @@ from seedaudit.sweep.task import (
     Buffers,
     ParticipantRecord,
     ParticipantTask,
+    SearchSums,
     SweepTask,
     sweep_participant,
 )
@@ -20,6 +21,7 @@ class FoldProgress:
     """State of a fold after the participants recorded so far."""
 
     moments: Moments
+    searches: list[SearchSums] = field(default_factory=list)
     records: list[ParticipantRecord] = field(default_factory=list)
 
 
@@ -45,12 +47,13 @@ def run_fold(
         Called with the progress after each participant, and whether it was the last; False ends
         the fold early.
     """
-    progress = progress or FoldProgress(task.empty_moments())
+    progress = progress or FoldProgress(task.empty_moments(), task.empty_searches())
     buffers = buffers or Buffers()
     done = {record.participant for record in progress.records}
     left = [participant for participant in participants if participant.participant not in done]
     for participant in left:
-        progress.records.append(sweep_participant(task, participant, progress.moments, buffers))
+        record = sweep_participant(task, participant, progress.moments, progress.searches, buffers)
+        progress.records.append(record)
         if not after(progress, participant is left[-1]):
             break
     return progress

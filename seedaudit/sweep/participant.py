@@ -94,6 +94,7 @@ def participant_blocks(
     weights: sparse.csr_array,
     *,
     known_variance: bool = False,
+    targets: NDArray[np.int_] | None = None,
     block: int = BLOCK,
 ) -> tuple[Iterator[ZBlock], NDArray[np.float64]]:
     """Fisher z of one participant: the mean over runs weighted by (residual df - 3).
@@ -109,6 +110,8 @@ def participant_blocks(
     known_variance : bool
         Also give the sampling variance of z: 1 / (n_eff - 3) for a run, n_eff being the effective
         number of volumes of each pair of seed and voxel, and that of the weighted mean.
+    targets : (B,) int, optional
+        Rows of the voxels to correlate with; default: all. Blocks are then slices of these.
     block : int
         Voxels in a block.
 
@@ -120,6 +123,8 @@ def participant_blocks(
     """
     seeds, coverages = zip(*(seed_series(run, weights) for run in runs), strict=True)
     share = run_weights(runs)
+    if targets is not None:
+        runs = [CleanRun(r.series[:, targets], r.basis, r.finite[targets]) for r in runs]
 
     def blocks() -> Iterator[ZBlock]:
         streams = [

@@ -27,6 +27,7 @@ from seedaudit.sweep.task import (
     ParticipantRecord,
     ParticipantTask,
     RunTask,
+    SearchSums,
     SweepTask,
     load_run,
     run_basis,
@@ -41,11 +42,12 @@ __all__ = [
 
 @dataclass(frozen=True)
 class Swept:
-    """The result of the pass: moments of each fold, and the participants in table order."""
+    """The result of the pass: moments and searches of each fold, and the participants in order."""
 
     folds: tuple[Moments, ...]
     fold_sizes: tuple[int, ...]
     records: tuple[ParticipantRecord, ...]
+    searches: tuple[tuple[SearchSums, ...], ...] = ()
 
 
 def assign_folds(strata: NDArray[np.int_], folds: int) -> list[NDArray[np.int_]]:
@@ -80,6 +82,12 @@ def sweep_key(task: SweepTask, folds: Sequence[Sequence[ParticipantTask]]) -> di
             *(part for cloud in task.clouds for part in (
                 str(cloud.rows), cloud.analysis, cloud.targets.indptr, cloud.targets.indices,
                 cloud.targets.data,
+            ))
+        ),
+        "search for a steadier seed": digest(
+            *(part for search in task.searches for part in (
+                search.weights.indptr, search.weights.indices, search.weights.data,
+                search.targets,
             ))
         ),
         "group design": digest(task.design),
@@ -139,6 +147,7 @@ def sweep(
         tuple(part.moments for part in parts),
         tuple(sum(record.used for record in part.records) for part in parts),
         tuple(sorted((r for part in parts for r in part.records), key=lambda r: r.row)),
+        tuple(tuple(part.searches) for part in parts),
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -62,6 +63,30 @@ class CleaningRecipe:
 
 
 @dataclass(frozen=True)
+class SearchTask:
+    """Spheres of a lattice around one seed, looked at on an even subset of voxels only.
+
+    Parameters
+    ----------
+    weights : (M, V) sparse
+        Spheres of the lattice points.
+    targets : (B,) int
+        Rows of the voxels that their maps are known at.
+    """
+
+    weights: sparse.csr_array
+    targets: NDArray[np.int_]
+
+
+@dataclass
+class SearchSums:
+    """Sum of z (M, B) over participants, and how many have each target voxel (B,)."""
+
+    z: NDArray[np.float64]
+    count: NDArray[np.int_]
+
+
+@dataclass(frozen=True)
 class SweepTask:
     """All that a worker needs to know.
 
@@ -83,6 +108,8 @@ class SweepTask:
         One participant: keep the sampling variance of z.
     keep_reported : bool
         Keep each participant's z map of every reported placement (for permutation).
+    searches : tuple of SearchTask
+        One for each seed where a steadier one is looked for; may be empty.
     prepared : Path or None
         Folder where decompressed runs are kept and found again.
     precision : str
@@ -98,6 +125,7 @@ class SweepTask:
     set_aside: bool = False
     single: bool = False
     keep_reported: bool = False
+    searches: tuple[SearchTask, ...] = ()
     prepared: Path | None = None
     precision: str = "float64"
 
@@ -112,13 +140,24 @@ class SweepTask:
             dtype=np.dtype(self.precision),
         )
 
+    def empty_searches(self) -> list[SearchSums]:
+        """The neutral element of the lattices."""
+        return [
+            SearchSums(
+                np.zeros((search.weights.shape[0], len(search.targets))),
+                np.zeros(len(search.targets), int),
+            )
+            for search in self.searches
+        ]
+
 
 @dataclass(frozen=True)
 class ParticipantRecord:
     """What is kept of a participant beside the moments.
 
     `coverage` (N,) is the smallest share of each sphere that varies in the participant's runs;
-    `reported_z` (clouds, V) is z of the reported placements, NaN where missing, if it was kept.
+    `reported_z` (clouds, V) is z of the reported placements, NaN where missing, if it was kept;
+    `search_coverage` is the like of `coverage` for the lattice of each search.
     """
 
     participant: str
@@ -132,6 +171,7 @@ class ParticipantRecord:
     coverage: NDArray[np.float64] | None = None
     kept: tuple[Kept, ...] = ()
     reported_z: NDArray[np.float32] | None = None
+    search_coverage: tuple[NDArray[np.float64], ...] = ()
     used: bool = True
     reason: str = ""
 
@@ -222,9 +262,10 @@ def sweep_participant(
     task: SweepTask,
     participant: ParticipantTask,
     moments: Moments,
+    searches: Sequence[SearchSums] = (),
     buffers: Buffers | None = None,
 ) -> ParticipantRecord:
-    """Read one participant's runs and add them to the moments of the fold.
+    """Read one participant's runs and add them to the moments and searches of the fold.
 
     Nothing is added when the data are bad.
 
@@ -273,6 +314,9 @@ def sweep_participant(
             part.add(block)
         if task.keep_reported:
             maps[:, block.where] = np.where(block.valid, block.z[reported], np.nan)
+    searched = [
+        _search(runs, search, sums) for search, sums in zip(task.searches, searches, strict=True)
+    ]
     return ParticipantRecord(
         participant.participant,
         participant.row,
@@ -285,7 +329,17 @@ def sweep_participant(
         coverage=coverage,
         kept=tuple(part.finish() for part in sums),
         reported_z=maps if task.keep_reported else None,
+        search_coverage=tuple(searched),
     )
+
+
+def _search(runs: Sequence[CleanRun], search: SearchTask, sums: SearchSums) -> NDArray[np.float64]:
+    """Add one participant's maps of a lattice; give the coverage of its spheres."""
+    blocks, coverage = participant_blocks(runs, search.weights, targets=search.targets)
+    for block in blocks:
+        sums.z[:, block.where] += block.z
+        sums.count[block.where] += block.valid
+    return coverage
 
 
 def _check_reported(
@@ -297,7 +351,8 @@ def _check_reported(
         raise DataError(
             Problem(
                 names,
-                f"only {reported.min():.0%} of a reported seed sphere holds finite values that vary",
+                f"only {reported.min():.0%} of a reported seed sphere holds finite values that "
+                "vary",
                 f"at least {task.min_coverage:.0%} (min_coverage)",
                 "look at the run's coverage, correct the mask or the seed, or set "
                 'on_bad_run = "set-aside"',

@@ -33,7 +33,8 @@ def test_shrout_and_fleiss():
 
 
 @pytest.mark.parametrize(
-    ("name", "digits"), [("SiRstv", 9), ("AtmWtAg", 8), ("SmLs01", 10), ("SmLs04", 8), ("SmLs06", 6)]
+    ("name", "digits"),
+    [("SiRstv", 9), ("AtmWtAg", 8), ("SmLs01", 10), ("SmLs04", 8), ("SmLs06", 6)],
 )
 def test_nist_certified_sums_of_squares(name, digits):
     # One-way files of the NIST statistical reference data, as they come with scipy. Replicates are
@@ -59,7 +60,9 @@ def test_three_factors_match_statsmodels():
     found = mean_squares(values)
     index = np.indices(values.shape[:3]).reshape(3, -1)
     for k in range(2):
-        frame = DataFrame({"s": index[0], "p": index[1], "r": index[2], "z": values[..., k].ravel()})
+        frame = DataFrame(
+            {"s": index[0], "p": index[1], "r": index[2], "z": values[..., k].ravel()}
+        )
         # without the highest interaction, which is the residual
         fit = smf.ols("z ~ (C(s) + C(p) + C(r)) ** 2", frame).fit()
         table = anova_lm(fit)

@@ -2,8 +2,8 @@
 
 Fold sums of z are drawn on a lattice of places directly. A place inside a ball-shaped parcel has
 the parcel's target map; outside, the map changes with the direction from the parcel; at its border
-maps mix. Each participant has a parcel centre and target maps of their own, and noise that overlapping
-places share.
+maps mix. Each participant has a parcel centre and target maps of their own, and noise that
+overlapping places share.
 
 Run ``python -m tests.simulations.steadier_simulation --runs 200`` for the long version.
 """
@@ -11,7 +11,7 @@ Run ``python -m tests.simulations.steadier_simulation --runs 200`` for the long 
 from __future__ import annotations
 
 import argparse
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property, partial
 
 import numpy as np
@@ -130,8 +130,8 @@ class Report:
             f"runs {len(self.gain)}: within one step {self.recovered.mean():.1%}, kept "
             f"{self.kept.mean():.1%}; gain in other people {self.gain.mean():.4f}, true "
             f"{self.truth.mean():.4f}, difference {self.bias:+.5f} (standard error "
-            f"{self.error:.5f}); gain in-sample {self.gain_in.mean():.4f}; interval holds the true gain in "
-            f"{self.covered.mean():.1%}"
+            f"{self.error:.5f}); gain in-sample {self.gain_in.mean():.4f}; interval holds the true "
+            f"gain in {self.covered.mean():.1%}"
         )
 
 
@@ -142,7 +142,7 @@ def simulate(world: World, runs: int, random_state: int, truth_from: int = 300) 
     fresh_gains = fresh - fresh[:, :1]
     expected = fresh_gains.mean(axis=0)
     best = np.zeros(3) if world.best is None else np.array(world.best)
-    found: list[tuple[float, ...]] = []
+    found = []
     chosen = np.zeros(len(expected))
     for _ in range(runs):
         search = world.search_once(rng)
@@ -173,7 +173,12 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=main.__doc__)
     parser.add_argument("--runs", type=int, default=200)
     runs = parser.parse_args().runs
-    worlds = {"border": BORDER, "homogeneous": FLAT, "already best": CENTRED}
+    worlds = {
+        "border": BORDER,
+        "border in more noise": replace(BORDER, noise=1.0),
+        "homogeneous": FLAT,
+        "already best": CENTRED,
+    }
     for number, (name, world) in enumerate(worlds.items()):
         print(f"{name}: {simulate(world, runs, number, 4 * runs)}", flush=True)
 

@@ -189,7 +189,8 @@ async function startBench() {
   let row = 0;
   analysis.forEach((inside, at) => { if (inside) rowOf[at] = row++; });
   const [nx, ny, nz] = study.shape;
-  const zone = study.radius + study.margin + study.edge / 2;
+  // a voxel counts by its centre, so the zone ends half a voxel's diagonal off the widened sphere
+  const zone = study.radius + study.margin + study.diagonal / 2;
   const arrays = {
     rowOf,
     regionOf: new Uint16Array(labels.buffer),
@@ -228,8 +229,11 @@ function connect(bench) {
     });
   }
   for (const node of all("[name=tail], #view, #outline")) node.addEventListener("change", () => bench.draw());
-  find("placement").addEventListener("change", (event) => event.target.value !== "" && bench.goTo(Number(event.target.value)));
-  const order = placements.map((_, row) => row).sort((a, b) => placements[a].distance - placements[b].distance || a - b);
+  find("placement").addEventListener("change", ({ target }) => {
+    if (target.value !== "") bench.goTo(Number(target.value));
+  });
+  const order = [...placements.keys()]
+    .sort((a, b) => placements[a].distance - placements[b].distance || a - b);
   const stepBy = (way) => {
     const at = order.indexOf(bench.at === NOWHERE ? bench.blend[0].row : bench.at);
     bench.goTo(order[(at + way + order.length) % order.length]);
@@ -259,7 +263,7 @@ startTables();
 startCopy();
 window.explorer.ready = (async () => {
   if (typeof DecompressionStream === "undefined") {
-    find("no-maps").hidden = false;
+    find("no-maps")?.removeAttribute("hidden");
     return;
   }
   await startPairs();

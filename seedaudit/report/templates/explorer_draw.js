@@ -87,23 +87,18 @@ class Slice {
 
   draw(shown) {
     const { bench, rows, under, zone, width, height } = this;
-    const { plus, minus, greys, ink, hatch } = bench.palette;
+    const { greys, ink } = bench.palette;
     const { data } = this.image;
     const tails = bench.tails;
     const classes = find("outline").checked ? bench.reportedClasses : null;
-    const perLevel = 63 / (shown.top - shown.cut || 1);
     for (let j = 0, pixel = 0; j < height; j += 1) {
       for (let i = 0; i < width; i += 1, pixel += 1) {
         const row = rows[pixel];
         let colour = greys[under[pixel]];
         if (row !== NOWHERE) {
           const value = shown.share ? bench.shareAt(row, tails) : shown.values[row];
-          const size = Math.abs(value);
-          if (size >= shown.cut && size > 0 && (value > 0 ? tails.plus : tails.minus)) {
-            const level = Math.min(63, Math.max(0, Math.round((size - shown.cut) * perLevel)));
-            // class − is striped, so that colour is not all that tells it from class +
-            if (value > 0) colour = plus[level];
-            else colour = (i - j + 5 * height) % 5 ? minus[level] : hatch;
+          if (Math.abs(value) >= shown.cut && (value > 0 ? tails.plus : tails.minus)) {
+            colour = this.#colour(value, shown, i - j);
           }
           if (classes && isEdge(classes, rows, pixel, width, i + j)) colour = ink;
         } else if (zone[pixel] && (i + j) % 5 === 0) {
@@ -114,6 +109,15 @@ class Slice {
     }
     this.canvas.getContext("2d").putImageData(this.image, 0, 0);
     this.#seed();
+  }
+
+  // Class − is striped, so that colour is not all that tells it from class +.
+  #colour(value, shown, diagonal) {
+    const { plus, minus, hatch } = this.bench.palette;
+    const part = (Math.abs(value) - shown.cut) / Math.max(shown.top - shown.cut, 1e-9);
+    const level = Math.round((plus.length - 1) * clamp(part, 0, 1));
+    if (value > 0) return plus[level];
+    return diagonal % 5 ? minus[level] : hatch;
   }
 
   // The sphere as the plane cuts it, and the centre projected on the plane.
@@ -155,9 +159,9 @@ class Pad {
     find("ring-note").textContent = `Rings are ${ring} mm apart.`;
     this.dots = placements.map((one, row) => {
       const [x, y] = [one.x - study.at[0], study.at[1] - one.y];
-      const s = this.half / 24;
+      const s = this.half / (row === 0 ? 18 : 24);
       return row === 0
-        ? svg("path", { d: `M${x - 1.3 * s} ${y}l${1.3 * s} ${-1.3 * s}l${1.3 * s} ${1.3 * s}l${-1.3 * s} ${1.3 * s}z`, class: "dot home" }, this.node)
+        ? svg("path", { d: `M${x - s} ${y}l${s} ${-s}l${s} ${s}l${-s} ${s}z`, class: "dot home" }, this.node)
         : svg("circle", { cx: x, cy: y, r: s, class: "dot", ...thin }, this.node);
     });
     this.hand = svg("g", { class: "hand" }, this.node);
@@ -186,7 +190,8 @@ class Pad {
     const near = this.dots
       .map((dot, row) => {
         const box = dot.getBoundingClientRect();
-        const gap = Math.hypot(event.clientX - box.left - box.width / 2, event.clientY - box.top - box.height / 2);
+        const [x, y] = [box.left + box.width / 2, box.top + box.height / 2];
+        const gap = Math.hypot(event.clientX - x, event.clientY - y);
         return { row, gap: placements[row].radius === this.bench.radius ? gap : Infinity };
       })
       .sort((a, b) => a.gap - b.gap)[0];
@@ -204,9 +209,14 @@ class Pad {
       ArrowLeft: [0, -1], ArrowRight: [0, 1], ArrowUp: [1, 1], ArrowDown: [1, -1],
       PageUp: [2, 1], PageDown: [2, -1],
     };
-    if (event.key === "Home") this.bench.goTo(0);
-    else if (event.key in keys) this.#shift(keys[event.key][0], keys[event.key][1] * (event.shiftKey ? 2 : 0.5));
-    else return;
+    if (event.key === "Home") {
+      this.bench.goTo(0);
+    } else if (event.key in keys) {
+      const [axis, way] = keys[event.key];
+      this.#shift(axis, way * (event.shiftKey ? 2 : 0.5));
+    } else {
+      return;
+    }
     event.preventDefault();
   }
 
@@ -241,7 +251,7 @@ class Bars {
       bar.setAttribute("width", Math.abs(length));
       bar.setAttribute("class", `live ${value < 0 ? "minus" : "plus"}`);
       node.querySelector("output").textContent =
-        value === null ? "n/a" : (value > 0 ? "+" : "") + fixed(value, 2);
+        value === null ? "n/a" : (value >= 0.005 ? "+" : "") + fixed(value, 2).replace("−0.00", "0.00");
     });
   }
 }
@@ -257,7 +267,9 @@ function drawKey(bench, shown) {
     context.fillRect(76 + i, 0, 1, 10);
   }
   context.fillStyle = `rgb(${hatch.slice(0, 3).join()})`;
-  for (let i = 0; i < 64; i += 5) for (let j = 0; j < 10; j += 1) if (i + j < 64) context.fillRect(i + j, j, 1, 1);
+  for (let j = 0; j < 10; j += 1) {
+    for (let i = j; i < 64; i += 5) context.fillRect(i, j, 1, 1);
+  }
   const words = (value) => (shown.share
     ? `${Math.round(value / SHARE_CODE * 100)} %` : Number.isFinite(value) ? value.toFixed(2) : "∞");
   find("key-low").textContent = `class −: ${sign(`-${words(shown.top)}`)} to ${sign(`-${words(shown.cut)}`)}`;
@@ -268,18 +280,18 @@ function drawKey(bench, shown) {
 let speaking = 0;
 
 function tell(bench) {
-  const { seed, at, found, blend, cut } = bench;
+  const { seed, at, found, blend } = bench;
   const gap = Math.hypot(...seed.map((value, axis) => value - study.at[axis]));
   const nearest = blend[0];
   const name = (row) => (row === 0 ? "the reported placement" : `placement ${placements[row].name}`);
   find("seed-place").textContent = mm(seed);
   find("seed-shift").textContent = `${fixed(gap, 1)} mm`;
   find("seed-source").textContent = at === NOWHERE
-    ? `Between placements: a blend of the ${blend.length} nearest, the nearest ${fixed(nearest.gap, 1)} mm away (${name(nearest.row)}).`
+    ? `Between placements: a blend of the ${blend.length} nearest, the nearest ` +
+      `${fixed(nearest.gap, 1)} mm away (${name(nearest.row)}).`
     : `At ${name(at)}, not blended.`;
   find("cut-effect-shown").textContent = Number(find("cut-effect").value).toFixed(3);
   find("cut-share-shown").textContent = `${find("cut-share").value} %`;
-  for (const kind of ["effect", "share"]) find(`cut-${kind}`).closest("label").classList.toggle("idle", cut.kind !== kind);
   ["positive", "negative"].forEach((tail, i) => {
     find(`live-${tail}`).textContent = likeness(found.dice[i]);
     find(`live-n-${tail}`).textContent = found.sizes[i].toLocaleString("en");
@@ -344,7 +356,7 @@ async function startPairs() {
     find("pairs-here").textContent = `Placements ${placements[b + 1].name} and ${placements[a + 1].name}: ` +
       (code === UNDEFINED_CODE ? "undefined" : (code / SHARE_CODE).toFixed(2));
   });
-  canvas.addEventListener("click", (event) => window.explorer.bench && window.explorer.bench.goTo(at(event)[1] + 1));
+  canvas.addEventListener("click", (event) => window.explorer.bench?.goTo(at(event)[1] + 1));
   find("pairs-measure").addEventListener("change", draw);
   markPair = (row) => {
     const mark = find("pairs-mark");
