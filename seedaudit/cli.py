@@ -210,6 +210,7 @@ def _ready(
 
     study, findings = _study(asked), Findings()
     folder = out or study.path(study.output)
+    folder = folder if folder.name else folder.absolute()
     findings.attempt(partial(_check_output, replace=replace), folder)
     plan = findings.attempt(make_plan, study)
     findings.raise_if_any()
@@ -231,9 +232,8 @@ def _check_output(folder: Path, *, replace: bool) -> None:
     except (FileNotFoundError, NotADirectoryError):
         pass
     except (OSError, ValueError):  # too long, or with a zero byte
-        raise StudyError(
-            Problem(where, "is no name for a folder", "a name of a usual length")
-        ) from None
+        found = "is no name for a folder"
+        raise StudyError(Problem(where, found, "a name of a usual length")) from None
     there = next(parent for parent in folder.absolute().parents if parent.exists())
     if not (there.is_dir() and os.access(there, os.W_OK | os.X_OK)):
         found = f"cannot be made in {there}, which is " + (

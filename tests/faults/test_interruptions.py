@@ -244,3 +244,19 @@ def test_progress_holds_no_pickle_and_no_path(study, tmp_path):
         with np.load(file, allow_pickle=False) as stored:
             assert str(study.parent) not in stored["records"].tobytes().decode()
             json.loads(stored["records"].tobytes())
+
+
+def test_a_second_command_into_one_folder_refuses(study, undisturbed):
+    """Two processes: the second ends with code 2 and words, the first goes on undisturbed."""
+    out = "taken"
+    first = start(study, out)
+    wait_for_progress(study, out, first)
+    second = start(study, out)
+    told, messages = second.communicate(timeout=60)
+    assert (second.returncode, told) == (2, "")
+    assert "another run is at work on this output" in messages
+    assert "one run at a time" in messages
+    assert first.poll() is None, "the first run must still be at work when the second is refused"
+    _, messages = first.communicate(timeout=60)
+    assert first.returncode == 0, messages
+    assert result_bytes(study.parent / out) == undisturbed
