@@ -19,10 +19,13 @@ from seedaudit.plan import Plan
 from seedaudit.preflight import make_plan
 from seedaudit.provenance import provenance
 from seedaudit.results import Audit
+from seedaudit.standins import compare_seeds
+from seedaudit.steadying import with_search
 from seedaudit.study import Study
 from seedaudit.sweep.checkpoint import Checkpoint
 from seedaudit.sweep.schedule import assign_folds, sweep, sweep_key
 from seedaudit.sweep.task import ParticipantRecord, ParticipantTask
+from seedaudit.variation import with_radii
 from seedaudit.workers import available_cores, reuse_freed_memory
 
 
@@ -109,15 +112,18 @@ def audit(
         progress.stage("drawing conclusions", len(plan.seeds))
         seeds = []
         for number, seed in enumerate(plan.seeds):
-            seeds.append(conclude_seed(plan, swept, group, number, picture))
+            concluded = conclude_seed(plan, swept, group, number, picture, workers)
+            concluded = with_search(concluded, plan, swept, group, number)
+            seeds.append(with_radii(concluded, plan, group, number))
             progress.step(seed.seed.name)
+        between = compare_seeds(plan, swept, group, seeds)
 
     timings = {
         "pass over the data": swept_at - started,
         "conclusions": time.monotonic() - swept_at,
     }
     told = provenance(plan, swept, group, timings=timings, workers=workers, anatomy=source)
-    return Audit(plan.study.title, tuple(seeds), told)
+    return Audit(plan.study.title, tuple(seeds), told, between)
 
 
 def open_checkpoint(
@@ -131,7 +137,7 @@ def open_checkpoint(
 
 def plan_folds(plan: Plan) -> list[list[ParticipantTask]]:
     """The participants dealt into folds."""
-    rows = assign_folds(plan.design.strata, plan.study.group.folds)
+    rows = assign_folds(plan.design.strata, plan.folds)
     return [[plan.participants[row] for row in fold] for fold in rows]
 
 

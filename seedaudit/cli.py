@@ -87,6 +87,7 @@ def _shared(command: Callable[..., Any]) -> Callable[..., Any]:
         click.option(
             "--workers", type=click.IntRange(1), metavar="N", help="Threads (default: all cores)."
         ),
+        click.option("--memory", metavar="SIZE", help="Keep to so much memory, such as 6GB."),
         click.option("--json", "as_json", is_flag=True, help="JSON on standard output."),
         click.option("--quiet", is_flag=True, help="No progress, no warnings."),
     ]
@@ -116,8 +117,8 @@ def app(debug: bool) -> None:
     metavar="DIR",
     help="Keep decompressed runs there for the next seed.",
 )
-def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, replace: bool,
-        fresh: bool, cluster: str | None, keep_prepared: Path | None,
+def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool, quiet: bool,
+        replace: bool, fresh: bool, cluster: str | None, keep_prepared: Path | None,
         **asked: Any) -> int:  # fmt: skip
     """Audit a study: check everything, read the data once, write the result folder.
 
@@ -127,7 +128,7 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
     from seedaudit.auditing import audit, open_checkpoint
     from seedaudit.progress import LiveProgress, PlainProgress
 
-    plan, folder, _ = _ready(asked, out, workers, replace=replace)
+    plan, folder, _ = _ready(asked, out, workers, memory, replace=replace)
     _print_warnings(plan.warnings, quiet)
     console = Console(stderr=True)
     bar = LiveProgress(console) if console.is_terminal and not quiet else PlainProgress(quiet=quiet)
@@ -156,7 +157,8 @@ def run(out: Path | None, workers: int | None, as_json: bool, quiet: bool, repla
 
 @app.command(epilog=EPILOG_CHECK)
 @_shared
-def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **asked: Any) -> int:
+def check(out: Path | None, workers: int | None, memory: str | None, as_json: bool, quiet: bool,
+          **asked: Any) -> int:  # fmt: skip
     """Check a study without running it: runs, placements, regions, design, predicted needs.
 
     Reads headers, tables, mask and regions only, and lists every problem at once; exits with 0
@@ -164,7 +166,7 @@ def check(out: Path | None, workers: int | None, as_json: bool, quiet: bool, **a
     """
     from seedaudit.overview import overview, overview_text
 
-    plan, _, needs = _ready(asked, out, workers, replace=False)
+    plan, _, needs = _ready(asked, out, workers, memory, replace=False)
     found = overview(plan, needs)
     _print_warnings(plan.warnings, quiet)
     if as_json:
@@ -201,9 +203,15 @@ def synth(folder: Path, **asked: Any) -> int:
 
 
 def _ready(
-    asked: dict[str, Any], out: Path | None, workers: int | None, *, replace: bool
+    asked: dict[str, Any],
+    out: Path | None,
+    workers: int | None,
+    memory: str | None,
+    *,
+    replace: bool,
 ) -> tuple[Any, Path, Any]:
     """The plan of what is asked, the folder of its result and its needs, all problems at once."""
+    from seedaudit.budget import fitted, parse_size
     from seedaudit.forecast import forecast, strains
     from seedaudit.preflight import make_plan
     from seedaudit.workers import available_cores
@@ -215,6 +223,8 @@ def _ready(
     plan = findings.attempt(make_plan, study)
     findings.raise_if_any()
     assert plan is not None
+    if memory is not None:
+        plan = fitted(plan, workers or available_cores(), parse_size(memory))
     needs = forecast(plan, workers or available_cores())
     short = strains(needs, folder)
     plan = dataclasses.replace(plan, warnings=(*plan.warnings, *short))

@@ -39,6 +39,7 @@ def conclude_seed(
     group: GroupState,
     number: int,
     anatomy: NDArray[np.float32],
+    workers: int = 1,
 ) -> SeedAudit:
     """Everything about the seed of that number, frozen."""
     seed = plan.seeds[number]
@@ -69,6 +70,7 @@ def conclude_seed(
         _controls(plan, seed, controls, control_rows),
         safe=plan.study.consensus.safe,
         random_state=plan.study.placements.random_state,
+        workers=workers,
     )
     if found.ceiling is None and len(plan.participants) == 1:
         found = replace(

@@ -241,6 +241,97 @@ COLUMNS: dict[str, dict[str, tuple[str, str]]] = {
     },
 }
 
+COLUMNS_WHERE_ASKED: dict[str, dict[str, tuple[str, str]]] = {
+    "steadier": {
+        "seed": ("name of the reported seed", ""),
+        "x": ("centre of the candidate, left to right; the first row is the reported seed", MM),
+        "y": ("centre of the candidate, posterior to anterior", MM),
+        "z": ("centre of the candidate, inferior to superior", MM),
+        "moved_mm": ("distance from the reported centre", MM),
+        "n_neighbours": ("lattice points within the placement error that it is compared with", COUNT),
+        "stability_in": (
+            "mean spatial Pearson correlation of the candidate's map with the maps of its "
+            "neighbours, in all participants; a map is the mean z over participants, never the "
+            "group effect of interest",
+            "-1 to 1",
+        ),
+        "stability_out": (
+            "the same in the half of the participants that had no part in a choice, mean over "
+            "the splits",
+            "-1 to 1",
+        ),
+        "gain": (
+            "stability_out minus that of the reported seed; at a recommended move, the gain of the "
+            "whole search in participants who had no part in the choice",
+            "",
+        ),
+        "gain_low": ("lower end of its 95 % delete-a-fold jackknife interval", ""),
+        "gain_high": ("upper end of that interval", ""),
+        "similarity_to_reported": (
+            "spatial Pearson correlation with the map of the reported seed, in all participants",
+            "-1 to 1",
+        ),
+        "keeps_identity": ("true: as similar to the reported map as was asked (keep_similarity)", ""),
+        "share_chosen": ("share of the choices, one in each half, that fell on it", SHARE),
+        "on_front": ("true: no candidate that moves as little is as steady, or steadier", ""),
+        "recommended": ("true: where the seed should be; the first row means keep it", ""),
+    },
+    "radii": {
+        "seed": ("name of the seed", ""),
+        "index": ("label of the region", ""),
+        "region": ("name of the region", ""),
+        "source": (
+            "where the variation of the region's mean z over participants, drawn positions and "
+            "radii comes from; residual: what is left, the interaction of all of them",
+            "",
+        ),
+        "variance": ("variance component; an estimate below 0 counts as 0", "squared Fisher z"),
+        "share": ("share of the sum of the region's components", SHARE),
+    },
+    "seeds": {
+        "seed_a": ("name of one seed", ""),
+        "seed_b": ("name of another", ""),
+        "distance_mm": ("between the reported centres", MM),
+        "spatial_r": (
+            "spatial Pearson correlation of the two reported effect maps, in the same participants",
+            "-1 to 1",
+        ),
+        "dice_positive": ("Dice of the two reported maps, class +", SHARE),
+        "dice_negative": ("Dice of the two reported maps, class -", SHARE),
+        "within_a": (
+            "median spatial correlation of the drawn placements of seed a with its reported one, "
+            "in the same participants",
+            "-1 to 1",
+        ),
+        "within_b": ("the same for seed b", "-1 to 1"),
+        "ceiling": (
+            "what independent halves of the participants allow: geometric mean of the two maps' "
+            "spatial correlations with themselves across halves",
+            "",
+        ),
+        "relative": (
+            "spatial correlation of the two reported maps across halves, over that ceiling",
+            "ratio",
+        ),
+        "relative_low": ("lower end of its 95 % delete-a-fold jackknife interval", "ratio"),
+        "relative_high": ("upper end of that interval", "ratio"),
+        "relative_within_a": (
+            "5th percentile of the same ratio over the drawn placements of seed a with its "
+            "reported one",
+            "ratio",
+        ),
+        "relative_within_b": ("the same for seed b", "ratio"),
+        "interchangeable": (
+            "true: no less alike than placements of one seed are, beyond the noise of the "
+            "participants; false: less alike; n/a: too few participants to tell",
+            "",
+        ),
+    },
+}
+"""Tables of a section or of several seeds, which are there where the study asked for them."""
+
+ALL_COLUMNS = COLUMNS | COLUMNS_WHERE_ASKED
+
 MAPS: dict[str, tuple[str, str]] = {
     "agreement_positive": ("share of drawn placements with the voxel in class +", SHARE),
     "agreement_negative": ("share of drawn placements with the voxel in class -", SHARE),
@@ -260,6 +351,18 @@ MAPS: dict[str, tuple[str, str]] = {
     "region_labels": ("label of the network region of each mask voxel, 0 for none", "label"),
     "anatomy": ("picture under the figures, 0 to 1", ""),
 }
+
+MAPS_WHERE_ASKED: dict[str, tuple[str, str]] = {
+    "steadier_score": (
+        "held-out stability of the nearest candidate of the search for a steadier seed, in voxels "
+        "that hold a candidate or lie within half a step of one along every axis; candidates of "
+        "another network are left out",
+        "-1 to 1",
+    ),
+}
+"""Maps of a section, which are there where the study asked for them."""
+
+ALL_MAPS = MAPS | MAPS_WHERE_ASKED
 
 PLACEMENT_COMPONENTS = (
     "effect maps of all used placements in little space: volume 0 is their mean, the others are "

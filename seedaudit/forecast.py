@@ -46,17 +46,19 @@ def forecast(plan: Plan, workers: int) -> Forecast:
     n_voxels, n_placements = len(plan.voxels), plan.n_swept
     p = plan.design.matrix.shape[1]
     runs = [[run.header for run in participant.runs] for participant in plan.participants]
-    n_folds = len(assign_folds(plan.design.strata, plan.study.group.folds))
+    n_folds = len(assign_folds(plan.design.strata, plan.folds))
     workers = min(workers, n_folds)
 
     layers = p + 1 + (len(plan.participants) == 1)
-    one_state = 8 * n_voxels * (layers * n_placements + p * p) + 4 * n_voxels
+    digits = np.dtype(plan.precision).itemsize
+    one_state = n_voxels * (digits * layers * n_placements + 8 * p * p + 4)
     series = max(4 * n_voxels * sum(h.n_volumes for h in own) for own in runs)
     block = 8 * BLOCK * (n_placements * 4 + max(h.n_volumes for own in runs for h in own))
     sweeping = workers * (series + block)
-    largest = max(len(seed.used) for seed in plan.seeds) / n_placements
-    # the merged state, the same on analysis voxels, that without a fold, and the maps
-    concluding = largest * (3 * one_state + 30 * n_voxels * n_placements)
+    largest = max(len(seed.used) for seed in plan.seeds)
+    # effects, statistics and classes of a cloud, its parts for pairs and low rank, and counts of
+    # classes with each fold left out, for every worker
+    concluding = n_voxels * (18 * largest + 12 * n_folds * workers + 150)
     memory = BASE_MEMORY + n_folds * one_state + max(sweeping, concluding)
 
     stored = sum(float(np.prod(h.grid.shape)) * h.n_volumes * h.dtype.itemsize

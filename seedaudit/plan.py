@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 from scipy import sparse
 
@@ -13,6 +14,7 @@ from seedaudit.inputs.design import Design
 from seedaudit.inputs.header import RunHeader
 from seedaudit.inputs.regions import Regions
 from seedaudit.placements import Cloud, uncertainty_sd
+from seedaudit.searching import PlannedSearch
 from seedaudit.space.grid import VoxelSet
 from seedaudit.study import Placements, Seed, Study
 from seedaudit.sweep.participant import CloudTargets
@@ -22,6 +24,7 @@ from seedaudit.sweep.schedule import (
     ParticipantTask,
     SweepTask,
 )
+from seedaudit.sweep.task import SearchTask
 
 USUAL_WITHIN = 6.0
 CUT_OFF_SD = 3.0
@@ -57,6 +60,8 @@ class SeedPlan:
         Mask voxels outside all spheres of the cloud widened by the margin; those of control seeds
         are no part of the cloud.
     claims : tuple of PlannedClaim
+    search : PlannedSearch or None
+        Where a steadier seed is looked for, if it is.
     """
 
     seed: Seed
@@ -67,6 +72,7 @@ class SeedPlan:
     margin: float
     analysis: NDArray[np.bool_]
     claims: tuple[PlannedClaim, ...] = ()
+    search: PlannedSearch | None = None
 
     @property
     def used(self) -> NDArray[np.int_]:
@@ -79,7 +85,8 @@ class Plan:
     """Everything that the pass needs, checked.
 
     `design` has one row for each of `participants`; `set_aside` are those left out already;
-    `warnings` are for the user's attention, `choices` what the program decided.
+    `warnings` are for the user's attention, `choices` what the program decided. `folds` and the
+    `precision` of the state are as asked, or as memory allows (`seedaudit.budget`).
     """
 
     study: Study
@@ -92,6 +99,8 @@ class Plan:
     set_aside: tuple[ParticipantRecord, ...]
     warnings: tuple[str, ...]
     choices: tuple[str, ...]
+    folds: int = 8
+    precision: str = "float64"
 
     @property
     def first_run(self) -> RunHeader:
@@ -126,6 +135,12 @@ class Plan:
             set_aside=self.study.data.on_bad_run == "set-aside",
             single=len(self.participants) == 1,
             keep_reported=self.study.threshold.rule == "fwe",
+            precision=self.precision,
+            searches=tuple(
+                SearchTask(seed.search.weights, seed.search.targets)
+                for seed in self.seeds
+                if seed.search is not None
+            ),
         )
 
     @property
@@ -142,6 +157,25 @@ class Plan:
         for column, claim in enumerate(seed.claims, self.n_regions):
             members[claim.members, column] = 1
         return sparse.csr_array(members)
+
+
+def kept_placements(seed: SeedPlan, table: pd.DataFrame) -> NDArray[np.int_]:
+    """Rows, among those swept for a seed, of the placements that its result kept.
+
+    Parameters
+    ----------
+    seed : SeedPlan
+    table : DataFrame
+        The placements of the result, where more may be set aside than before the pass.
+
+    Returns
+    -------
+    (N,) int
+        The reported one first; control seeds are no placements.
+    """
+    swept = table.iloc[seed.used]
+    kept = swept["used"].to_numpy(dtype=bool) & (swept["kind"].to_numpy() != "control")
+    return np.flatnonzero(kept)
 
 
 def cloud_size(asked: Placements) -> tuple[float, float | None]:

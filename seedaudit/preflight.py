@@ -28,6 +28,7 @@ from seedaudit.participants import (
 )
 from seedaudit.placements import add_controls, build_cloud
 from seedaudit.plan import Plan, SeedPlan, cloud_size
+from seedaudit.searching import check_search, note_search, plan_search
 from seedaudit.space.grid import VoxelSet
 from seedaudit.space.spheres import cloud_exclusion
 from seedaudit.space.talairach import talairach_to_mni
@@ -88,6 +89,7 @@ def make_plan(study: Study) -> Plan:
         seeds = findings.attempt(plan_claims, *asserted) or seeds
     if people:
         _check_fwe(study, len(people), findings)
+        check_search(study, len(people), findings)
     _raise_if_any(findings, set_aside)
     assert voxels is not None
     assert design is not None
@@ -97,6 +99,7 @@ def make_plan(study: Study) -> Plan:
     return Plan(
         study, voxels, tuple(participants), design, regions, tuple(seeds), cleaning,
         tuple(set_aside), tuple(findings.warnings), tuple(findings.choices),
+        folds=study.group.folds,
     )  # fmt: skip
 
 
@@ -230,7 +233,8 @@ def _seed_plan(study: Study, seed: Seed, voxels: VoxelSet, inside: VoxelSet | No
         min_coverage=asked.min_coverage,
         midline=seed.space != "native",
     )
-    return SeedPlan(seed, at, cloud, within, sd, margin, ~spheres)
+    search = plan_search(study, seed, at, (within, sd), margin, voxels, inside)
+    return SeedPlan(seed, at, cloud, within, sd, margin, ~spheres, search=search)
 
 
 def _raise_if_any(findings: Findings, set_aside: Sequence[ParticipantRecord]) -> None:
@@ -258,6 +262,7 @@ def _note_seed(plan: SeedPlan, regions: Regions | None, study: Study, findings: 
             f"less than {study.placements.min_coverage:.0%} of their sphere lies in the mask"
         )
     _note_controls(name, table[controls], study.placements, findings)
+    note_search(name, plan.search, findings)
     reported_flags = table["flags"].iloc[0]
     if reported_flags:
         findings.warnings.append(

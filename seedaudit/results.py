@@ -14,7 +14,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from seedaudit.consensus.lowrank import LowRank
-from seedaudit.dictionary import COLUMNS, INTEGER_MAPS, MAPS
+from seedaudit.dictionary import ALL_COLUMNS, ALL_MAPS, INTEGER_MAPS
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -66,21 +66,29 @@ class Audit:
     """The result of an audit of one or more seeds.
 
     `provenance` says what the numbers come from: versions, the study as read, digests of the
-    inputs, warnings and the choices the program made.
+    inputs, warnings and the choices the program made; `between` is the table that compares the
+    seeds, where there are several.
     """
 
     title: str
     seeds: tuple[SeedAudit, ...]
     provenance: Mapping[str, Any]
+    between: pd.DataFrame | None = None
 
     @property
     def summary(self) -> dict[str, Any]:
         """The content of summary.json."""
-        return {
+        told = {
             "schema": SCHEMA,
             "title": self.title,
             "seeds": [dict(seed.summary) for seed in self.seeds],
         }
+        if self.between is not None:
+            told["interchangeable"] = [
+                {"seeds": [row.seed_a, row.seed_b], "interchangeable": row.interchangeable}
+                for row in self.between.itertuples()
+            ]
+        return told
 
     def seed(self, name: str | None = None) -> SeedAudit:
         """One seed's result; the first without a name.
@@ -98,7 +106,15 @@ class Audit:
         return by_name[name]
 
     def table(self, name: str) -> pd.DataFrame:
-        """One table of all seeds."""
+        """One table of all seeds; `seeds` is the one that compares them.
+
+        Raises
+        ------
+        KeyError
+            If there is no table of that name.
+        """
+        if name == "seeds" and self.between is not None:
+            return self.between.copy()
         return pd.concat([seed.table(name) for seed in self.seeds], ignore_index=True)
 
     @property
@@ -141,7 +157,7 @@ class Audit:
 
 def frozen_table(name: str, columns: Mapping[str, Any]) -> pd.DataFrame:
     """A table with the columns of the data dictionary, in its order, rounded as on disk."""
-    table = pd.DataFrame({key: columns[key] for key in COLUMNS[name] if key in columns})
+    table = pd.DataFrame({key: columns[key] for key in ALL_COLUMNS[name] if key in columns})
     for key in table.columns:
         if table[key].dtype.kind == "f":
             table[key] = rounded(table[key].to_numpy())
@@ -172,7 +188,7 @@ def map_image(
     data.setflags(write=False)
     image = nib.Nifti1Image(data, affine)
     image.header.set_xyzt_units("mm")
-    image.header["descrip"] = MAPS[name][0][:79].encode()
+    image.header["descrip"] = ALL_MAPS[name][0][:79].encode()
     image.set_sform(affine, code=space_code)
     image.set_qform(affine, code=space_code)
     return image

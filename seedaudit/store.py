@@ -21,7 +21,14 @@ from nibabel.spatialimages import HeaderDataError
 
 from seedaudit._version import __version__
 from seedaudit.consensus.lowrank import LowRank
-from seedaudit.dictionary import COLUMNS, MAPS, PLACEMENT_COMPONENTS
+from seedaudit.dictionary import (
+    ALL_COLUMNS,
+    ALL_MAPS,
+    COLUMNS,
+    MAPS,
+    MAPS_WHERE_ASKED,
+    PLACEMENT_COMPONENTS,
+)
 from seedaudit.errors import DataError, Problem, StudyError
 from seedaudit.guards import inert, live, open_map, own_file, own_path, read_mapping
 from seedaudit.results import SCHEMA, SIGNIFICANT_DIGITS, Audit, SeedAudit, read_only
@@ -44,6 +51,9 @@ WORDS = (
     "target",
     "verdict",
     "note",
+    "source",
+    "seed_a",
+    "seed_b",
 )
 """Columns that hold text even where every cell looks like a number or is empty."""
 
@@ -65,6 +75,9 @@ UNREADABLE = (
 """What the readers of JSON, tables and images raise on damage; a result may come from anyone."""
 
 Extra = Callable[[Audit, Path], None]
+
+_VERDICTS = {True: "true", False: "false", None: "n/a"}
+"""Whether two seeds are interchangeable: the one column that may say that it cannot be told."""
 
 _PLACEMENT_MAPS = "placement_components"
 
@@ -195,16 +208,10 @@ def _write(audit: Audit, folder: Path) -> None:
         (own / "tables").mkdir(parents=True)
         (own / "maps").mkdir()
         for name, table in seed.tables.items():
-            write_table(own / "tables" / f"{name}.tsv", table)
-            described = {
-                key: {"Description": text} | ({"Units": units} if units else {})
-                for key, (text, units) in COLUMNS[name].items()
-                if key in table.columns
-            }
-            _write_json(own / "tables" / f"{name}.json", described)
+            _write_described(own / "tables", name, table)
         for name, image in seed.maps.items():
             nib.save(image, own / "maps" / f"{name}.nii.gz")
-            text, units = MAPS[name]
+            text, units = ALL_MAPS[name]
             _write_json(
                 own / "maps" / f"{name}.json",
                 {
@@ -216,6 +223,20 @@ def _write(audit: Audit, folder: Path) -> None:
             )
         if seed.placement_maps is not None:
             _write_placement_maps(seed, own / "maps")
+    if audit.between is not None:
+        (folder / "tables").mkdir(exist_ok=True)
+        _write_described(folder / "tables", "seeds", audit.between)
+
+
+def _write_described(folder: Path, name: str, table: pd.DataFrame) -> None:
+    """A table with its data dictionary beside it."""
+    write_table(folder / f"{name}.tsv", table)
+    described = {
+        key: {"Description": text} | ({"Units": units} if units else {})
+        for key, (text, units) in ALL_COLUMNS[name].items()
+        if key in table.columns
+    }
+    _write_json(folder / f"{name}.json", described)
 
 
 def _write_placement_maps(seed: SeedAudit, folder: Path) -> None:
@@ -268,6 +289,8 @@ def write_table(path: Path | StringIO, table: pd.DataFrame) -> None:
     for key in shown.columns:
         if shown[key].dtype == bool:
             shown[key] = np.where(shown[key], "true", "false")
+        elif key == "interchangeable":
+            shown[key] = [_VERDICTS[cell] for cell in shown[key]]
         elif not pd.api.types.is_numeric_dtype(shown[key]):
             shown[key] = [inert(" ".join(str(cell).split())) for cell in shown[key]]
             shown[key] = shown[key].replace("", "n/a")
@@ -301,6 +324,10 @@ def read_table(path: Path) -> pd.DataFrame:
             table[key] = table[key].fillna("n/a" if key == "state" else "").map(live)
         elif key == "used":
             table[key] = table[key].astype(bool)
+        elif key == "interchangeable":
+            told = {text: verdict for verdict, text in _VERDICTS.items()}
+            cells = [told.get(str(cell).lower()) for cell in table[key]]
+            table[key] = pd.Series(cells, dtype=object)
     return table
 
 
@@ -340,6 +367,7 @@ def load_audit(folder: str | Path) -> Audit:
             for name, told in zip(names, summary["seeds"], strict=True)
         )
         title = str(summary["title"])
+        between = _load_table(folder, "seeds") if "interchangeable" in summary else None
     except UNREADABLE as error:
         raise DataError(
             Problem(
@@ -349,7 +377,7 @@ def load_audit(folder: str | Path) -> Audit:
                 "run the audit again",
             )
         ) from error
-    return Audit(title, seeds, provenance)
+    return Audit(title, seeds, provenance, between)
 
 
 def _check_names(names: Sequence[Any]) -> None:
@@ -363,10 +391,11 @@ def _check_names(names: Sequence[Any]) -> None:
 
 
 def _load_seed(folder: Path, summary: dict[str, Any]) -> SeedAudit:
-    tables = {name: _load_table(folder, name) for name in COLUMNS}
+    asked = [name for name in ("steadier", "radii") if summary.get(name)]
+    tables = {name: _load_table(folder, name) for name in (*COLUMNS, *asked)}
     maps: dict[str, nib.Nifti1Image] = {}
     shape = None
-    for name in MAPS:
+    for name in (*MAPS, *(MAPS_WHERE_ASKED if "steadier" in asked else ())):
         stored = open_map(folder, "maps", f"{name}.nii.gz", shape=shape)
         shape = stored.shape
         data = np.array(np.asarray(stored.dataobj), dtype=stored.get_data_dtype())
@@ -378,7 +407,8 @@ def _load_seed(folder: Path, summary: dict[str, Any]) -> SeedAudit:
 
 def _load_table(folder: Path, name: str) -> pd.DataFrame:
     table = read_table(own_file(folder, "tables", f"{name}.tsv"))
-    first = next(iter(COLUMNS[name]))
+    first = next(iter(ALL_COLUMNS[name]))
     if first not in table.columns:
-        raise DataError(Problem(f"{name}.tsv", f"no column {first!r}", ", ".join(COLUMNS[name])))
+        allowed = ", ".join(ALL_COLUMNS[name])
+        raise DataError(Problem(f"{name}.tsv", f"no column {first!r}", allowed))
     return table

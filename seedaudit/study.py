@@ -233,9 +233,20 @@ class Claims(Section):
 class Steadier(Section):
     """The search for a steadier seed nearby."""
 
-    search: float = Field(default=8.0, gt=0)
-    """mm"""
+    search: float = Field(default=8.0, gt=0, le=50)
+    """Largest distance of a candidate from the reported seed, mm."""
+    step: float = Field(default=2.0, gt=0)
+    """Spacing of the candidates and of their neighbours, mm."""
     keep_similarity: float = Field(default=0.8, gt=0, le=1)
+    """Spatial correlation with the reported map that a candidate must keep."""
+    targets: int = Field(default=4000, ge=100, le=1_000_000)
+    """Voxels, evenly spread over the mask, that maps are compared on."""
+
+    @model_validator(mode="after")
+    def _step_fits(self) -> Self:
+        if self.step > self.search:
+            raise ValueError(f"`step` = {self.step:g} must not be above `search` = {self.search:g}")
+        return self
 
 
 class Study(Section):

@@ -16,7 +16,18 @@ from seedaudit.errors import DataError, Findings, StudyError
 from seedaudit.inputs.discover import Run
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
-from tests.breaks import bold, both, cell, confounds, filled, image, put, shift_origin, swap, without
+from tests.breaks import (
+    bold,
+    both,
+    cell,
+    confounds,
+    filled,
+    image,
+    put,
+    shift_origin,
+    swap,
+    without,
+)
 from tests.small_brain import brain_mask
 from tests.small_study import write_small_study
 
@@ -61,10 +72,14 @@ def plain(folder: Path) -> None:
            for row, number in ((1, 1), (5, 4))))(folder)  # fmt: skip
 
 
+UNCLEANED = swap(('confounds = ["trans_*", "rot_*"]\n', ""))
+"""The tables of the two participants differ in length, which would be told instead."""
+
+
 @pytest.mark.parametrize("copy", [as_it_is, packed_again, plain])
 def test_a_copy_of_somebody_elses_run(plan_of, copy):
     with pytest.raises(DataError) as raised:
-        plan_of(copy, put("data", 'on_bad_run = "set-aside"'))
+        plan_of(copy, UNCLEANED, put("data", 'on_bad_run = "set-aside"'))
     (problem,) = raised.value.problems
     assert "sub-01_task-rest_run-1_bold.nii" in problem.where
     assert "sub-04_task-rest_run-1_bold.nii" in problem.where
@@ -83,7 +98,9 @@ def test_a_copy_within_a_participant(plan_of):
 
 
 def test_copied_confounds_are_warned_of(plan_of):
-    plan = plan_of(lambda folder: shutil.copy(confounds(folder, 1), confounds(folder, 4)))
+    plan = plan_of(
+        UNCLEANED, lambda folder: shutil.copy(confounds(folder, 1), confounds(folder, 4))
+    )
     (warning,) = [text for text in plan.warnings if "same confounds" in text]
     assert warning == (
         "sub-01_task-rest_run-1_timeseries.tsv, sub-04_task-rest_run-1_timeseries.tsv: "
@@ -230,9 +247,15 @@ def test_a_bad_list_of_runs_hides_nothing(plan_of):
             swap(('model = "~ 1"', 'model = "~ amr"')),
         )
     told = str(raised.value)
-    for words in (f"{FOURTH}: no such file (bold of sub-04)", "listed 2 times", "empty mask", "'amr'"):
+    for words in (
+        f"{FOURTH}: no such file (bold of sub-04)",
+        "listed 2 times",
+        "empty mask",
+        "'amr'",
+    ):
         assert words in told
-    assert len(raised.value.problems) == 4
+    # and the same run is too long for the confounds of another
+    assert len(raised.value.problems) == 5
 
 
 def test_no_run_at_all_hides_nothing(plan_of):

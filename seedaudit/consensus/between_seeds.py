@@ -38,8 +38,8 @@ class SeedMaps:
         Reported centre, mm.
     effects : (N, B)
         Group effect of the used placements, Fisher z; row 0 is the reported one.
-    classes : (B,) int8
-        Classes of the reported placement.
+    classes : (A,) int8
+        Classes of the reported placement; the A voxels may be more than the B.
     sums : (N, G p, B)
         The same placements' x'z of every fold (`halves.fold_sums`).
     """

@@ -12,7 +12,9 @@ placement's map has with all participants.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from itertools import product
 from typing import Any
 
 import numpy as np
@@ -35,6 +37,7 @@ from seedaudit.sweep.moments import Moments, merged
 
 FloatArray = NDArray[np.float64]
 Classes = NDArray[np.int8]
+HalfClasses = dict[tuple[int, int], Classes | None]
 
 MEASURES = ("spatial_r", "ac1", "dice_positive", "dice_negative")
 
@@ -86,6 +89,7 @@ def ceiling(
     controls: Sequence[Moments] = (),
     control_keep: NDArray[np.bool_] | None = None,
     random_state: int = 0,
+    workers: int = 1,
 ) -> Ceiling | None:
     """Compare halves of the participants, at the reported and at shifted placements.
 
@@ -111,6 +115,8 @@ def ceiling(
         Voxels that a control seed is judged on: not its own sphere.
     random_state : int
         Of the choice of splits where there are too many.
+    workers : int
+        Threads; the numbers do not depend on how many.
 
     Returns
     -------
@@ -129,12 +135,12 @@ def ceiling(
     if not len(some):
         return None
     rows = np.flatnonzero(voxels)
-    r = _spatial(folds, rows, regions, n_regions, split)
+    r = _spatial(folds, rows, regions, n_regions, split, workers)
     picked = some[_spread(len(some), CLASS_SPLITS)]
     chosen = 1 + _spread(tails.shape[1] - 1, CLASS_PLACEMENTS)
     by_class = class_similarity(
         folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, tails, regions, n_regions,
-        members[picked],
+        members[picked], workers,
     )  # fmt: skip
     floor = _controls(folds, controls, rows, control_keep, split)
     return _assembled(r, by_class, floor, sizes, (len(some), len(picked), len(chosen)))
@@ -239,18 +245,19 @@ def _spatial(
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     split: Halves,
+    workers: int = 1,
 ) -> FloatArray:
     """Cross-half spatial r by placement, fold left out, and whole map or region, (N, D, 1 + K)."""
     order = np.argsort(regions, kind="stable")
     edges = np.searchsorted(regions[order], np.arange(n_regions + 1))
     bounds = np.vstack([[0, len(order)], np.stack([edges[:-1], edges[1:]], axis=1)])
     reported = fold_sums(folds, 0, rows[order])
-    return np.array(
-        [
-            cross_half_r(reported, fold_sums(folds, i, rows[order]), bounds, split)
-            for i in range(folds[0].zz.shape[0])
-        ]
-    )
+
+    def r_of(placement: int) -> FloatArray:
+        return cross_half_r(reported, fold_sums(folds, placement, rows[order]), bounds, split)
+
+    with ThreadPoolExecutor(workers) as pool:
+        return np.array(list(pool.map(r_of, range(folds[0].zz.shape[0]))))
 
 
 def class_similarity(
@@ -263,6 +270,7 @@ def class_similarity(
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     members: NDArray[np.bool_],
+    workers: int = 1,
 ) -> dict[str, FloatArray]:
     """AC1 and Dice between the classes of two halves, as in `ceiling`.
 
@@ -272,6 +280,8 @@ def class_similarity(
         Placements to compare with the reported one; the first of them is the reported one itself.
     members : (S, G) bool
         Folds of the first halves.
+    workers : int
+        Threads.
 
     Returns
     -------
@@ -281,20 +291,26 @@ def class_similarity(
     bucket = np.where(regions < 0, n_regions, regions).astype(np.int64)
     shape = (1 + len(folds), len(placements), 2 * len(members), 1 + n_regions)
     found = {name: np.full(shape, np.nan) for name in MEASURES[1:]}
-    reported: list[dict[tuple[int, int], Classes | None]] = []
-    for m, placement in enumerate(placements):
-        parts = [fold.placements(slice(placement, placement + 1)).voxels(voxels) for fold in folds]
-        for s, inside in enumerate(members):
-            here = _half_classes(parts, sizes, contrast, inside, tails[:, placement])
-            if m == 0:
-                reported.append(here)
-            for variant in range(1 + len(folds)):
-                for half in (0, 1):
-                    x, y = reported[s][half, variant], here[1 - half, variant]
-                    if x is None or y is None:
-                        continue
-                    for name, value in _measures(bucket, n_regions, x, y).items():
-                        found[name][variant, m, 2 * s + half] = value
+
+    def classes(placement: int) -> list[HalfClasses]:
+        rows = slice(placement, placement + 1)
+        parts = [fold.placements(rows).voxels(voxels) for fold in folds]
+        return [_half_classes(parts, sizes, contrast, m, tails[:, placement]) for m in members]
+
+    reported = classes(int(placements[0]))
+
+    def compare(m: int) -> None:
+        shifted = classes(int(placements[m])) if m else reported
+        for s, (one, other) in enumerate(zip(reported, shifted, strict=True)):
+            for variant, half in product(range(1 + len(folds)), (0, 1)):
+                x, y = one[half, variant], other[1 - half, variant]
+                if x is None or y is None:
+                    continue
+                for name, value in _measures(bucket, n_regions, x, y).items():
+                    found[name][variant, m, 2 * s + half] = value
+
+    with ThreadPoolExecutor(workers) as pool:
+        list(pool.map(compare, range(len(placements))))
     return {name: mean_defined(values, axis=2) for name, values in found.items()}
 
 
@@ -304,38 +320,41 @@ def _half_classes(
     contrast: FloatArray,
     inside: NDArray[np.bool_],
     tails: NDArray[np.integer[Any]],
-) -> dict[tuple[int, int], Classes | None]:
+) -> HalfClasses:
     """Classes by half and variant: 0 has all folds, variant 1 + g is without fold g.
 
     None where a half is too small for the design.
     """
-    made: dict[tuple[int, int], Classes | None] = {}
+    made: HalfClasses = {}
     for half, chosen in enumerate((inside, ~inside)):
         total = merged(part for part, taken in zip(parts, chosen, strict=True) if taken)
         n = int(np.asarray(sizes)[chosen].sum())
-        everyone = uniform_estimate(total, n, contrast)
-        for variant, sizes_then in enumerate(tails):
-            g = variant - 1
-            if variant and chosen[g]:
-                found = uniform_estimate(total - parts[g], n - sizes[g], contrast)
-            else:
-                found = everyone
-            made[half, variant] = _classes(found, sizes_then)
+        # where the fold is in the other half, only the sizes change
+        same = np.flatnonzero(np.concatenate([[True], ~chosen]))
+        everyone = _classes(uniform_estimate(total, n, contrast), tails[same])
+        made |= {(half, int(variant)): c for variant, c in zip(same, everyone, strict=True)}
+        for g in np.flatnonzero(chosen).tolist():
+            rest = uniform_estimate(total - parts[g], n - sizes[g], contrast)
+            made[half, g + 1] = _classes(rest, tails[g + 1 : g + 2])[0]
     return made
 
 
-def _classes(estimate: Estimate | None, tails: NDArray[np.integer[Any]]) -> Classes | None:
-    """The so many largest t as class +, and the so many smallest as class -."""
+def _classes(
+    estimate: Estimate | None, tails: NDArray[np.integer[Any]]
+) -> Sequence[Classes | None]:
+    """The so many largest t as class +, the so many smallest as class -, for pairs of sizes."""
     if estimate is None:
-        return None
-    t = np.nan_to_num(estimate.statistic)
-    positive, negative = (int(size) for size in tails)
-    ranks = [len(t) - max(positive, 1), max(negative, 1) - 1]
-    upper, lower = np.partition(t, ranks)[ranks]
-    # no class against the sign, also where the half has fewer voxels of it
-    above = (t >= upper) & (t > 0) & (positive > 0)
-    below = (t <= lower) & (t < 0) & (negative > 0)
-    return above.astype(np.int8) - below
+        return [None] * len(tails)
+    t = np.nan_to_num(estimate.statistic.astype(np.float32))
+    upper, lower = len(t) - np.maximum(tails[:, 0], 1), np.maximum(tails[:, 1], 1) - 1
+    ordered = np.partition(t, np.unique(np.concatenate([upper, lower])))
+    made = []
+    for positive, negative, high, low in zip(*tails.T, ordered[upper], ordered[lower], strict=True):
+        # no class against the sign, also where the half has fewer voxels of it
+        above = (t >= high) & (t > 0) & (positive > 0)
+        below = (t <= low) & (t < 0) & (negative > 0)
+        made.append(above.astype(np.int8) - below)
+    return made
 
 
 def _measures(

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,7 +35,8 @@ from seedaudit.consensus.overlap import (
 from seedaudit.consensus.regional import region_rows, region_table, regional_stability
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
 from seedaudit.inference.glm import solve_model
-from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier
+from seedaudit.inference.placementwise import placement_maps
 from seedaudit.sweep.moments import Moments, merged
 
 DENSITIES = np.arange(1, 51) / 100
@@ -146,6 +147,7 @@ def conclude(
     *,
     safe: float = 0.95,
     random_state: int = 0,
+    workers: int = 1,
 ) -> CloudConsensus:
     """Draw every conclusion about one cloud.
 
@@ -165,27 +167,29 @@ def conclude(
         Share of placements.
     random_state : int
         Of the bootstrap.
+    workers : int
+        Threads; the numbers do not depend on how many.
     """
-    total = merged(folds)
-    estimable = np.isfinite(solve_model(total, design.contrast, design.least_count).spread)
+    # what all placements share: counts and X'X
+    frame = merged(fold.placements(slice(0, 0)) for fold in folds)
+    estimable = np.isfinite(solve_model(frame, design.contrast, design.least_count).spread)
     voxels = space.analysis & estimable
-    kept = total.voxels(voxels)
-    del total
+    complete = voxels & (frame.count == len(design.matrix))
     classes_of = classifier(rule, space.ijk[voxels], space.shape)
-    maps = group_maps(kept, design.contrast, design.least_count, classes_of)
+    maps, without = placement_maps(
+        folds, fold_sizes, voxels, design.contrast, design.least_count, classes_of,
+        complete[voxels], workers=workers,
+    )  # fmt: skip
     labels = space.labels[voxels]
-    without = _without_each_fold(
-        kept, folds, fold_sizes, design, voxels, classes_of, labels, space.index
-    )
-    complete = voxels.copy()
-    complete[voxels] = kept.count == len(design.matrix)
-    del kept
     counts = class_counts(maps.classes[1:])
     stability = gwet_ac1(counts)
     sizes = [size for size in fold_sizes if size]
-    low, high = delete_fold_interval(np.array(stability), without.whole, sizes)
+    whole = np.array([gwet_ac1(left) for left in without.counts])
+    low, high = delete_fold_interval(np.array(stability), whole, sizes)
     regional = delete_fold_interval(
-        regional_stability(labels, space.index, maps.classes[1:]), without.regional, sizes
+        regional_stability(labels, space.index, counts),
+        np.array([regional_stability(labels, space.index, left) for left in without.counts]),
+        sizes,
     )
     effects = region_effects(maps.effects, labels, space.index)
     interval = bootstrap_interval(
@@ -203,6 +207,7 @@ def conclude(
         controls=controls.folds,
         control_keep=controls.keep[:, complete],
         random_state=random_state,
+        workers=workers,
     )
     return CloudConsensus(
         voxels,
@@ -264,44 +269,6 @@ def region_effects(
         if len(members):
             result[:, k] = effects[:, members].mean(axis=1, dtype=np.float64)
     return result
-
-
-class _WithoutFold(NamedTuple):
-    """Stability of the whole map (G,) and of the regions (G, K), and map sizes (G, 1 + N, 2) in
-    voxels that everybody has, with each fold left out in turn.
-    """
-
-    whole: NDArray[np.float64]
-    regional: NDArray[np.float64]
-    sizes: NDArray[np.int_]
-
-
-def _without_each_fold(
-    kept: Moments,
-    folds: Sequence[Moments],
-    fold_sizes: Sequence[int],
-    design: GroupDesign,
-    voxels: NDArray[np.bool_],
-    classes_of: Classifier,
-    labels: NDArray[np.int32],
-    index: NDArray[np.int_],
-) -> _WithoutFold:
-    whole, regional, sizes = [], [], []
-    complete = kept.count == len(design.matrix)
-    for fold, size in zip(folds, fold_sizes, strict=True):
-        if not size or len(fold_sizes) < 2:
-            continue
-        rest = kept - fold.voxels(voxels)
-        needed = design.least_count - size
-        classes = group_maps(rest, design.contrast, needed, classes_of).classes
-        whole.append(gwet_ac1(class_counts(classes[1:])))
-        regional.append(regional_stability(labels, index, classes[1:]))
-        sizes.append(map_sizes(classes[:, complete]))
-    return _WithoutFold(
-        np.array(whole),
-        np.array(regional).reshape(len(regional), len(index)),
-        np.array(sizes).reshape(len(sizes), kept.zz.shape[0], 2),
-    )
 
 
 def _maps(maps: GroupMaps, counts: NDArray[np.int32], safe: float) -> Table:

@@ -19,7 +19,7 @@ Classes = NDArray[np.int8]
 CALL_SHARE = 0.10
 
 
-def regional_stability(labels: IntArray, index: IntArray, classes: Classes) -> FloatArray:
+def regional_stability(labels: IntArray, index: IntArray, counts: IntArray) -> FloatArray:
     """Gwet's AC1 over the voxels of every region, with the placements as raters.
 
     Parameters
@@ -28,15 +28,15 @@ def regional_stability(labels: IntArray, index: IntArray, classes: Classes) -> F
         Region of every voxel, 0 for none.
     index : (K,) int array
         Regions in the wanted order; labels that are not in it are ignored.
-    classes : (N, V) int8 array
-        Classes of the drawn placements.
+    counts : (V, 3) int array
+        Drawn placements in class +, 0 and -, from `class_counts`.
 
     Returns
     -------
     (K,) array
         At most 1, negative values kept; NaN for a region without voxels and for N < 2.
     """
-    return _stability(region_rows(labels, index), len(index), classes)[1]
+    return _stability(region_rows(labels, index), len(index), counts)[1]
 
 
 def region_calls(positive: IntArray, negative: IntArray, n_voxels: IntArray) -> Classes:
@@ -142,7 +142,7 @@ def region_table(
     reported = joint[0].sum(axis=-1)
     drawn = joint.sum(axis=2)
     n_voxels = reported.sum(axis=-1)
-    agreement, stability = _stability(rows, n_regions, classes)
+    agreement, stability = _stability(rows, n_regions, class_counts(classes))
     missing = np.full(n_regions, np.nan)
     table: dict[str, NDArray[Any]] = {
         "reported_positive": reported[:, 2] / np.maximum(n_voxels, 1),
@@ -192,17 +192,18 @@ def region_rows(labels: IntArray, index: IntArray) -> NDArray[np.intp]:
 
 
 def _stability(
-    rows: NDArray[np.intp], n_regions: int, classes: Classes
+    rows: NDArray[np.intp], n_regions: int, counts: IntArray
 ) -> tuple[FloatArray, FloatArray]:
-    """Pairwise agreement and AC1 of every region, (K,) each."""
+    """Pairwise agreement and AC1 of every region, (K,) each, from counts (V, 3)."""
     inside = np.flatnonzero(rows >= 0)
     region = rows[inside]
-    counts = class_counts(classes)[inside]
+    n_placements = counts[:1].sum()
+    counts = counts[inside]
     n_voxels = np.bincount(region, minlength=n_regions).astype(np.float64)
     n_voxels[n_voxels == 0] = np.nan
     agreement = np.bincount(region, unit_agreement(counts), minlength=n_regions) / n_voxels
     sums = [np.bincount(region, column, minlength=n_regions) for column in counts.T]
-    shares = np.stack(sums, axis=1) / n_voxels[:, None] / len(classes)
+    shares = np.stack(sums, axis=1) / n_voxels[:, None] / n_placements
     return agreement, ac1_from_shares(agreement, shares)
 
 

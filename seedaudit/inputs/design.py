@@ -139,7 +139,9 @@ def _model_columns(model: str) -> tuple[set[str], set[str]]:
     ]
     problems += [
         Problem(
-            f"model {brief(model)}", f"{name!r} stands both as {name} and as C({name})", "one of them"
+            f"model {brief(model)}",
+            f"{name!r} stands both as {name} and as C({name})",
+            "one of them",
         )
         for name in sorted(factors & others)
     ]
@@ -254,14 +256,18 @@ def _model_matrix(model: str, data: pd.DataFrame) -> ModelMatrix:
     except (FormulaicError, TypeError, ValueError, RecursionError) as error:
         raise _model_error(model, error) from error
     if not isinstance(matrix, ModelMatrix) or matrix.shape[1] == 0:
-        raise StudyError(Problem(f"model {brief(model)}", "it has no columns", "~ 1, ~ arm + age, ..."))
+        raise StudyError(
+            Problem(f"model {brief(model)}", "it has no columns", "~ 1, ~ arm + age, ...")
+        )
     return matrix
 
 
 def _model_error(model: str, error: Exception) -> StudyError:
     text = str(error).strip().splitlines()[0] if str(error).strip() else type(error).__name__
     text = "it is nested too deeply" if isinstance(error, RecursionError) else text
-    return StudyError(Problem(f"model {brief(model)}", text, "Wilkinson notation, such as ~ arm + age"))
+    return StudyError(
+        Problem(f"model {brief(model)}", text, "Wilkinson notation, such as ~ arm + age")
+    )
 
 
 def _check_rank(model: str, values: NDArray[np.float64], names: tuple[str, ...]) -> None:

@@ -152,7 +152,7 @@ def _matching(pattern: str, base: Path) -> list[Path]:
 
 
 def _bids_files(folder: Path, select: Mapping[str, str]) -> list[Path]:
-    if not folder.is_dir():
+    if not os.path.isdir(folder):  # which a name that is too long does not upset
         raise StudyError(Problem("data.bids", f"{folder} is no folder", "a BIDS derivative folder"))
     paths = get_bids_files(
         glob.escape(str(folder)), file_tag="bold", file_type="nii*", modality_folder="func"
@@ -184,10 +184,11 @@ def _bids_files(folder: Path, select: Mapping[str, str]) -> list[Path]:
 
 
 def _from_paths(images: Sequence[Path]) -> list[Run]:
-    shared = os.path.commonpath([image.parent for image in images])
+    full = [Path(os.path.abspath(image)) for image in images]
+    shared = os.path.commonpath([image.parent for image in full])
     return [
-        Run(_participant(image), _run_label(image.relative_to(shared)), image, _confounds(image))
-        for image in images
+        Run(_participant(image), _run_label(where.relative_to(shared)), image, _confounds(image))
+        for image, where in zip(images, full, strict=True)
     ]
 
 
@@ -211,7 +212,7 @@ def _confounds(image: Path) -> Path | None:
         f"{image.name.removesuffix('.gz').removesuffix('.nii')}_confounds.tsv",
         f"{stem}_confounds.tsv",
     )
-    return next((path for name in names if is_file(path := image.with_name(name))), None)
+    return next((path for name in names if is_file(path := image.parent / name)), None)
 
 
 def _stem(image: Path) -> str:

@@ -81,7 +81,7 @@ def read_regions(source: str | Path, voxels: VoxelSet) -> Regions:
 
 
 def _look_up(image: Path) -> tuple[NDArray[np.int64], tuple[str, ...]]:
-    path = image.with_name(image.name.removesuffix(".gz").removesuffix(".nii") + ".tsv")
+    path = image.parent / (image.name.removesuffix(".gz").removesuffix(".nii") + ".tsv")
     where = str(path)
     if not path.is_file():
         raise DataError(

@@ -11,23 +11,15 @@ from typing import Any
 import numpy as np
 import pandas as pd
 from matplotlib import colormaps
-from matplotlib.colors import Colormap, LinearSegmentedColormap, to_rgb
+from matplotlib.colors import to_rgb
 from numpy.typing import NDArray
 
 from seedaudit.consensus.lowrank import LowRank, packed
 from seedaudit.report.slices import body_frame, grid_of
-from seedaudit.report.style import ANATOMY, DIVERGING, INK
+from seedaudit.report.style import DARK, LIGHT, Palette
 from seedaudit.results import SeedAudit
 from seedaudit.space.grid import Grid, VoxelSet
 
-_DARK_DIVERGING = LinearSegmentedColormap.from_list(
-    "seedaudit-dark", ["#b3c4ff", "#5b74cf", "#3b3a40", "#bd6b22", "#ffc078"], N=511
-)
-"""The diverging map for dark paper: its ends are bright there, its middle is dark."""
-_DARK_ANATOMY = LinearSegmentedColormap.from_list(
-    "seedaudit-dark-anatomy",
-    [(0.0, "#15171b"), (0.05, "#6e7078"), (0.4, "#53555c"), (1.0, "#26282d")],
-)
 LEVELS = 64
 """Shades of one class."""
 FAINTEST = 0.34
@@ -109,18 +101,18 @@ def page_colours() -> dict[str, Any]:
     """The colours that the page draws with, each as red, green, blue of 0 to 255."""
     sides = 0.5 * np.linspace(FAINTEST, 1, LEVELS)
 
-    def theme(diverging: Colormap, anatomy: Colormap, ink: str, hatch: str) -> dict[str, Any]:
+    def theme(colours: Palette) -> dict[str, Any]:
         return {
-            "plus": _rgb(diverging(0.5 + sides)),
-            "minus": _rgb(diverging(0.5 - sides)),
-            "greys": _rgb(anatomy(np.linspace(0, 1, GREYS + 1))),
-            "ink": _rgb([to_rgb(ink)])[0],
-            "hatch": _rgb([to_rgb(hatch)])[0],
+            "plus": _rgb(colours.diverging(0.5 + sides)),
+            "minus": _rgb(colours.diverging(0.5 - sides)),
+            "greys": _rgb(colours.anatomy(np.linspace(0, 1, GREYS + 1))),
+            "ink": _rgb([to_rgb(colours.ink)])[0],
+            "hatch": _rgb([to_rgb(colours.paper)])[0],
         }
 
     return {
-        "light": theme(DIVERGING, ANATOMY, INK, "#ffffff"),
-        "dark": theme(_DARK_DIVERGING, _DARK_ANATOMY, "#f1efe9", "#15171b"),
+        "light": theme(LIGHT),
+        "dark": theme(DARK),
         "cividis": _rgb(colormaps["cividis"](np.linspace(0, 1, LEVELS))),
     }
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -26,29 +25,48 @@ from seedaudit.report.slices import (
     step_of,
     whole_plane,
 )
-from seedaudit.report.style import ANATOMY, DIVERGING, INK, LINE, PALE, TITLE, TYPE, Sheet, crowding
-from seedaudit.report.words import number, point
+from seedaudit.report.style import LINE, TITLE, TYPE, Palette, Sheet, crowding, mark
+from seedaudit.report.words import number, plural, point
 from seedaudit.results import SeedAudit
 
 FULL_INK = 0.1
 """Share of placements from which a colour covers the anatomy wholly."""
 
-COLUMNS = 4
 GAP = 3.0
 """Between slices, mm."""
 LEAST_WINDOW = 36.0
 """Half the width of the windows of the cloud, mm."""
+LEGEND_WIDTH = 58.0
+"""Of the legend of the cloud, mm; it stands beside the windows where there is room for both."""
+WIDE = 130.0
+"""A sheet from this width on has its legends side by side with something, mm."""
+NARROWEST_SLICE = 31.0
+"""Of a slice with its two lines of title, mm."""
+MOST_COLUMNS = 4
 
-CLOUD_FOOT = 2 * LINE + 1.5
-AGREEMENT_FOOT = 2 * LINE + 5.8
 SLICE_TITLE = 2 * LINE + 0.5
+
+
+def reported_mark(colours: Palette) -> dict[str, Any]:
+    """Look of the reported centre."""
+    return mark("D", 4.2, colours.ink, colours.paper, 0.7)
+
+
+def _used_mark(colours: Palette) -> dict[str, Any]:
+    return mark("o", 2.2, colours.plus_pale, colours.ink, 0.35)
+
+
+def _aside_mark(colours: Palette) -> dict[str, Any]:
+    return mark("x", 3.2, "none", colours.ink, 0.8)
 
 
 def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     """Panel of the cloud: three planes through the reported centre, all centres projected."""
     sheet.title("Reported seed and drawn placements", letter)
     top = TITLE + LINE + 0.5
-    side = min((sheet.width - 2 * GAP) / 3, sheet.height - top - CLOUD_FOOT)
+    beside = sheet.width >= WIDE
+    foot = 0.0 if beside else _cloud_foot(sheet.width)
+    side = min(_window(sheet.width), sheet.height - top - foot)
     at = np.asarray(seed.summary["at_mm"], dtype=float)
     reach = float(seed.summary["radius_mm"]) + float(seed.summary["within_mm"])
     half = max(LEAST_WINDOW, 2.5 * reach)
@@ -56,76 +74,65 @@ def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
         left = position * (side + GAP)
         plane = near_plane(kind, at, half, step_of(seed))
         ax = sheet.place(left, top, side, side)
-        _picture(ax, seed, plane)
-        _frame(ax, plane)
-        _placements(ax, seed, plane)
+        picture(ax, seed, plane, sheet.colours)
+        frame(ax, plane, sheet.colours)
+        _placements(ax, seed, plane, sheet.colours)
         axis = "xyz"[plane.through]
         label = f"{kind}, {axis} = {number(at[plane.through])} mm"
         sheet.write(left, TITLE, label)
-    sheet.legend(0, top + side + 1.5, _cloud_legend(seed), 2)
+    handles = _cloud_legend(seed, sheet.colours)
+    if beside:
+        sheet.legend(3 * (side + GAP) + 2, top + 1, handles, 1)
+    else:
+        sheet.legend(0, top + side + 1.5, handles, 2 if sheet.width > 105 else 1)
 
 
-def _placements(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
+def _window(width: float) -> float:
+    """Side of a window of the cloud on a sheet of that width, mm."""
+    return (width - 2 * GAP - (LEGEND_WIDTH if width >= WIDE else 0)) / 3
+
+
+def _cloud_foot(width: float) -> float:
+    return (2 if width > 105 else 4) * LINE + 1.5
+
+
+def cloud_height(width: float) -> float:
+    """Height of the panel at that width, mm."""
+    return TITLE + LINE + 0.5 + _window(width) + (0 if width >= WIDE else _cloud_foot(width))
+
+
+def _placements(ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette) -> None:
     along, up, _ = DIRECTIONS[plane.kind]
     table = cloud_rows(seed)
     centres = table[["x", "y", "z"]].to_numpy(dtype=float)[:, [along, up]]
     drawn = table["kind"].isin(["jitter", "lattice"]).to_numpy()
     used = table["used"].to_numpy(dtype=bool)
     shrink, many = crowding(len(table))
-    for shown, style in ((drawn & ~used, _ASIDE), (drawn & used, _USED)):
+    for shown, style in ((drawn & ~used, _aside_mark(colours)), (drawn & used, _used_mark(colours))):
         size = {"markersize": style["markersize"] * shrink}
         ax.plot(*centres[shown].T, **style | size, rasterized=many)
     at = np.asarray(seed.summary["at_mm"], dtype=float)[[along, up]]
     radius = float(seed.summary["radius_mm"])
-    for colour, width in (("white", 1.8), (INK, 0.8)):
+    for colour, width in ((colours.paper, 1.8), (colours.ink, 0.8)):
         circle = Circle(
             (at[0], at[1]), radius, fill=False, edgecolor=colour, linewidth=width, zorder=3
         )
         ax.add_patch(circle)
-    ax.plot(*at, **_REPORTED, zorder=4)
+    ax.plot(*at, **reported_mark(colours), zorder=4)
 
 
-_USED: dict[str, Any] = {
-    "linestyle": "none",
-    "marker": "o",
-    "markersize": 2.2,
-    "markerfacecolor": "#e59a4c",
-    "markeredgecolor": INK,
-    "markeredgewidth": 0.35,
-}
-_ASIDE: dict[str, Any] = {
-    "linestyle": "none",
-    "marker": "x",
-    "markersize": 3.2,
-    "markeredgecolor": INK,
-    "markeredgewidth": 0.8,
-}
-_REPORTED: dict[str, Any] = {
-    "linestyle": "none",
-    "marker": "D",
-    "markersize": 4.2,
-    "markerfacecolor": INK,
-    "markeredgecolor": "white",
-    "markeredgewidth": 0.7,
-}
-
-
-def _cloud_legend(seed: SeedAudit) -> list[Artist]:
+def _cloud_legend(seed: SeedAudit, colours: Palette) -> list[Artist]:
     at, radius = seed.summary["at_mm"], seed.summary["radius_mm"]
     used, aside = seed.summary["n_placements_used"], seed.summary["n_placements_set_aside"]
-    circle: dict[str, Any] = {
-        "marker": "o",
-        "markersize": 6,
-        "markerfacecolor": "none",
-        "markeredgecolor": INK,
-    }
+    circle = mark("o", 6, "none", colours.ink, 1.0)
     handles: list[Artist] = [
-        Line2D([], [], **_REPORTED, label=f"reported centre {point(at)} mm"),
-        Line2D([], [], linestyle="none", **circle, label=f"its sphere, radius {number(radius)} mm"),
-        Line2D([], [], **_USED, label=f"drawn placement, used ({used})"),
+        Line2D([], [], **reported_mark(colours), label=f"reported centre {point(at)} mm"),
+        Line2D([], [], **circle, label=f"its sphere, radius {number(radius)} mm"),
+        Line2D([], [], **_used_mark(colours), label=f"drawn placement, used ({used})"),
     ]
     if aside:
-        handles.append(Line2D([], [], **_ASIDE, label=f"drawn placement, set aside ({aside})"))
+        label = f"drawn placement, set aside ({aside})"
+        handles.append(Line2D([], [], **_aside_mark(colours), label=label))
     return handles
 
 
@@ -134,44 +141,63 @@ def agreement(seed: SeedAudit, sheet: Sheet, letter: str = "", places: int = 3) 
     sheet.title("Share of placements in class + and in class −", letter)
     found = contested_places(seed, places)
     shown = [("at the reported seed", tuple(float(x) for x in seed.summary["at_mm"]))]
-    for place in found:
-        unit = "voxel" if place.n_voxels == 1 else "voxels"
-        shown.append((f"contested: {place.n_voxels} {unit}", place.at))
-    frame = body_frame(seed)
-    columns = max(COLUMNS, 1 + places)
-    extent = frame[1] - frame[0]
+    shown += [(f"contested: {plural(place.n_voxels, 'voxel')}", place.at) for place in found]
+    box = body_frame(seed)
+    extent = box[1] - box[0]
+    columns, rows = _columns(sheet.width, 1 + places)
     room = (sheet.width - GAP * (columns - 1)) / columns
-    top = TITLE + SLICE_TITLE
-    scale = min(room / extent[0], (sheet.height - top - AGREEMENT_FOOT) / extent[1])
+    down = (sheet.height - TITLE - _key_height(sheet.width)) / rows - SLICE_TITLE
+    scale = min(room / extent[0], (down - (GAP if rows > 1 else 0)) / extent[1])
     width, height = scale * extent[0], scale * extent[1]
-    for column, (label, at) in enumerate(shown):
-        left = column * (room + GAP)
-        sheet.write(left, TITLE, f"{label}\n{point(at)} mm", linespacing=1.2)
-        ax = sheet.place(left, top, width, height)
-        plane = whole_plane("axial", at, frame, step_of(seed))
-        _picture(ax, seed, plane, overlay=True)
-        _frame(ax, plane)
-        _zone(ax, seed, plane)
-        _reported_outline(ax, seed, plane)
-        if column:
-            _cross(ax, at[0], at[1], 0.06 * extent[0])
+    pitch = SLICE_TITLE + height + GAP
+    for number_shown, (label, at) in enumerate(shown):
+        row, column = divmod(number_shown, columns)
+        left, top = column * (room + GAP), TITLE + row * pitch
+        sheet.write(left, top, f"{label}\n{point(at)} mm", linespacing=1.2)
+        ax = sheet.place(left, top + SLICE_TITLE, width, height)
+        plane = whole_plane("axial", at, box, step_of(seed))
+        picture(ax, seed, plane, sheet.colours, overlay=True)
+        frame(ax, plane, sheet.colours)
+        _zone(ax, seed, plane, sheet.colours)
+        _reported_outline(ax, seed, plane, sheet.colours)
+        if number_shown:
+            _cross(ax, at[0], at[1], 0.06 * extent[0], sheet.colours)
         else:
-            ax.plot(at[0], at[1], **_REPORTED)
+            ax.plot(at[0], at[1], **reported_mark(sheet.colours))
     if not found:
-        left = room + GAP
-        sheet.write(left, TITLE, "No voxel is contested.")
-    _agreement_key(sheet, top + height + 1.5)
+        sheet.write(room + GAP, TITLE, "No voxel is contested.")
+    used_rows = _columns(sheet.width, len(shown))[1]
+    _agreement_key(sheet, TITLE + used_rows * pitch - GAP + 1.5)
 
 
-def _picture(ax: Axes, seed: SeedAudit, plane: Plane, *, overlay: bool = False) -> None:
+def _columns(width: float, count: int) -> tuple[int, int]:
+    """Columns and rows of so many slices on a sheet of that width."""
+    fit = max(1, int((width + GAP) / (NARROWEST_SLICE + GAP)))
+    columns = fit if count > MOST_COLUMNS else min(fit, MOST_COLUMNS)
+    return columns, -(-count // columns)
+
+
+def agreement_height(width: float, seed: SeedAudit, most_slice: float, places: int = 3) -> float:
+    """Height of the panel at that width, mm, its slices at most so high."""
+    extent = np.diff(body_frame(seed), axis=0)[0]
+    columns, rows = _columns(width, 1 + places)
+    room = (width - GAP * (columns - 1)) / columns
+    slice_height = min(most_slice, room * extent[1] / extent[0])
+    between = GAP if rows > 1 else 0
+    return TITLE + rows * (SLICE_TITLE + slice_height + between) + _key_height(width)
+
+
+def picture(
+    ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette, *, overlay: bool = False
+) -> None:
     """Anatomy, and on it the shares; one image, so that the vector files hold one image."""
-    colours = ANATOMY(np.clip(sample_smooth(seed.maps["anatomy"], plane), 0, 1))[..., :3]
+    ground = colours.anatomy(np.clip(sample_smooth(seed.maps["anatomy"], plane), 0, 1))[..., :3]
     if overlay:
         positive = np.nan_to_num(sample(seed.maps["agreement_positive"], plane))
         negative = np.nan_to_num(sample(seed.maps["agreement_negative"], plane))
-        colours = _blend(colours, positive, negative)
+        ground = blend(ground, positive, negative, colours)
     ax.imshow(
-        np.round(colours * 255).astype(np.uint8),
+        np.round(ground * 255).astype(np.uint8),
         origin="lower",
         extent=plane.window,
         interpolation="none",
@@ -179,27 +205,32 @@ def _picture(ax: Axes, seed: SeedAudit, plane: Plane, *, overlay: bool = False) 
     )
 
 
-def _blend(
-    colours: NDArray[np.float64], positive: NDArray[np.float64], negative: NDArray[np.float64]
+def blend(
+    ground: NDArray[np.float64],
+    positive: NDArray[np.float64],
+    negative: NDArray[np.float64],
+    colours: Palette,
 ) -> NDArray[np.float64]:
     """Lay the shares of both tails (...) over colours (..., 3); a voxel in both gets their mean."""
     total = positive + negative
     part = np.divide(positive, total, out=np.zeros_like(total), where=total > 0)[..., None]
-    upper = DIVERGING(0.5 + 0.5 * np.clip(positive, 0, 1))[..., :3]
-    lower = DIVERGING(0.5 - 0.5 * np.clip(negative, 0, 1))[..., :3]
+    upper = colours.diverging(0.5 + 0.5 * np.clip(positive, 0, 1))[..., :3]
+    lower = colours.diverging(0.5 - 0.5 * np.clip(negative, 0, 1))[..., :3]
     cover = np.clip(total / FULL_INK, 0, 1)[..., None]
-    return np.asarray((1 - cover) * colours + cover * (part * upper + (1 - part) * lower))
+    return np.asarray((1 - cover) * ground + cover * (part * upper + (1 - part) * lower))
 
 
-def _frame(ax: Axes, plane: Plane) -> None:
+def frame(ax: Axes, plane: Plane, colours: Palette) -> None:
     """Window, border and the letters of the directions."""
     ax.set_xlim(*plane.window[:2])
     ax.set_ylim(*plane.window[2:])
     ax.set_xticks([])
     ax.set_yticks([])
     for spine in ax.spines.values():
-        spine.set_color(PALE)
-    plate: dict[str, Any] = {"facecolor": "white", "edgecolor": "none", "alpha": 0.8, "pad": 0.6}
+        spine.set_color(colours.pale)
+    plate: dict[str, Any] = {
+        "facecolor": colours.paper, "edgecolor": "none", "alpha": 0.8, "pad": 0.6,
+    }  # fmt: skip
     for x, side, letter in zip((0.025, 0.975), ("left", "right"), plane.letters, strict=True):
         ax.text(
             x, 0.03, letter, transform=ax.transAxes, ha=side, va="bottom", fontsize=TYPE,
@@ -207,7 +238,7 @@ def _frame(ax: Axes, plane: Plane) -> None:
         )  # fmt: skip
 
 
-def _zone(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
+def _zone(ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette) -> None:
     zone = excluded_zone(seed, plane)
     if zone.any():
         ax.contourf(
@@ -215,37 +246,45 @@ def _zone(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
             hatches=["//////"],
         )  # fmt: skip
         ax.contour(
-            plane.across, plane.upward, zone.astype(float), levels=[0.5], colors=INK,
+            plane.across, plane.upward, zone.astype(float), levels=[0.5], colors=colours.ink,
             linewidths=0.5, linestyles="dotted",
         )  # fmt: skip
 
 
-def _reported_outline(ax: Axes, seed: SeedAudit, plane: Plane) -> None:
+def _reported_outline(ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette) -> None:
     classes = np.nan_to_num(sample(seed.maps["class_reported"], plane))
     for sign, style in ((1, "solid"), (-1, "dashed")):
         held = (classes == sign).astype(float)
         if held.any() and not held.all():
             ax.contour(
-                plane.across, plane.upward, held, levels=[0.5], colors=INK, linewidths=0.5,
+                plane.across, plane.upward, held, levels=[0.5], colors=colours.ink, linewidths=0.5,
                 linestyles=style,
             )  # fmt: skip
 
 
-def _cross(ax: Axes, x: float, y: float, arm: float) -> None:
+def _cross(ax: Axes, x: float, y: float, arm: float, colours: Palette) -> None:
     """An open cross, so that the voxel itself stays visible."""
-    for width, colour in ((1.8, "white"), (0.8, INK)):
+    for width, colour in ((1.8, colours.paper), (0.8, colours.ink)):
         for dx, dy in ((1, 0), (-1, 0), (0, 1), (0, -1)):
             ends = ([x + 0.5 * arm * dx, x + arm * dx], [y + 0.5 * arm * dy, y + arm * dy])
             ax.plot(*ends, color=colour, linewidth=width, solid_capstyle="butt")
 
 
+def _key_height(width: float) -> float:
+    if width >= WIDE:
+        return 2 * LINE + 5.8
+    return 2 * LINE + 5.8 + (3 if width > 105 else 5) * LINE
+
+
 def _agreement_key(sheet: Sheet, top: float) -> None:
     """Colour bar of both tails, and what lines and hatching mean."""
-    left, width = 6.0, min(66.0, 0.38 * sheet.width)
+    colours = sheet.colours
+    beside = sheet.width >= WIDE
+    left, width = 6.0, min(66.0, 0.38 * sheet.width if beside else sheet.width - 12)
     ax = sheet.place(left, top, width, 2.6)
     share = np.linspace(-1, 1, 401)
-    ground = np.broadcast_to(ANATOMY(0.6)[:3], (1, share.size, 3))
-    bar = _blend(ground, np.clip(share, 0, 1)[None], np.clip(-share, 0, 1)[None])
+    ground = np.broadcast_to(colours.anatomy(0.6)[:3], (1, share.size, 3))
+    bar = blend(ground, np.clip(share, 0, 1)[None], np.clip(-share, 0, 1)[None], colours)
     ax.imshow(bar, extent=(-1, 1, 0, 1), aspect="auto", interpolation="none")
     ax.set_yticks([])
     ax.set_xticks([-1, -0.5, 0, 0.5, 1], ["100 %", "50 %", "0", "50 %", "100 %"], fontsize=TYPE)
@@ -254,15 +293,18 @@ def _agreement_key(sheet: Sheet, top: float) -> None:
     below = top + 2.6 + 1.2 + LINE
     sheet.write(left, below, "class −")
     sheet.write(left + width, below, "class +", ha="right")
-    line: dict[str, Any] = {"color": INK, "linewidth": 0.8}
-    handles: Sequence[Artist] = (
+    line: dict[str, Any] = {"color": colours.ink, "linewidth": 0.8}
+    handles: list[Artist] = [
         Line2D([], [], **line, label="class + as reported"),
         Line2D([], [], **line, linestyle="dashed", label="class − as reported"),
         Patch(
-            facecolor="none", edgecolor=INK, linewidth=0.5, linestyle="dotted", hatch="//////",
-            label="not analysed: spheres and margin",
+            facecolor="none", edgecolor=colours.ink, linewidth=0.5, linestyle="dotted",
+            hatch="//////", label="not analysed: spheres and margin",
         ),
-        Line2D([], [], **_REPORTED, label="reported centre"),
-        Line2D([], [], linestyle="none", marker="+", markersize=6, color=INK, label="contested"),
-    )  # fmt: skip
-    sheet.legend(left + width + 10, top, handles, 2)
+        Line2D([], [], **reported_mark(colours), label="reported centre"),
+        Line2D([], [], **mark("+", 6, "none", colours.ink, 1.0), label="contested"),
+    ]  # fmt: skip
+    if beside:
+        sheet.legend(left + width + 10, top, handles, 2)
+    else:
+        sheet.legend(0, below + LINE + 1, handles, 2 if sheet.width > 105 else 1)

@@ -15,7 +15,7 @@ import matplotlib
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.colors import LinearSegmentedColormap
+from matplotlib.colors import Colormap, LinearSegmentedColormap
 from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties
 from matplotlib.legend import Legend
@@ -25,7 +25,6 @@ from matplotlib.textpath import text_to_path
 MM_PER_INCH = 25.4
 MM_PER_POINT = MM_PER_INCH / 72
 
-INK, SOFT, PALE = "#1a1a1a", "#5f5f5f", "#c9c9c9"
 TYPE = 7.0
 """Size of all text but panel titles, points; the smallest that print allows."""
 TITLE_TYPE = 8.0
@@ -36,27 +35,79 @@ TITLE = 5.2
 LEAST_PART = 2.0
 """Smaller parts of a panel show nothing, mm."""
 
-DIVERGING = LinearSegmentedColormap.from_list(
-    "seedaudit", ["#1f2f7a", "#7f97d8", "#eeeae4", "#e59a4c", "#8f3f00"], N=511
-)
-"""Indigo to rust through a neutral middle: apart for every common kind of colour vision."""
 
-ANATOMY = LinearSegmentedColormap.from_list(
-    "seedaudit-anatomy",
-    [(0.0, "#ffffff"), (0.05, "#6c6c6c"), (0.4, "#8c8c8c"), (1.0, "#f4f4f4")],
+def _map(name: str, colours: Sequence[Any]) -> Colormap:
+    return LinearSegmentedColormap.from_list(name, colours, N=511)
+
+
+@dataclass(frozen=True)
+class Palette:
+    """The colours of one scheme.
+
+    `plus` and `minus` are the two ends of the diverging map, `_pale` what lies between an end and
+    the middle. They are apart for every common kind of colour vision.
+    """
+
+    paper: str
+    ink: str
+    soft: str
+    pale: str
+    plus: str
+    plus_pale: str
+    neutral: str
+    minus_pale: str
+    minus: str
+    anatomy: Colormap
+
+    @property
+    def diverging(self) -> Colormap:
+        """Class minus to class plus through a neutral middle."""
+        ends = [self.minus, self.minus_pale, self.neutral, self.plus_pale, self.plus]
+        return _map("seedaudit", ends)
+
+
+LIGHT = Palette(
+    paper="#ffffff",
+    ink="#1a1a1a",
+    soft="#5f5f5f",
+    pale="#c9c9c9",
+    plus="#8f3f00",
+    plus_pale="#e59a4c",
+    neutral="#eeeae4",
+    minus_pale="#7f97d8",
+    minus="#1f2f7a",
+    # light greys under dark ink; what is empty stays the white of the paper
+    anatomy=LinearSegmentedColormap.from_list(
+        "seedaudit-anatomy",
+        [(0.0, "#ffffff"), (0.05, "#6c6c6c"), (0.4, "#8c8c8c"), (1.0, "#f4f4f4")],
+    ),
 )
-"""Light greys under dark ink; what is empty stays the white of the paper."""
+"""Dark ink on white, for print."""
+
+DARK = Palette(
+    paper="#15171b",
+    ink="#f1efe9",
+    soft="#b3b0aa",
+    pale="#4a4c53",
+    plus="#ffc078",
+    plus_pale="#bd6b22",
+    neutral="#3b3a40",
+    minus_pale="#5b74cf",
+    minus="#b3c4ff",
+    anatomy=LinearSegmentedColormap.from_list(
+        "seedaudit-dark-anatomy",
+        [(0.0, "#15171b"), (0.05, "#6e7078"), (0.4, "#53555c"), (1.0, "#26282d")],
+    ),
+)
+"""Light ink on dark, for screens: the ends of the diverging map are bright, its middle is dark."""
+
+INK, ANATOMY, DIVERGING = LIGHT.ink, LIGHT.anatomy, LIGHT.diverging
 
 _SETTINGS: Any = {
     "font.family": ["DejaVu Sans"],  # comes with matplotlib, so the bytes do not depend on the host
     "font.size": TYPE,
     "text.parse_math": False,  # a dollar sign in the name of a region is a dollar sign
-    "text.color": INK,
-    "axes.edgecolor": INK,
-    "axes.labelcolor": INK,
     "axes.linewidth": 0.6,
-    "xtick.color": INK,
-    "ytick.color": INK,
     "xtick.labelsize": TYPE,
     "ytick.labelsize": TYPE,
     "xtick.major.width": 0.6,
@@ -72,18 +123,28 @@ _SETTINGS: Any = {
 }
 
 
+_PAPER = ("axes.facecolor", "figure.facecolor", "savefig.facecolor")
+_INKED = (
+    "text.color", "axes.edgecolor", "axes.labelcolor", "xtick.color", "ytick.color", "hatch.color",
+)  # fmt: skip
+
+
 @contextmanager
-def look() -> Iterator[None]:
+def look(colours: Palette = LIGHT) -> Iterator[None]:
     """The settings of this program's figures, for as long as the context lasts."""
     with matplotlib.rc_context():
         matplotlib.rcdefaults()
         matplotlib.rcParams.update(_SETTINGS)
+        matplotlib.rcParams.update(
+            dict.fromkeys(_PAPER, colours.paper) | dict.fromkeys(_INKED, colours.ink)
+        )
         yield
 
 
-def blank_figure(width: float, height: float) -> Figure:
-    """A white figure of so many mm, without any window system behind it."""
-    figure = Figure(figsize=(width / MM_PER_INCH, height / MM_PER_INCH), facecolor="white")
+def blank_figure(width: float, height: float, colours: Palette = LIGHT) -> Figure:
+    """An empty figure of so many mm, without any window system behind it."""
+    size = (width / MM_PER_INCH, height / MM_PER_INCH)
+    figure = Figure(figsize=size, facecolor=colours.paper)
     FigureCanvasAgg(figure)
     return figure
 
@@ -96,9 +157,11 @@ class Sheet:
     ----------
     ax : Axes
         Loses its own frame and ticks.
+    colours : Palette
     """
 
     ax: Axes
+    colours: Palette = LIGHT
 
     def __post_init__(self) -> None:
         self.ax.set_axis_off()
@@ -158,6 +221,32 @@ class Sheet:
             columnspacing=1.4,
             labelspacing=0.35,
         )
+
+
+def mark(shape: str, size: float, fill: str, edge: str, width: float = 0.6) -> dict[str, Any]:
+    """Look of a marker without a line, as keywords of `Axes.plot`; sizes in points."""
+    return {
+        "linestyle": "none",
+        "marker": shape,
+        "markersize": size,
+        "markerfacecolor": fill,
+        "markeredgecolor": edge,
+        "markeredgewidth": width,
+    }
+
+
+def wrapped(text: str, width: float) -> str:
+    """The text in lines no wider than so many mm; a longer word loses its middle."""
+    lines = [""]
+    for word in text.split():
+        longer = f"{lines[-1]} {word}".strip()
+        if text_width(longer) <= width:
+            lines[-1] = longer
+        elif lines[-1]:
+            lines.append(fitted(word, width))
+        else:
+            lines[-1] = fitted(word, width)
+    return "\n".join(lines)
 
 
 def text_width(text: str, size: float = TYPE) -> float:

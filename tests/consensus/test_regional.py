@@ -7,6 +7,7 @@ import pytest
 from sklearn.metrics import f1_score
 
 from seedaudit.consensus import chance, regional
+from seedaudit.consensus.agreement import class_counts
 
 INDEX = np.array([7, 2, 40, 9, 5])
 # Region 40 has no voxel, and label 3 is in no row.
@@ -114,14 +115,18 @@ def test_region_without_voxels(study):
 
 
 def test_stability_alone_is_the_column_of_the_table(study):
-    alone = regional.regional_stability(LABELS, INDEX, study[0])
+    alone = regional.regional_stability(LABELS, INDEX, class_counts(study[0]))
     np.testing.assert_array_equal(alone, table_of(study)["stability"])
-    assert np.isnan(regional.regional_stability(LABELS, INDEX, study[0][:1])).all()
-    assert regional.regional_stability(LABELS, np.array([], dtype=int), study[0]).shape == (0,)
+    assert np.isnan(regional.regional_stability(LABELS, INDEX, class_counts(study[0][:1]))).all()
+    assert regional.regional_stability(
+        LABELS, np.array([], dtype=int), class_counts(study[0])
+    ).shape == (0,)
 
 
 def test_label_zero_is_no_region(study):
-    assert np.isnan(regional.regional_stability(LABELS, np.array([0]), study[0])).all()
+    assert np.isnan(
+        regional.regional_stability(LABELS, np.array([0]), class_counts(study[0]))
+    ).all()
 
 
 def test_missing_effects_stay_missing(study):

@@ -11,13 +11,12 @@ import resource
 import shutil
 import tomllib
 from collections.abc import Callable, Iterator
-from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import given
 from hypothesis import strategies as st
 
 from seedaudit.cli import main
@@ -32,6 +31,19 @@ from seedaudit.inputs.volumes import first_volume, read_header, read_image, read
 from seedaudit.space.grid import VoxelSet
 from seedaudit.store import load_audit, save
 from seedaudit.study import Study
+from tests.faults.mutations import (
+    CELLS,
+    JUNK,
+    KEYS,
+    ODD_CELLS,
+    SNIPPETS,
+    VALUES,
+    edited,
+    edits,
+    fuzz,
+    tables,
+    write_cells,
+)
 from tests.inputs.images import SHAPE, run_values, write_nifti
 
 HEADERS, STREAMS, IMAGES, CONFOUNDS, RUN_TABLES, PEOPLE, EFFECTS = 500, 250, 100, 350, 250, 250, 150
@@ -40,18 +52,6 @@ CLAIMS, STUDY_FILES, MAPPINGS, COMMANDS, RESULTS = 250, 350, 300, 80, 120
 
 HEADROOM = 3 << 30
 """Bytes of address space that the process may still take: an absurd allocation fails at once."""
-
-
-def fuzz(cases: int) -> Callable[..., Any]:
-    """So many cases, always the same; each must end within seconds on a busy machine."""
-    return settings(
-        max_examples=cases,
-        derandomize=True,
-        database=None,
-        deadline=timedelta(seconds=6),
-        suppress_health_check=list(HealthCheck),
-        print_blob=False,
-    )
 
 
 def test_there_are_two_thousand_cases():
@@ -79,29 +79,6 @@ def outcome(step: Callable[..., Any], *arguments: Any) -> Any:
             for word in ("Traceback", "<class", " object at 0x", "line 1, in"):
                 assert word not in str(problem)
         return None
-
-
-# Bytes of a file, changed
-
-
-Edit = tuple[str, int, bytes]
-
-
-def edits(reach: int) -> st.SearchStrategy[list[Edit]]:
-    """Where (within the first bytes) and how a file is changed: put over, put in, cut."""
-    kind = st.sampled_from(["over", "over", "over", "in", "out"])
-    content = st.one_of(
-        st.binary(min_size=1, max_size=4),
-        st.sampled_from([b"\0" * 4, b"\xff" * 4, b"\x7f\xff", b"\x80\0", b"\0\0\x80\x7f"]),
-    )
-    return st.lists(st.tuples(kind, st.integers(0, reach - 1), content), min_size=1, max_size=4)
-
-
-def edited(content: bytes, changes: list[Edit]) -> bytes:
-    for kind, at, new in changes:
-        rest = {"over": at + len(new), "in": at, "out": at + len(new)}[kind]
-        content = content[:at] + (b"" if kind == "out" else new) + content[rest:]
-    return content
 
 
 @pytest.fixture(scope="module")
@@ -152,8 +129,12 @@ def test_gzip_streams_of_runs(runs, place, changes, cut, cut_it):
 
 
 @fuzz(IMAGES)
-@given(changes=edits(600), values=st.lists(st.sampled_from([0, 1, 2, -1, 0.5, np.nan, np.inf, 1e38]),
-                                           min_size=1, max_size=4))  # fmt: skip
+@given(
+    changes=edits(600),
+    values=st.lists(
+        st.sampled_from([0, 1, 2, -1, 0.5, np.nan, np.inf, 1e38]), min_size=1, max_size=4
+    ),
+)
 def test_masks_and_regions(place, changes, values):
     """A 3-D image as a mask and as labels, with a table beside it that is none of its own."""
     data = np.resize(np.array(values, np.float32), SHAPE)
@@ -169,56 +150,23 @@ def test_masks_and_regions(place, changes, values):
         outcome(read_regions, path, voxels)
 
 
-# Tables
-
-ODD_CELLS = [
-    "", "n/a", "NaN", "nan", "inf", "-inf", "1e999", "-1e400", "0x10", "1_000", "true", "=1+1",
-    '"', '""', '"a', "'", "\ufeff", "\x00", "\x1b[2J", "a" * 300, "\u0661", "1,5", " 1 ", "1e5",
-    "-0", "sub-01", "/", "..", "~", "~nobody/x", ".", "*", "[", "ü", "\u202e", "1" * 400,
-]  # fmt: skip
-CELLS = st.one_of(
-    st.sampled_from(ODD_CELLS),
-    st.floats(width=32).map(repr),
-    st.text(max_size=6).filter(lambda text: "\ud800" > text or "\udfff" < text),
-)
-
-
-def write_cells(path: Path, rows: list[list[str]], junk: bytes, at: int) -> Path:
-    content = "\n".join("\t".join(row) for row in rows).encode("utf-8", "replace")
-    at = at % (len(content) + 1)
-    path.write_bytes(content[:at] + junk + content[at:])
-    return path
-
-
-JUNK = st.one_of(st.just(b""), st.just(b""), st.binary(max_size=5),
-                 st.sampled_from([b"\t", b"\n", b'"', b"\0", b"\r", b"\xff", b"\n\n\t"]))  # fmt: skip
-
-
-@st.composite
-def tables(draw, names: list[str], rows: int) -> list[list[str]]:
-    """Rows below a header of known and unknown names, most cells sound."""
-    head = draw(st.lists(st.one_of(st.sampled_from(names), CELLS), min_size=1, max_size=6))
-    sound = [[f"{row}.{column}" for column in range(len(head))] for row in range(rows)]
-    for _ in range(draw(st.integers(0, 3))):
-        row = draw(st.integers(0, rows - 1))
-        sound[row][draw(st.integers(0, len(head) - 1))] = draw(CELLS)
-    keep = draw(st.integers(max(0, rows - 1), rows)) if draw(st.booleans()) else rows
-    return [head, *sound[:keep]]
-
-
 @fuzz(CONFOUNDS)
-@given(rows=tables(["trans_x", "trans_y_derivative1", "framewise_displacement", "csf"], 8),
-       junk=JUNK, at=st.integers(0, 500), censored=st.booleans(),
-       pattern=st.one_of(st.sampled_from(["*", "trans_*", "csf", "[", "[!a]*", "?"]), st.text(max_size=4)))
+@given(
+    rows=tables(["trans_x", "trans_y_derivative1", "framewise_displacement", "csf"], 8),
+    junk=JUNK,
+    at=st.integers(0, 500),
+    censored=st.booleans(),
+    pattern=st.one_of(
+        st.sampled_from(["*", "trans_*", "csf", "[", "[!a]*", "?"]), st.text(max_size=4)
+    ),
+)
 def test_confounds_tables(place, rows, junk, at, censored, pattern):
     path = write_cells(place / "confounds.tsv", rows, junk, at)
     found = outcome(read_confounds, path, [pattern], 8)
     over = outcome(censored_volumes, path, rows[0][0].strip(), 0.5, 1, 2, 8) if censored else None
     if found is not None:
         assert np.isfinite(found[0]).all()
-        basis = outcome(
-            lambda: nuisance_basis(8, drift=1, confounds=found[0], censored=over)
-        )
+        basis = outcome(lambda: nuisance_basis(8, drift=1, confounds=found[0], censored=over))
         assert basis is None or np.isfinite(basis).all()
 
 
@@ -231,20 +179,50 @@ def test_lists_of_runs(place, rows, junk, at, which, text):
     base = place / "runs"
     base.mkdir(exist_ok=True)
     write_cells(base / "runs.tsv", rows, junk, at)
-    ask = {"table": ("runs.tsv",), "pattern": (text,), "list": ([text, "x.nii"],),
+    ask = {"table": ("runs.tsv",), "pattern": (text,), "list": ([text, "x.nii", "/y.nii"],),
            "bids": (None,)}[which]  # fmt: skip
     more = (text, {text: text}) if which == "bids" else ()
     outcome(find_runs, *ask, base, *more)
 
 
-WORDS = ["age", "arm", "site", "1", "0", "+", "-", "*", ":", "~", "(", ")", "C(arm)", "center(age)",
-         "scale(age)", "C(", "`odd name`", "`", "{", "}", "|", "**2", "[", "np", ".", "I(age)"]  # fmt: skip
+WORDS = [
+    "age",
+    "arm",
+    "site",
+    "1",
+    "0",
+    "+",
+    "-",
+    "*",
+    ":",
+    "~",
+    "(",
+    ")",
+    "C(arm)",
+    "center(age)",
+    "scale(age)",
+    "C(",
+    "`odd name`",
+    "`",
+    "{",
+    "}",
+    "|",
+    "**2",
+    "[",
+    "np",
+    ".",
+    "I(age)",
+]
 
 
 @fuzz(PEOPLE)
-@given(rows=tables(["participant_id", "age", "arm", "odd name"], 5), junk=JUNK,
-       at=st.integers(0, 300), words=st.lists(st.one_of(st.sampled_from(WORDS), CELLS), max_size=6),
-       effect=st.one_of(st.none(), st.sampled_from(["age", "arm[a]", "arm[a] - arm[b]"]), CELLS))
+@given(
+    rows=tables(["participant_id", "age", "arm", "odd name"], 5),
+    junk=JUNK,
+    at=st.integers(0, 300),
+    words=st.lists(st.one_of(st.sampled_from(WORDS), CELLS), max_size=6),
+    effect=st.one_of(st.none(), st.sampled_from(["age", "arm[a]", "arm[a] - arm[b]"]), CELLS),
+)
 def test_models_and_people(place, rows, junk, at, words, effect):
     for number, row in enumerate(rows[1:], 1):
         row[0] = f"sub-{number}" if len(row) > 1 else row[0]
@@ -295,42 +273,28 @@ def test_claims_tables(place, rows, junk, at):
         assert claim.at is None or (np.isfinite(claim.at).all() and claim.radius > 0)
 
 
-# Study files
-
-
 @pytest.fixture(scope="module")
 def study_text(sound) -> bytes:
     return (sound / "study.toml").read_bytes()
 
 
-SNIPPETS = st.sampled_from([
-    b"[", b"]", b"[[", b"=", b'"', b"'''", b"\n", b"{", b"}", b"#", b"nan", b"inf", b"-", b"1e400",
-    b"9" * 30, b"0x1F", b"true", b"1979-05-27", b"[[seed]]\n", b"[data]\n", b"\xff", b"\0", b".",
-    b'"/"', b"''", b"[1, [2]]", b"{a = 1}", b"~", b"\\u0000", b"\xef\xbb\xbf",
-])  # fmt: skip
-
-
 @fuzz(STUDY_FILES)
-@given(changes=st.lists(
-    st.tuples(st.sampled_from(["over", "in", "out"]), st.integers(0, 700),
-              st.one_of(SNIPPETS, st.binary(min_size=1, max_size=3))), min_size=1, max_size=3))
+@given(
+    changes=st.lists(
+        st.tuples(
+            st.sampled_from(["over", "in", "out"]),
+            st.integers(0, 700),
+            st.one_of(SNIPPETS, st.binary(min_size=1, max_size=3)),
+        ),
+        min_size=1,
+        max_size=3,
+    )
+)
 def test_study_files(sound, study_text, changes):
     """Read, checked and shown; those that hold lead to files of the sound study."""
     path = sound.parent / "fuzzed.toml"
     path.write_bytes(edited(study_text, changes))
     outcome(Study.load, path)
-
-
-KEYS = st.one_of(st.sampled_from([
-    "data", "seed", "placements", "group", "threshold", "cleaning", "consensus", "claims", "runs",
-    "at", "radius", "name", "mask", "model", "rule", "level", "within", "draw", "count", "select",
-]), st.text(max_size=4))  # fmt: skip
-VALUES = st.recursive(
-    st.one_of(st.none(), st.booleans(), st.integers(), st.floats(), st.text(max_size=6),
-              st.sampled_from(["fdr", "ball", "normal", "runs.tsv", "/", "..", "\0", "a" * 300])),
-    lambda inner: st.one_of(st.lists(inner, max_size=3), st.dictionaries(KEYS, inner, max_size=3)),
-    max_leaves=6,
-)  # fmt: skip
 
 
 @fuzz(MAPPINGS)

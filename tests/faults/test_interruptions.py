@@ -23,10 +23,14 @@ from tests.small_study import write_small_study
 
 ROOT = Path(__file__).resolve().parents[2]
 
-# A run whose participants take long enough to be killed between and within them, and that keeps
-# its progress after each of them.
-SLOW_RUN = """
-import sys, time
+# A process that has loaded everything and forks a run for each line of words that it reads: loading
+# takes longer than a small run. Participants take long enough to be killed between and within
+# them, and progress is kept after each of them.
+FORKING_RUNS = """
+import json, os, sys, time
+import seedaudit.auditing, seedaudit.overview, seedaudit.progress, seedaudit.report.explorer
+import seedaudit.report.figures, seedaudit.store
+from seedaudit.cli import main
 from seedaudit.sweep import checkpoint, fold
 whole = fold.sweep_participant
 def slow(*arguments):
@@ -34,9 +38,82 @@ def slow(*arguments):
     return whole(*arguments)
 fold.sweep_participant = slow
 checkpoint.Checkpoint.__init__.__kwdefaults__["every"] = 0.0
-from seedaudit.cli import main
-sys.exit(main(sys.argv[1:]))
+for line in sys.stdin:
+    asked = json.loads(line)
+    if "end_of" in asked:
+        print(os.waitstatus_to_exitcode(os.waitpid(asked["end_of"], 0)[1]), flush=True)
+        continue
+    child = os.fork()
+    if child:
+        print(child, flush=True)
+        continue
+    os.chdir(asked["folder"])
+    for number, name in enumerate((os.devnull, asked["out"], asked["err"])):
+        os.dup2(os.open(name, os.O_RDWR | os.O_CREAT | os.O_TRUNC), number)
+    code = main(asked["words"])
+    sys.stdout.flush()
+    os._exit(code)
 """
+
+
+class Runs:
+    """Starts runs as processes of their own, and tells how they ended."""
+
+    def __init__(self) -> None:
+        self._parent = subprocess.Popen(
+            [sys.executable, "-c", FORKING_RUNS], stdin=subprocess.PIPE, stdout=subprocess.PIPE,
+            text=True, env={**os.environ, "PYTHONPATH": str(ROOT)},
+        )  # fmt: skip
+
+    def ask(self, **words: object) -> int:
+        self._parent.stdin.write(json.dumps(words) + "\n")
+        self._parent.stdin.flush()
+        return int(self._parent.stdout.readline())
+
+    def close(self) -> None:
+        self._parent.stdin.close()
+        self._parent.wait(timeout=30)
+
+
+RUNS: list[Runs] = []
+
+
+class Process:
+    """One run, with what of a `Popen` is needed here."""
+
+    def __init__(self, words: list[str], told: Path) -> None:
+        self.out, self.err = (told.with_suffix(f".{kind}") for kind in ("out", "err"))
+        self.pid = RUNS[0].ask(
+            words=words, out=str(self.out), err=str(self.err), folder=str(told.parent)
+        )
+        self.returncode: int | None = None
+
+    def poll(self) -> int | None:
+        """None while it is at work; a dead one that nobody waited for counts as ended."""
+        if self.returncode is None:
+            state = Path(f"/proc/{self.pid}/stat").read_text().rpartition(")")[2].split()[0]
+            if state != "Z":
+                return None
+            self.returncode = RUNS[0].ask(end_of=self.pid)
+        return self.returncode
+
+    def send_signal(self, number: int) -> None:
+        if self.poll() is None:
+            os.kill(self.pid, number)
+
+    def communicate(self, timeout: float = 60) -> tuple[str, str]:
+        limit = time.monotonic() + timeout
+        while self.poll() is None:
+            assert time.monotonic() < limit, "still at work"
+            time.sleep(0.002)
+        return self.out.read_text(), self.err.read_text()
+
+
+@pytest.fixture(scope="module", autouse=True)
+def runs():
+    RUNS.append(Runs())
+    yield
+    RUNS.pop().close()
 
 
 @pytest.fixture(scope="module")
@@ -53,13 +130,10 @@ def undisturbed(study):
     return result_bytes(study.parent / run_to_end(study, "undisturbed"))
 
 
-def start(study: Path, out: str, *options: str) -> subprocess.Popen:
-    return subprocess.Popen(
-        [sys.executable, "-c", SLOW_RUN, "run", str(study), "--out", str(study.parent / out),
-         "--workers", "2", *options],
-        cwd=study.parent, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
-        env={**os.environ, "PYTHONPATH": str(ROOT)},
-    )  # fmt: skip
+def start(study: Path, out: str, *options: str) -> Process:
+    folder = study.parent
+    words = ["run", str(study), "--out", str(folder / out), "--workers", "2", *options]
+    return Process(words, folder / f"{out}-{time.monotonic_ns()}")
 
 
 def run_to_end(study: Path, out: str, *options: str, code: int = 0) -> str:
@@ -82,11 +156,11 @@ def progress_of(study: Path, out: str) -> Path:
     return study.parent / f".{out}.progress"
 
 
-def wait_for_progress(study: Path, out: str, process: subprocess.Popen) -> None:
+def wait_for_progress(study: Path, out: str, process: Process) -> None:
     """Until the first participants are on disk, so that the kill has something to spoil."""
     limit = time.monotonic() + 60
     while not list(progress_of(study, out).glob("fold-*.npz")):
-        assert process.poll() is None, process.stderr.read()
+        assert process.poll() is None, process.err.read_text()
         assert time.monotonic() < limit
         time.sleep(0.005)
 
@@ -251,12 +325,13 @@ def test_a_second_command_into_one_folder_refuses(study, undisturbed):
     out = "taken"
     first = start(study, out)
     wait_for_progress(study, out, first)
+    first.send_signal(signal.SIGSTOP)  # so that it is still at work when the second comes
     second = start(study, out)
     told, messages = second.communicate(timeout=60)
+    first.send_signal(signal.SIGCONT)
     assert (second.returncode, told) == (2, "")
     assert "another run is at work on this output" in messages
     assert "one run at a time" in messages
-    assert first.poll() is None, "the first run must still be at work when the second is refused"
     _, messages = first.communicate(timeout=60)
     assert first.returncode == 0, messages
     assert result_bytes(study.parent / out) == undisturbed

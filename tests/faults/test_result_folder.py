@@ -139,7 +139,7 @@ TRICKS: dict[str, tuple[Spoil, str]] = {
     "a map of another shape": (other_shape, "the shape is"),
     "a map of doubles": (doubles, "values of type float64"),
     "no image": (written("maps/safe.nii.gz", b"hello"), "not a NIfTI"),
-    "half a map": (lambda f: sparse("maps/effect_mean.nii.gz", 900)(f), "ends early|cannot be read"),
+    "half a map": (sparse("maps/effect_mean.nii.gz", 900), "ends early|cannot be read"),
     "pickle for a map": (written("maps/safe.nii.gz", pickle.dumps({"a": 1})), "not a NIfTI"),
     "a missing map": (lambda f: (f / "maps/safe.nii.gz").unlink(), "safe.nii.gz"),
     "a missing table": (lambda f: (f / "tables/pairs.tsv").unlink(), "pairs.tsv"),
