@@ -72,6 +72,9 @@ def _shared(command: Callable[..., Any]) -> Callable[..., Any]:
         click.option("--within", type=float, metavar="MM", help="Cloud radius (default 6 mm)."),
         click.option("--count", type=int, metavar="N", help="Placements to draw (default 100)."),
         click.option(
+            "--steadier", type=float, metavar="MM", help="Look for a steadier seed so far away."
+        ),
+        click.option(
             "--space",
             type=click.Choice(["mni", "talairach", "native"]),
             help="Space of the seed (default mni).",
@@ -126,6 +129,7 @@ def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool
     After an interruption the same command goes on where it was.
     """
     from seedaudit.auditing import audit, open_checkpoint
+    from seedaudit.overview import seeds_text
     from seedaudit.progress import LiveProgress, PlainProgress
 
     plan, folder, _ = _ready(asked, out, workers, memory, replace=replace)
@@ -151,6 +155,8 @@ def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool
     else:
         for seed in result.seeds:
             _print_seed(seed.summary, seed.table("regions"))
+        if result.between is not None:
+            click.echo(f"\nSeeds against each other\n{seeds_text(result.between)}")
         click.echo(f"\nResult folder: {folder}\n{CAUTION}")
     return SET_ASIDE if result.provenance["group"]["set_aside"] else DONE
 
@@ -282,6 +288,8 @@ def _study(asked: dict[str, Any]) -> Any:
         "seed": {"at": given["seed"]},
         "placements": {},
     }
+    if "steadier" in given:
+        content["steadier"] = {"search": given["steadier"]}
     for key, section in {
         "mask": "data",
         "regions": "data",
@@ -349,6 +357,8 @@ def _print_seed(summary: Any, regions: Any) -> None:
     click.echo(f"\n{summary['sentence']}\n")
     if len(regions):
         click.echo(regions_text(regions))
+    if (search := summary.get("steadier")) is not None:
+        click.echo(f"\n{search['sentence']}")
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -48,18 +48,13 @@ def conclude_seed(
     folds = [_of_placements(fold, start + kept_rows) for fold in swept.folds]
     controls = [_of_placements(fold, start + control_rows) for fold in swept.folds]
     means = np.array([record.kept[number].target_means[kept_rows] for record in group.used])
-    regions, grid = plan.regions, plan.voxels.grid
-    labels = np.zeros(len(plan.voxels), np.int32) if regions is None else regions.labels
-    index = np.zeros(0, int) if regions is None else regions.index
-    space = Space(plan.voxels.ijk, grid.shape, grid.voxel_sizes, seed.analysis, labels, index)
+    space = _space(plan, seed)
     reported_z = _reported_maps(group, number, seed.analysis)
-    settings: dict[str, Any] = {
-        "rearrangements": plan.study.threshold.rearrangements,
-        "random_state": plan.study.placements.random_state,
-    }
     rule, critical = settled_rule(
-        threshold_rule(plan), reported_z, group.design.matrix, group.design.contrast, **settings
-    )
+        threshold_rule(plan), reported_z, group.design.matrix, group.design.contrast,
+        rearrangements=plan.study.threshold.rearrangements,
+        random_state=plan.study.placements.random_state,
+    )  # fmt: skip
     found = conclude(
         folds,
         swept.fold_sizes,
@@ -77,10 +72,9 @@ def conclude_seed(
             found, ceiling=_time_ceiling(plan, seed, found, space, kept_rows, control_rows)
         )
     shifts = placements[["dx", "dy", "dz"]].to_numpy()[seed.used[kept_rows]]
-    distance = np.linalg.norm(shifts, axis=1)
     claims = judge_claims(
-        plan, seed, means[:, :, plan.n_regions :], distance, group.design, found, folds,
-        threshold_rule(plan), reported_z,
+        plan, seed, means[:, :, plan.n_regions :], np.linalg.norm(shifts, axis=1), group.design,
+        found, folds, threshold_rule(plan), reported_z,
     )  # fmt: skip
     all_found = Found(
         seed, placements, kept_rows, control_rows, found, claims,
@@ -92,9 +86,17 @@ def conclude_seed(
         seed.seed.name,
         read_only({**numbers, "sentence": verdict(numbers)}),
         read_only(made),
-        read_only(_maps(plan, found, labels, anatomy)),
+        read_only(_maps(plan, found, space.labels, anatomy)),
         found.placement_maps,
     )
+
+
+def _space(plan: Plan, seed: SeedPlan) -> Space:
+    """Where the voxels are, with regions or without any."""
+    regions, grid = plan.regions, plan.voxels.grid
+    labels = np.zeros(len(plan.voxels), np.int32) if regions is None else regions.labels
+    index = np.zeros(0, int) if regions is None else regions.index
+    return Space(plan.voxels.ijk, grid.shape, grid.voxel_sizes, seed.analysis, labels, index)
 
 
 def _reported_maps(

@@ -248,7 +248,10 @@ COLUMNS_WHERE_ASKED: dict[str, dict[str, tuple[str, str]]] = {
         "y": ("centre of the candidate, posterior to anterior", MM),
         "z": ("centre of the candidate, inferior to superior", MM),
         "moved_mm": ("distance from the reported centre", MM),
-        "n_neighbours": ("lattice points within the placement error that it is compared with", COUNT),
+        "n_neighbours": (
+            "lattice points within the placement error that it is compared with",
+            COUNT,
+        ),
         "stability_in": (
             "mean spatial Pearson correlation of the candidate's map with the maps of its "
             "neighbours, in all participants; a map is the mean z over participants, never the "
@@ -271,7 +274,10 @@ COLUMNS_WHERE_ASKED: dict[str, dict[str, tuple[str, str]]] = {
             "spatial Pearson correlation with the map of the reported seed, in all participants",
             "-1 to 1",
         ),
-        "keeps_identity": ("true: as similar to the reported map as was asked (keep_similarity)", ""),
+        "keeps_identity": (
+            "true: as similar to the reported map as was asked (keep_similarity)",
+            "",
+        ),
         "share_chosen": ("share of the choices, one in each half, that fell on it", SHARE),
         "on_front": ("true: no candidate that moves as little is as steady, or steadier", ""),
         "recommended": ("true: where the seed should be; the first row means keep it", ""),

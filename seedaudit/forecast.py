@@ -52,6 +52,8 @@ def forecast(plan: Plan, workers: int) -> Forecast:
     layers = p + 1 + (len(plan.participants) == 1)
     digits = np.dtype(plan.precision).itemsize
     one_state = n_voxels * (digits * layers * n_placements + 8 * p * p + 4)
+    searched = [seed.search for seed in plan.seeds if seed.search is not None]
+    search_state = sum(8.0 * len(one.shifts) * len(one.targets) for one in searched)
     series = max(4 * n_voxels * sum(h.n_volumes for h in own) for own in runs)
     block = 8 * BLOCK * (n_placements * 4 + max(h.n_volumes for own in runs for h in own))
     sweeping = workers * (series + block)
@@ -59,16 +61,24 @@ def forecast(plan: Plan, workers: int) -> Forecast:
     # effects, statistics and classes of a cloud, its parts for pairs and low rank, and counts of
     # classes with each fold left out, for every worker
     concluding = n_voxels * (18 * largest + 12 * n_folds * workers + 150)
-    memory = BASE_MEMORY + n_folds * one_state + max(sweeping, concluding)
+    # float32 copies of a search's sums, of all folds and of one block of candidates
+    judging = n_folds * max((4.0 * len(s.shifts) * len(s.targets) for s in searched), default=0)
+    states = n_folds * (one_state + search_state)
+    memory = BASE_MEMORY + states + max(sweeping, concluding, 2 * judging)
 
     stored = sum(float(np.prod(h.grid.shape)) * h.n_volumes * h.dtype.itemsize
                  for own in runs for h in own)  # fmt: skip
     products = 2.0 * n_placements * n_voxels * sum(h.n_volumes for own in runs for h in own)
+    products += sum(2.0 * len(one.shifts) * len(one.targets) * h.n_volumes
+                    for one in searched for own in runs for h in own)  # fmt: skip
+    pairs = sum(float(one.around().counts.sum()) * len(one.targets) for one in searched)
     estimates = n_placements * n_voxels * (n_folds + 1)
     seconds = (stored / READ_RATE + products / PRODUCT_RATE) / workers + estimates / ESTIMATE_RATE
+    # every pair of a candidate and its neighbour, for every two folds, in blocks
+    seconds += 4 * n_folds**2 * pairs / PRODUCT_RATE
     disk = len(plan.seeds) * (2.0 * len(MAPS) * n_voxels + 60.0 * n_placements**2 / 2) + 2e6
     # one fold is written anew while its last state is still there
-    progress = (n_folds + 1) * one_state
+    progress = (n_folds + 1) * (one_state + search_state)
     return Forecast(seconds, memory, disk, progress)
 
 

@@ -11,6 +11,7 @@ import pandas as pd
 from seedaudit.errors import counted, printable
 from seedaudit.forecast import Forecast
 from seedaudit.plan import Plan
+from seedaudit.searching import PlannedSearch
 
 
 def overview(plan: Plan, needs: Forecast) -> dict[str, Any]:
@@ -67,6 +68,19 @@ def _seed(plan: Plan, number: int) -> dict[str, Any]:
         "least_coverage": round(float(table["coverage"].min()), 3),
         "exclude_margin_mm": round(float(seed.margin), 2),
         "analysis_voxels": int(seed.analysis.sum()),
+        "search": None if seed.search is None else _search(seed.search),
+    }
+
+
+def _search(search: PlannedSearch) -> dict[str, Any]:
+    return {
+        "search_mm": search.search,
+        "step_mm": search.step,
+        "within_mm": round(search.within, 2),
+        "candidates": len(search.around().candidates),
+        "spheres": len(search.shifts),
+        "target_voxels": len(search.targets),
+        "voxels_outside": search.population,
     }
 
 
@@ -133,6 +147,9 @@ def overview_text(found: dict[str, Any]) -> str:
             ),
         ),
     ]
+    searched = [(seed["name"], seed["search"]) for seed in found["seeds"] if seed["search"]]
+    if searched:
+        parts.append("\nSearch for a steadier seed\n" + _search_text(searched))
     if found["regions"]:
         rows = ([r["region"], r["mask_voxels"], r["analysis_voxels"]] for r in found["regions"])
         head = ["region", "mask voxels", "outside the first seed's cloud"]
@@ -150,6 +167,42 @@ def overview_text(found: dict[str, Any]) -> str:
         f"{needs['memory_gb']:g} GB of memory, {needs['disk_mb']:g} MB of disk\nA run would start."
     )
     return "\n".join(parts)
+
+
+def _search_text(searched: Sequence[tuple[str, dict[str, Any]]]) -> str:
+    head = ["seed", "search mm", "step mm", "neighbours mm", "candidates", "spheres", "voxels"]
+    return aligned(
+        head,
+        (
+            [
+                name,
+                told["search_mm"],
+                told["step_mm"],
+                told["within_mm"],
+                told["candidates"],
+                told["spheres"],
+                f"{told['target_voxels']} of {told['voxels_outside']}",
+            ]
+            for name, told in searched
+        ),
+    )
+
+
+def seeds_text(between: pd.DataFrame) -> str:
+    """The comparison of several seeds as aligned text."""
+    return aligned(
+        ["seeds", "apart mm", "relative to ceiling", "95 % interval", "interchangeable"],
+        (
+            [
+                f"{row.seed_a}, {row.seed_b}",
+                number(row.distance_mm, 1),
+                number(row.relative),
+                f"{number(row.relative_low)} to {number(row.relative_high)}",
+                {True: "yes", False: "no"}.get(row.interchangeable, "cannot be told"),
+            ]
+            for row in between.itertuples()
+        ),
+    )
 
 
 def regions_text(regions: pd.DataFrame) -> str:

@@ -51,7 +51,9 @@ def compare_seeds(
     ]
     found = between_seeds(maps, _halves(plan, group, folds, sizes, rows[0]), sizes)
     names = np.array([seed.name for seed in seeds], object)
-    return frozen_table("seeds", {"seed_a": names[found["a"]], "seed_b": names[found["b"]], **found})
+    return frozen_table(
+        "seeds", {"seed_a": names[found["a"]], "seed_b": names[found["b"]], **found}
+    )
 
 
 def _halves(

@@ -31,6 +31,7 @@ from seedaudit.sweep.schedule import Swept
 from seedaudit.tabulation import json_number
 
 _SLACK = 1e-6  # mm
+_CUBE = 3  # steps
 
 
 def with_search(
@@ -62,8 +63,11 @@ def with_search(
     if sums.shape[2] < 3:
         return _without(audit, "hardly any voxel that maps are compared on is there in everybody")
     shifts = seed.search.shifts[around.candidates]
+    # cubes of candidates, which have most of their neighbours in common
+    cubes = np.floor(shifts / (_CUBE * seed.search.step) + 0.5)
+    blocks = np.unique(cubes, axis=0, return_inverse=True)[1].ravel()
     found = steadier_seed(
-        partial(correlation_scores, fold_products(sums, around)),
+        partial(correlation_scores, fold_products(sums, around, blocks)),
         np.linalg.norm(shifts, axis=1),
         sizes,
         keep_similarity=plan.study.steadier.keep_similarity,
@@ -76,9 +80,7 @@ def with_search(
         "n_lost_in_data": int((~usable).sum()),
     }
     volume = _score_volume(plan.voxels.grid, places, found, seed.search.step)
-    image = map_image(
-        "steadier_score", volume, plan.voxels.grid.affine, plan.first_run.space_code
-    )
+    image = map_image("steadier_score", volume, plan.voxels.grid.affine, plan.first_run.space_code)
     return _extended(audit, told, _columns(found, places, around), image)
 
 
@@ -92,9 +94,7 @@ def _covered(
     return np.asarray(usable)
 
 
-def _everybodys(
-    swept: Swept, group: GroupState, which: int
-) -> tuple[FoldSums, NDArray[np.int_]]:
+def _everybodys(swept: Swept, group: GroupState, which: int) -> tuple[FoldSums, NDArray[np.int_]]:
     """Sums of z of each fold (G, M, B) over the target voxels that every participant has."""
     filled = np.flatnonzero(swept.fold_sizes)
     parts = [swept.searches[fold][which] for fold in filled]

@@ -36,7 +36,7 @@ from seedaudit.consensus.regional import region_rows, region_table, regional_sta
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
 from seedaudit.inference.glm import solve_model
 from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier
-from seedaudit.inference.placementwise import placement_maps
+from seedaudit.inference.placementwise import WithoutFolds, placement_maps
 from seedaudit.sweep.moments import Moments, merged
 
 DENSITIES = np.arange(1, 51) / 100
@@ -180,22 +180,8 @@ def conclude(
         folds, fold_sizes, voxels, design.contrast, design.least_count, classes_of,
         complete[voxels], workers=workers,
     )  # fmt: skip
-    labels = space.labels[voxels]
     counts = class_counts(maps.classes[1:])
-    stability = gwet_ac1(counts)
     sizes = [size for size in fold_sizes if size]
-    whole = np.array([gwet_ac1(left) for left in without.counts])
-    low, high = delete_fold_interval(np.array(stability), whole, sizes)
-    regional = delete_fold_interval(
-        regional_stability(labels, space.index, counts),
-        np.array([regional_stability(labels, space.index, left) for left in without.counts]),
-        sizes,
-    )
-    effects = region_effects(maps.effects, labels, space.index)
-    interval = bootstrap_interval(
-        design.matrix, region_means[:, 0], design.contrast, design.strata,
-        random_state=random_state,
-    )  # fmt: skip
     top = ceiling(
         folds,
         fold_sizes,
@@ -209,20 +195,20 @@ def conclude(
         random_state=random_state,
         workers=workers,
     )
+    stability = np.array([gwet_ac1(left) for left in (counts, *without.counts)])
+    low, high = delete_fold_interval(stability[0], stability[1:], sizes)
+    regions = _regions(
+        maps, counts, without, sizes, space.labels[voxels], space.index, design, region_means, top,
+        safe, random_state,
+    )  # fmt: skip
     return CloudConsensus(
         voxels,
         _maps(maps, counts, safe),
         _similarity(maps),
         _pairs(maps),
         _thresholds(maps),
-        region_table(
-            labels, space.index, maps.classes[1:], maps.classes[0], effects[1:], effects[0],
-            *interval, *regional, safe,
-            ceiling=None if top is None else top.same["ac1"][0, 1:],
-            ceiling_relative=None if top is None else top.relative["ac1"][0, 1:],
-            placement_share=placement_share(region_means[:, 1:], design.matrix, design.contrast),
-        ),
-        (float(stability), float(low), float(high)),
+        regions,
+        (float(stability[0]), float(low), float(high)),
         float(fleiss_kappa(counts)),
         float(np.nanmin(maps.df)) if voxels.any() else float("nan"),
         low_rank(maps.effects, tolerance=MAP_TOLERANCE, most_bytes=MAP_BYTES),
@@ -230,6 +216,36 @@ def conclude(
         top,
         _controls(controls, design, maps, voxels, classes_of),
         _smoothness(folds, fold_sizes, design, space, complete),
+    )
+
+
+def _regions(
+    maps: GroupMaps,
+    counts: NDArray[np.int32],
+    without: WithoutFolds,
+    sizes: Sequence[int],
+    labels: NDArray[np.int32],
+    index: NDArray[np.int_],
+    design: GroupDesign,
+    region_means: NDArray[np.float64],
+    top: Ceiling | None,
+    safe: float,
+    random_state: int,
+) -> Table:
+    stability = np.array(
+        [regional_stability(labels, index, left) for left in (counts, *without.counts)]
+    )
+    effects = region_effects(maps.effects, labels, index)
+    interval = bootstrap_interval(
+        design.matrix, region_means[:, 0], design.contrast, design.strata,
+        random_state=random_state,
+    )  # fmt: skip
+    return region_table(
+        labels, index, maps.classes[1:], maps.classes[0], effects[1:], effects[0], *interval,
+        *delete_fold_interval(stability[0], stability[1:], sizes), safe,
+        ceiling=None if top is None else top.same["ac1"][0, 1:],
+        ceiling_relative=None if top is None else top.relative["ac1"][0, 1:],
+        placement_share=placement_share(region_means[:, 1:], design.matrix, design.contrast),
     )  # fmt: skip
 
 

@@ -18,6 +18,8 @@ CAUTION = (
 def write_report(audit: Audit, folder: Path) -> None:
     """Write the explorer, the figure, its caption and the methods text of every seed.
 
+    With several seeds, a figure that compares them stands at the top.
+
     Parameters
     ----------
     audit : Audit
@@ -28,13 +30,14 @@ def write_report(audit: Audit, folder: Path) -> None:
     from seedaudit.report.explorer import write_explorer
     from seedaudit.report.figures import save_figure
     from seedaudit.report.methods import plain
+    from seedaudit.report.seeds_figure import save_seeds_figure
     from seedaudit.report.words import alternative_text, caption, methods_text
     from seedaudit.store import seed_folder
 
     for seed in audit.seeds:
         own = seed_folder(audit, folder, seed.name)
         own.mkdir(parents=True, exist_ok=True)
-        write_explorer(seed, audit, own)
+        write_explorer(seed, audit, own, between=audit.between)
         save_figure(seed, own)
         texts = {
             "figure_caption.md": (
@@ -45,3 +48,5 @@ def write_report(audit: Audit, folder: Path) -> None:
         }
         for name, text in texts.items():
             (own / name).write_text(text, encoding="utf-8", newline="\n")
+    if audit.between is not None:
+        save_seeds_figure(audit.between, folder)

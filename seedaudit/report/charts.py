@@ -1,4 +1,4 @@
-"""The panels without anatomy: similarity against shift distance, and the network regions."""
+"""The panels in rows: the network regions, and the claims of a paper."""
 
 from __future__ import annotations
 
@@ -9,24 +9,25 @@ import pandas as pd
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
-from matplotlib.patches import Patch
+from matplotlib.patches import Patch, Rectangle
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from seedaudit.report.style import (
-    INK,
+    LIGHT,
     LINE,
     MM_PER_INCH,
-    PALE,
-    SOFT,
     TITLE,
     TYPE,
+    Palette,
     Sheet,
-    crowding,
     fitted,
+    mark,
     plain_axes,
     text_width,
+    wrapped,
 )
+from seedaudit.report.words import percent
 from seedaudit.results import SeedAudit
 
 FloatArray = NDArray[np.float64]
@@ -36,63 +37,9 @@ ROW = 2.65
 ROW_AIRY = 4.2
 MOST_REGIONS = 40
 """So many rows fit on one page beside the other panels."""
-REGION_HEAD, REGION_FOOT = TITLE + LINE + 1.0, 7.5 + 2 * LINE
-DECAY_FOOT = 9.0 + 3 * LINE
-
-MEASURES: dict[str, tuple[str, dict[str, Any], dict[str, Any]]] = {
-    "dice_positive": (
-        "Dice +",
-        {"marker": "o", "markerfacecolor": "#e59a4c", "markeredgecolor": "#8f3f00"},
-        {"color": "#8f3f00", "linestyle": "solid"},
-    ),
-    "dice_negative": (
-        "Dice −",
-        {"marker": "v", "markerfacecolor": "none", "markeredgecolor": "#1f2f7a"},
-        {"color": "#1f2f7a", "linestyle": "dashed"},
-    ),
-    "spatial_r": (
-        "spatial r",
-        {"marker": "x", "markeredgecolor": SOFT},
-        {"color": SOFT, "linestyle": "dotted"},
-    ),
-}
-"""Column of the similarity table: label, look of its points, look of its medians."""
+HEAD, FOOT = TITLE + LINE + 1.0, 6.5
 
 BINS = 6
-
-
-def decay(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
-    """Panel of decay: similarity of each drawn placement against its shift, and binned medians."""
-    sheet.title("Similarity to the reported placement", letter)
-    table = seed.tables["similarity"]
-    drawn = table[table["placement"] != 0]
-    distance = drawn["distance"].to_numpy(dtype=float)
-    ax = sheet.place(8.5, TITLE + 1, sheet.width - 9.5, sheet.height - TITLE - 1 - DECAY_FOOT)
-    plain_axes(ax)
-    shrink, many = crowding(len(drawn))
-    handles: list[Artist] = []
-    lowest = 0.0
-    for name, (label, points, line) in MEASURES.items():
-        values = drawn[name].to_numpy(dtype=float)
-        defined = np.isfinite(values)
-        points = {"linestyle": "none", "markersize": 3, "markeredgewidth": 0.6, **points}
-        line = {"linewidth": 1.3, **line}
-        size = {"markersize": 3 * shrink, "markeredgewidth": 0.6 * shrink, "alpha": 0.75}
-        ax.plot(distance[defined], values[defined], **points | size, rasterized=many)
-        medians = binned_medians(distance[defined], values[defined])
-        ax.plot(*medians, color="white", linewidth=2.6, zorder=3)
-        ax.plot(*medians, **line, zorder=4)
-        lowest = min(lowest, values[defined].min(initial=0.0))
-        missing = int((~defined).sum())
-        note = f" ({missing} of {len(drawn)} undefined)" if missing else ""
-        handles.append(Line2D([], [], **points | line, label=f"{label}{note}"))
-    ax.set_xlim(0, max(float(seed.summary["within_mm"]), distance.max(initial=0.0)) * 1.04)
-    ax.set_ylim(np.floor(lowest * 10) / 10 - (0.02 if lowest == 0 else 0), 1.03)
-    ax.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
-    ax.yaxis.set_major_locator(MaxNLocator(5))
-    ax.set_xlabel("shift distance, mm", fontsize=TYPE, labelpad=1.5)
-    ax.set_ylabel("similarity", fontsize=TYPE, labelpad=2)
-    sheet.legend(0, sheet.height - 3 * LINE, handles, 1)
 
 
 def binned_medians(distance: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -119,40 +66,48 @@ def binned_medians(distance: FloatArray, values: FloatArray) -> tuple[FloatArray
     return frame["distance"].to_numpy(), frame["value"].to_numpy()
 
 
+def legend_rows(entries: int, columns: int) -> int:
+    """Lines that so many entries of a legend take."""
+    return -(-entries // columns)
+
+
 def regions(seed: SeedAudit, sheet: Sheet, letter: str = "", most: int = MOST_REGIONS) -> None:
     """Panel of regions: effect and range, stability score, and state, a row for each."""
     table = seed.tables["regions"]
     sheet.title("Network regions", letter)
     if not len(table):
-        sheet.write(0, TITLE, "The study named no regions, so there is nothing to show here.")
+        reason = "The study named no regions, so there is nothing to show here."
+        sheet.write(0, TITLE, wrapped(reason, sheet.width), linespacing=1.25)
         return
-    room = sheet.height - REGION_HEAD - REGION_FOOT
+    colours, columns = sheet.colours, _legend_columns(sheet.width)
+    handles = _region_legend(table, colours)
+    room = sheet.height - HEAD - FOOT - legend_rows(len(handles), columns) * LINE
     shown = shown_regions(table, min(most, max(1, int(room / ROW + 1e-6))))
     left = _RegionColumns(sheet)
     height = min(room, ROW_AIRY * len(shown))
     rows = np.arange(len(shown))
-    effect = sheet.place(left.effect, REGION_HEAD, left.effect_width, height)
-    stability = sheet.place(left.stability, REGION_HEAD, left.stability_width, height)
+    effect = sheet.place(left.effect, HEAD, left.effect_width, height)
+    stability = sheet.place(left.stability, HEAD, left.stability_width, height)
     for ax in (effect, stability):
         plain_axes(ax)
         ax.set_ylim(len(shown) - 0.5, -0.5)
         ax.set_yticks([])
         ax.spines["left"].set_visible(False)
-    _effects(effect, shown, rows)
-    _stabilities(stability, shown, rows)
+    _effects(effect, shown, rows, colours)
+    _stabilities(stability, shown, rows, colours)
     pitch = height / len(shown)
     for row, (name, state) in enumerate(zip(shown["region"], shown["state"], strict=True)):
-        middle = REGION_HEAD + (row + 0.5) * pitch
+        middle = HEAD + (row + 0.5) * pitch
         sheet.write(0, middle, fitted(str(name), left.effect - 3), va="center_baseline")
         weight = "bold" if state in ("contested", "lost", "gained") else "normal"
         sheet.write(left.state, middle, str(state), va="center_baseline", weight=weight)
-    head = REGION_HEAD - LINE - 0.4
-    fewer = f" ({len(shown)} of {len(table)}, the least stable)" if len(shown) < len(table) else ""
-    sheet.write(0, head, f"region{fewer}")
+    head = HEAD - LINE - 0.4
+    fewer = f": {len(shown)} of {len(table)}, the least stable" if len(shown) < len(table) else ""
+    sheet.write(0, head, fitted(f"region{fewer}", left.effect - 2))
     sheet.write(left.effect, head, "effect, Fisher z")
-    sheet.write(left.stability, head, "stability score")
+    sheet.write(left.stability, head, "stability")
     sheet.write(left.state, head, "state")
-    sheet.legend(0, REGION_HEAD + height + 6.5, _region_legend(shown), 3)
+    sheet.legend(0, HEAD + height + FOOT, handles, columns)
 
 
 class _RegionColumns:
@@ -176,50 +131,67 @@ def shown_regions(table: pd.DataFrame, most: int) -> pd.DataFrame:
     return table.iloc[np.sort(least)]
 
 
-def region_heights(n_regions: int) -> float:
-    """Height of the panel for so many regions, mm."""
-    if not n_regions:
-        return TITLE + LINE + 1
-    rows = min(n_regions, MOST_REGIONS)
+def _legend_columns(width: float) -> int:
+    return 3 if width >= 150 else 2 if width >= 95 else 1
+
+
+def regions_height(table: pd.DataFrame, width: float, room: float = np.inf) -> float:
+    """Height of the panel at that width, mm, at most `room` unless even one row needs more."""
+    if not len(table):
+        return TITLE + 2 * LINE
+    handles = _region_legend(table, LIGHT)
+    around = HEAD + FOOT + legend_rows(len(handles), _legend_columns(width)) * LINE
+    rows = min(len(table), MOST_REGIONS)
     pitch = ROW_AIRY if rows <= 24 else ROW
-    return REGION_HEAD + max(rows, 2) * pitch + REGION_FOOT
+    return around + max(min(max(rows, 2) * pitch, room - around), 2 * ROW)
 
 
-def _effects(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_]) -> None:
+def _effects(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_], colours: Palette) -> None:
     effect = table["reported_effect"].to_numpy(dtype=float)
     low, high = (table[f"reported_{end}"].to_numpy(dtype=float) for end in ("low", "high"))
     least, largest = (table[f"effect_{end}"].to_numpy(dtype=float) for end in ("min", "max"))
     _limits(ax, np.concatenate([[0.0], effect, low, high, least, largest]))
-    ax.axvline(0, color=INK, linewidth=0.6, zorder=0)
-    ax.barh(rows, largest - least, left=least, height=0.62, color=PALE, linewidth=0, zorder=1)
-    ax.hlines(rows, low, high, color=INK, linewidth=0.9, zorder=2)
-    ax.plot(effect, rows, **_POINT, zorder=3)
-    _not_available(ax, rows[~np.isfinite(effect)])
+    ax.axvline(0, color=colours.ink, linewidth=0.6, zorder=0)
+    band = {"height": 0.62, "color": colours.pale, "linewidth": 0}
+    ax.barh(rows, largest - least, left=least, **band, zorder=1)
+    ax.hlines(rows, low, high, color=colours.ink, linewidth=0.9, zorder=2)
+    ax.plot(effect, rows, **_point(colours), zorder=3)
+    _not_available(ax, rows[~np.isfinite(effect)], colours)
 
 
-def _stabilities(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_]) -> None:
+def _stabilities(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_], colours: Palette) -> None:
     score = table["stability"].to_numpy(dtype=float)
     low, high = (table[f"stability_{end}"].to_numpy(dtype=float) for end in ("low", "high"))
+    ceiling = _ceiling(table)
     silent = (table["state"] == "silent").to_numpy()
     # one wide interval must not press all scores into a corner: it is cut at -1
-    bounds = np.clip(np.concatenate([[0.0, 1.0], score, low]), -1, 1)
+    bounds = np.clip(np.concatenate([[0.0, 1.0], score, low, ceiling]), -1, 1)
     _limits(ax, bounds)
-    ax.axvline(0, color=INK, linewidth=0.6, zorder=0)
-    ax.axvline(1, color=INK, linewidth=0.6, linestyle="dotted", zorder=0)
-    ax.hlines(rows, low, high, color=INK, linewidth=0.9, zorder=2)
-    ax.plot(score[~silent], rows[~silent], **_POINT, zorder=3)
-    ax.plot(score[silent], rows[silent], **_POINT | {"markerfacecolor": "white"}, zorder=3)
-    _not_available(ax, rows[~np.isfinite(score)])
+    ax.axvline(0, color=colours.ink, linewidth=0.6, zorder=0)
+    ax.axvline(1, color=colours.ink, linewidth=0.6, linestyle="dotted", zorder=0)
+    ax.hlines(rows, low, high, color=colours.ink, linewidth=0.9, zorder=2)
+    ax.plot(score[~silent], rows[~silent], **_point(colours), zorder=3)
+    ax.plot(score[silent], rows[silent], **_hollow(colours), zorder=3)
+    ax.plot(ceiling, rows, **_ceiling_mark(colours), zorder=4)
+    _not_available(ax, rows[~np.isfinite(score)], colours)
 
 
-_POINT: dict[str, Any] = {
-    "linestyle": "none",
-    "marker": "o",
-    "markersize": 3.6,
-    "markerfacecolor": INK,
-    "markeredgecolor": INK,
-    "markeredgewidth": 0.7,
-}
+def _ceiling(table: pd.DataFrame) -> FloatArray:
+    if "ceiling" not in table:
+        return np.full(len(table), np.nan)
+    return table["ceiling"].to_numpy(dtype=float)
+
+
+def _point(colours: Palette) -> dict[str, Any]:
+    return mark("o", 3.6, colours.ink, colours.ink, 0.7)
+
+
+def _hollow(colours: Palette) -> dict[str, Any]:
+    return mark("o", 3.6, colours.paper, colours.ink, 0.7)
+
+
+def _ceiling_mark(colours: Palette) -> dict[str, Any]:
+    return mark("|", 6.5, "none", colours.plus, 1.2)
 
 
 def _limits(ax: Axes, values: FloatArray) -> None:
@@ -231,24 +203,162 @@ def _limits(ax: Axes, values: FloatArray) -> None:
     ax.xaxis.set_major_locator(MaxNLocator(int(np.clip(room / 9, 1, 5)), steps=[1, 2, 5, 10]))
 
 
-def _not_available(ax: Axes, rows: NDArray[np.int_]) -> None:
+def _not_available(ax: Axes, rows: NDArray[np.int_], colours: Palette) -> None:
     for row in rows:
         ax.text(
-            0.5, row, "n/a", transform=ax.get_yaxis_transform(), fontsize=TYPE, color=SOFT,
+            0.5, row, "n/a", transform=ax.get_yaxis_transform(), fontsize=TYPE, color=colours.soft,
             ha="center", va="center_baseline",
-            bbox={"facecolor": "white", "edgecolor": "none", "pad": 0.8},
+            bbox={"facecolor": colours.paper, "edgecolor": "none", "pad": 0.8},
         )  # fmt: skip
 
 
-def _region_legend(table: pd.DataFrame) -> list[Artist]:
+def _region_legend(table: pd.DataFrame, colours: Palette) -> list[Artist]:
     handles: list[Artist] = [
-        Line2D([], [], **_POINT, label="effect as reported; stability score"),
-        Patch(facecolor=PALE, label="range over placements"),
+        Line2D([], [], **_point(colours), label="effect as reported; stability score"),
+        Patch(facecolor=colours.pale, label="range over placements"),
     ]
     if (table["state"] == "silent").any():
-        hollow: dict[str, Any] = _POINT | {"markerfacecolor": "white"}
-        handles.append(Line2D([], [], **hollow, label="score of a silent region"))
+        handles.append(Line2D([], [], **_hollow(colours), label="score of a silent region"))
     if table[["reported_low", "stability_low"]].notna().any(axis=None):
-        line = Line2D([], [], color=INK, linewidth=0.9, label="95 % interval over participants")
+        line = Line2D([], [], color=colours.ink, linewidth=0.9)
+        line.set_label("95 % interval over participants")
+        handles.append(line)
+    if np.isfinite(_ceiling(table)).any():
+        label = "ceiling: itself across halves"
+        handles.append(Line2D([], [], **_ceiling_mark(colours), label=label))
+    return handles
+
+
+NAME_BESIDE = 120.0
+"""A sheet from this width on has the name of a claim beside its marks, mm; else it is above."""
+CLAIM_ROW = 4.4
+VERDICT = 12.0
+SHARE_WORDS = 11.0
+"""Room for "99.5 %", mm."""
+BAR = 2.4
+
+
+def claims(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
+    """Panel of claims: share of placements where each passes, effect, range and verdict."""
+    sheet.title("Claims", letter)
+    table = seed.tables.get("claims")
+    if table is None or not len(table):
+        reason = "The study file names no table of claims, so none was tested."
+        sheet.write(0, TITLE, wrapped(reason, sheet.width), linespacing=1.25)
+        return
+    colours = sheet.colours
+    handles = _claim_legend(table, colours)
+    columns = _legend_columns(sheet.width)
+    foot = FOOT + legend_rows(len(handles), columns) * LINE
+    pitch = _claim_pitch(sheet.width)
+    room = sheet.height - HEAD - foot
+    shown = shown_claims(table, max(1, int(room / pitch + 1e-6)))
+    left = _ClaimColumns(sheet)
+    head = HEAD - LINE - 0.4
+    fewer = f": {len(shown)} of {len(table)}" if len(shown) < len(table) else ""
+    sheet.write(0, head, "claim" if left.verdict else "verdict")
+    if left.verdict:
+        sheet.write(left.verdict, head, "verdict")
+    sheet.write(left.share, head, "passing")
+    sheet.write(left.effect, head, "effect, Fisher z")
+    if fewer:
+        sheet.write(sheet.width, 0.6, f"{len(shown)} of {len(table)}", ha="right")
+    bounds = shown[
+        ["reported_effect", "reported_low", "reported_high", "effect_min", "effect_max"]
+    ].to_numpy(dtype=float)
+    for row, claim in enumerate(shown.to_dict("records")):
+        top = HEAD + row * pitch
+        ax = _claim_row(sheet, claim, top, left)
+        _limits(ax, np.append(bounds.ravel(), 0.0))
+        ax.tick_params(labelbottom=row == len(shown) - 1)
+    sheet.legend(0, HEAD + len(shown) * pitch + FOOT, handles, columns)
+
+
+class _ClaimColumns:
+    """Where the columns of the panel start, mm; the verdict is first where names are above."""
+
+    def __init__(self, sheet: Sheet) -> None:
+        beside = sheet.width >= NAME_BESIDE
+        self.verdict = 0.4 * sheet.width if beside else 0.0
+        self.share = self.verdict + VERDICT
+        free = sheet.width - self.share - SHARE_WORDS - 3
+        self.share_width = min(0.42 * free, 30.0)
+        self.effect = self.share + self.share_width + SHARE_WORDS + 2
+        self.effect_width = sheet.width - self.effect - 1
+
+
+def _claim_row(sheet: Sheet, claim: dict[str, Any], top: float, left: _ClaimColumns) -> Axes:
+    colours, line = sheet.colours, top
+    if left.verdict:
+        sheet.write(0, top + CLAIM_ROW / 2, fitted(str(claim["claim"]), left.verdict - 2),
+                    va="center_baseline")  # fmt: skip
+    else:
+        sheet.write(0, top, fitted(str(claim["claim"]), sheet.width))
+        line += LINE + 0.3
+    middle = line + CLAIM_ROW / 2
+    weight = "bold" if claim["verdict"] == "breaks" else "normal"
+    sheet.write(left.verdict, middle, str(claim["verdict"]), va="center_baseline", weight=weight)
+    share = float(claim["share_passing"])
+    after = left.share + left.share_width + 1
+    sheet.write(after, middle, percent(share), va="center_baseline")
+    bar = sheet.place(left.share, middle - BAR / 2, left.share_width, BAR)
+    bar.set_xlim(0, 1)
+    bar.set_ylim(0, 1)
+    bar.set_xticks([])
+    bar.set_yticks([])
+    if np.isfinite(share):
+        bar.add_patch(Rectangle((0, 0), share, 1, facecolor=colours.minus_pale, linewidth=0))
+    ax = sheet.place(left.effect, middle - CLAIM_ROW / 2, left.effect_width, CLAIM_ROW)
+    plain_axes(ax)
+    ax.spines["left"].set_visible(False)
+    ax.set_ylim(-1, 1)
+    ax.set_yticks([])
+    ax.axvline(0, color=colours.ink, linewidth=0.6, zorder=0)
+    least, largest = float(claim["effect_min"]), float(claim["effect_max"])
+    ax.barh(0, largest - least, left=least, height=1.1, color=colours.pale, linewidth=0, zorder=1)
+    ends = float(claim["reported_low"]), float(claim["reported_high"])
+    ax.hlines(0, *ends, color=colours.ink, linewidth=0.9, zorder=2)
+    passes = bool(claim["passes_reported"])
+    ax.plot(claim["reported_effect"], 0, **(_point if passes else _hollow)(colours), zorder=3)
+    if not np.isfinite(claim["reported_effect"]):
+        _not_available(ax, np.zeros(1, dtype=int), colours)
+    return ax
+
+
+def _claim_pitch(width: float) -> float:
+    return CLAIM_ROW + 0.4 + (0 if width >= NAME_BESIDE else LINE + 0.8)
+
+
+def shown_claims(table: pd.DataFrame, most: int) -> pd.DataFrame:
+    """The claims of a table, or, where these are too many, first those that do not hold."""
+    if len(table) <= most:
+        return table
+    order = table["verdict"].map({"breaks": 0, "open": 1}).fillna(2)
+    return table.iloc[np.sort(order.to_numpy().argsort(kind="stable")[:most])]
+
+
+def claims_height(table: pd.DataFrame | None, width: float, room: float = np.inf) -> float:
+    """Height of the panel at that width, mm, at most `room` unless even one row needs more."""
+    if table is None or not len(table):
+        return TITLE + 2 * LINE
+    entries = len(_claim_legend(table, LIGHT))
+    around = HEAD + FOOT + legend_rows(entries, _legend_columns(width)) * LINE
+    pitch = _claim_pitch(width)
+    rows = max(1, min(len(table), int((room - around) / pitch)) if np.isfinite(room) else len(table))
+    return around + rows * pitch
+
+
+def _claim_legend(table: pd.DataFrame, colours: Palette) -> list[Artist]:
+    handles: list[Artist] = [
+        Patch(facecolor=colours.minus_pale, label="share of placements where it passes"),
+        Line2D([], [], **_point(colours), label="effect as reported, passing"),
+        Patch(facecolor=colours.pale, label="range over placements"),
+    ]
+    if not table["passes_reported"].all():
+        label = "effect as reported, not passing"
+        handles.insert(2, Line2D([], [], **_hollow(colours), label=label))
+    if table["reported_low"].notna().any():
+        line = Line2D([], [], color=colours.ink, linewidth=0.9)
+        line.set_label("95 % interval over participants")
         handles.append(line)
     return handles

@@ -32,6 +32,8 @@ REFERENCES = {
     "gwet": "Gwet K.L. (2008) *Br. J. Math. Stat. Psychol.* 61:29–48.",
     "fleiss": "Fleiss J.L. (1971) *Psychol. Bull.* 76:378–382.",
     "busing": "Busing F.M.T.A., Meijer E. & van der Leeden R. (1999) *Stat. Comput.* 9:3–8.",
+    "wolter": "Wolter K.M. (2007) *Introduction to Variance Estimation*, ch. 4.",
+    "cornfield": "Cornfield J. & Tukey J.W. (1956) *Ann. Math. Stat.* 27:907–949.",
     "efron": "Efron B. & Tibshirani R.J. (1993) *An Introduction to the Bootstrap*, ch. 12.",
 }
 """In the order of the list of references; only those that apply are listed."""
@@ -116,7 +118,9 @@ def render_methods(seed: SeedAudit, audit: Audit) -> str:
         "has_ceiling": seed.summary.get("ceiling") is not None,
         "has_tolerance": seed.summary.get("tolerance_mm") is not None,
         "has_claims": seed.summary.get("claims") is not None,
-        "has_steadier": "steadier" in seed.tables,
+        "steadier": seed.summary.get("steadier"),
+        "radii": seed.summary.get("radii"),
+        "n_seeds": 0 if audit.between is None else len(audit.seeds),
         "call_share": CALL_SHARE,
         "smallest_stratum": SMALLEST_STRATUM,
         "replicates": signature(bootstrap_interval).parameters["replicates"].default,
@@ -138,7 +142,9 @@ def _cited(facts: Mapping[str, Any]) -> Iterator[str]:
         "bartlett": facts["single"],
         "dosenbach": facts["atlas"]["source"] == "dosenbach2010",
         "benjamini": facts["threshold"]["rule"] == "fdr",
-        "busing": facts["intervals"],
+        "busing": facts["intervals"] or bool(facts["steadier"]) or facts["n_seeds"] > 1,
+        "wolter": bool(facts["steadier"]),
+        "cornfield": bool(facts["radii"]),
         "efron": facts["regional_intervals"],
     }
     yield from (key for key, cited in conditions.items() if cited)

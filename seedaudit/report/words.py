@@ -1,12 +1,12 @@
-"""The words of a result: verdict, methods text, caption and alternative text.
+"""The words of a result: its verdict, and how numbers are written.
 
 Numbers come from the summary, the tables and the provenance of a result and from nowhere else.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from math import ceil, floor, isfinite
+from collections.abc import Iterable, Mapping, Sequence
+from math import floor, isfinite
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
@@ -19,10 +19,21 @@ STATES = {
     "held": "held",
     "contested": "contested",
     "lost": "lost",
-    "gained": "gained (not connected as reported)",
-    "silent": "silent (never connected)",
+    "gained": "gained",
+    "silent": "silent",
     "n/a": "without analysis voxels",
 }
+ABSENT = {
+    "mean": "never connected",
+    "difference": "no difference as reported",
+    "slope": "no effect as reported",
+}
+"""What a silent region lacks, by the kind of effect that is tested."""
+
+NAMED = 3
+"""So many regions of one state are named in the verdict; more are counted."""
+LONGEST_NAME = 30
+
 _SLACK = 1e-9
 
 
@@ -61,7 +72,23 @@ def plural(count: int, noun: str) -> str:
     return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
-def verdict(numbers: Mapping[str, Any]) -> str:
+def distance_words(distance: float, censored: bool) -> str:
+    """A tolerance with one decimal, rounded down: never farther than it is."""
+    text = number(floor(distance * 10 + _SLACK) / 10)
+    return f"at least {text} mm" if censored else f"{text} mm"
+
+
+def seed_words(name: str) -> str:
+    """A seed in the middle of a sentence; without a name of its own it is just the seed."""
+    return "the seed" if name == "seed" else f"the seed {name}"
+
+
+def absent_words(numbers: Mapping[str, Any]) -> str:
+    """What a silent region lacks."""
+    return ABSENT[numbers.get("effect_kind") or "mean"]
+
+
+def verdict(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]] = ()) -> str:
     """One plain sentence on how much of a seed's result its placements share.
 
     The stability score of all voxels takes no part in it: where hardly anything passes the
@@ -71,8 +98,15 @@ def verdict(numbers: Mapping[str, Any]) -> str:
     ----------
     numbers : mapping
         The summary of a seed.
+    regions : iterable of (name, state)
+        The regions, of which a few are named.
     """
-    clauses = [*_map_clauses(numbers), *_safety_clause(numbers), _region_clause(numbers)]
+    clauses = [
+        *_map_clauses(numbers),
+        *_worth_clauses(numbers),
+        _region_clause(numbers, regions),
+        *_claim_clause(numbers),
+    ]
     return f"{_subject(numbers)}: {'; '.join(clauses)}."
 
 
@@ -82,148 +116,123 @@ def _subject(numbers: Mapping[str, Any]) -> str:
     aside = numbers.get("n_placements_set_aside") or 0
     more = f", {aside} more set aside" if aside else ""
     return (
-        f"Seed {numbers['name']} at {point(numbers['at_mm'])} mm, moved to "
+        f"{_start(numbers['name'])} at {point(numbers['at_mm'])} mm, moved to "
         f"{plural(numbers['n_placements_used'], 'placement')} within "
         f"{number(numbers['within_mm'])} mm{more} ({who}, {numbers['threshold']})"
     )
 
 
+def _start(name: str) -> str:
+    return "The seed" if name == "seed" else f"Seed {name}"
+
+
 def _map_clauses(numbers: Mapping[str, Any]) -> list[str]:
     tails = ("positive", "negative")
-    clauses = [_tail_clause(numbers, tail) for tail in tails]
     voxels = [numbers[f"n_reported_{tail}"] for tail in tails]
     if not any(voxels):
-        drawn = numbers["n_placements_used"]
-        never = all(numbers[f"dice_{tail}_undefined"] == drawn for tail in tails)
-        if never:
-            clauses = ["nothing passes the threshold, as reported or at any drawn placement"]
         alike = similarity(numbers.get("spatial_r_median"))
-        clauses += [
-            "so there is no reported map to compare with",
+        drawn = numbers["n_placements_used"]
+        if all(numbers[f"dice_{tail}_undefined"] == drawn for tail in tails):
+            nothing = "nothing passes the threshold, as reported or at any drawn placement"
+        else:
+            nothing = ", and ".join(_empty_tail(numbers, tail) for tail in tails)
+        return [
+            f"{nothing}, so there is no reported map to compare with",
             f"the unthresholded maps have a median spatial r of {alike} with the reported one",
         ]
-    elif sum(voxels) < NEARLY_EMPTY * numbers["n_analysis_voxels"]:
+    told = [tail for tail, count in zip(tails, voxels, strict=True) if count]
+    overlap = " and ".join(_overlap(numbers, tail, first=tail == told[0]) for tail in told)
+    clauses = [f"median Dice {overlap}"]
+    clauses += [_empty_tail(numbers, tail) for tail in tails if tail not in told]
+    if sum(voxels) < NEARLY_EMPTY * numbers["n_analysis_voxels"]:
         clauses.append("so little is there that agreement on the rest of the brain says nothing")
     return clauses
 
 
-def _tail_clause(numbers: Mapping[str, Any], tail: str) -> str:
-    voxels, drawn = numbers[f"n_reported_{tail}"], numbers["n_placements_used"]
-    undefined = numbers[f"dice_{tail}_undefined"]
-    if not voxels:
-        # with an empty reported map, Dice is undefined where the other is empty too, else 0
-        found = drawn - undefined
-        drawn_ones = (
-            f"but {found} of {drawn} drawn placements have one"
-            if found
-            else "nor at any drawn placement"
-        )
-        return f"there is no {tail} map as reported, {drawn_ones}"
+def _sign(tail: str) -> str:
+    return {"positive": "+", "negative": "−"}[tail]
+
+
+def _overlap(numbers: Mapping[str, Any], tail: str, *, first: bool) -> str:
+    """Median and 5th percentile of Dice, with the size of the map, without which it is nothing."""
+    voxels = numbers[f"n_reported_{tail}"]
     share = voxels / numbers["n_analysis_voxels"]
-    size = f"{percent(share)} of the analysis voxels"
+    size = percent(share)
     if share < NEARLY_EMPTY:
-        size = f"only {plural(voxels, 'voxel')}, {size}"
+        size = f"only {plural(voxels, 'voxel')} or {size}"
     median, low = (similarity(numbers[f"dice_{tail}_{end}"]) for end in ("median", "p05"))
-    less = f", undefined at {undefined} of them" if undefined else ""
-    return (
-        f"the {tail} map ({size}) has a median Dice of {median} with the reported one "
-        f"(5th percentile {low}{less})"
-    )
+    lower, of = (f"5th percentile {low}", " of voxels") if first else (low, "")
+    return f"{median} ({lower}) for class {_sign(tail)} ({size}{of})"
 
 
-def _safety_clause(numbers: Mapping[str, Any]) -> list[str]:
-    """Safe and contested voxels, the first rounded down and the second up."""
-    safe, contested = numbers.get("safe_share"), numbers.get("contested_share")
-    if safe is None or contested is None or not (safe or contested):
-        return []
-    down = floor(safe * 1000 + _SLACK) / 1000 if safe >= NEARLY_EMPTY else safe
-    up = ceil(contested * 1000 - _SLACK) / 1000 if contested >= NEARLY_EMPTY else contested
-    return [
-        f"{percent(down)} of the analysis voxels are safely in class + or −, and "
-        f"{percent(up)} are contested"
-    ]
+def _empty_tail(numbers: Mapping[str, Any], tail: str) -> str:
+    # with an empty reported map, Dice is undefined where the other is empty too, else 0
+    drawn = numbers["n_placements_used"]
+    found = drawn - numbers[f"dice_{tail}_undefined"]
+    also = f"but not at {found} of {drawn} placements" if found else "and at all placements"
+    return f"class {_sign(tail)} is empty as reported {also}"
 
 
-def _region_clause(numbers: Mapping[str, Any]) -> str:
+def _worth_clauses(numbers: Mapping[str, Any]) -> list[str]:
+    """What moving costs beyond sampling, and how far it may go."""
+    clauses = []
+    if (relative := numbers.get("ceiling_relative")) is not None:
+        clauses.append(f"ceiling-relative stability {similarity(relative)}")
+    if (distance := numbers.get("tolerance_mm")) is not None:
+        measure = SHORT_MEASURES[numbers["tolerance_measure"]]
+        within = distance_words(distance, bool(numbers["tolerance_censored"]))
+        target = number(numbers["tolerance_target"], 2)
+        clauses.append(f"similar ({measure} {target}) within {within}")
+    return clauses
+
+
+SHORT_MEASURES = {
+    "dice_positive": "Dice +",
+    "dice_negative": "Dice −",
+    "spatial_r": "spatial r",
+    "ceiling_relative": "ceiling-relative",
+}
+
+
+def _region_clause(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]]) -> str:
     counts = numbers.get("regions") or {}
     total = sum(counts.values())
     if not total:
         return "no regions were given"
-    told = [(count, words) for state, words in STATES.items() if (count := counts.get(state, 0))]
+    words = dict(STATES, silent=f"silent ({absent_words(numbers)})")
+    told = [state for state in STATES if counts.get(state)]
     if len(told) == 1:
         whole = "the one region is" if total == 1 else f"all {total} regions are"
-        return f"{whole} {told[0][1]}"
-    listed = [f"{count} {words}" for count, words in told]
-    return f"of {total} regions, {', '.join(listed[:-1])} and {listed[-1]}"
+        return f"{whole} {words[told[0]]}"
+    names: dict[str, list[str]] = {state: [] for state in told}
+    for name, state in regions:
+        names.setdefault(state, []).append(" ".join(str(name).split()))
+    parts = []
+    for state in told:
+        few = names[state] if len(names[state]) == counts[state] <= NAMED else []
+        short = few and max(map(len, few)) <= LONGEST_NAME
+        parts.append(f"{joined(few) if short else counts[state]} {words[state]}")
+    return f"of {total} regions, {', '.join(parts)}"
 
 
-def caption(seed: SeedAudit) -> str:
-    """The caption of the figure, as plain text."""
-    told = seed.summary
-    regions = seed.tables["regions"]
-    axes = "The right of every coronal and axial slice is the right of the body."
-    outlines = "lines enclose what is in class + (solid) or class − (dashed) as reported"
-    undefined = [
-        f"Dice{sign} is undefined, because both maps are empty, at {count} of "
-        f"{told['n_placements_used']}."
-        for tail, sign in (("positive", "+"), ("negative", "−"))
-        if (count := told[f"dice_{tail}_undefined"])
-    ]
-    parts = [
-        f"Audit of the seed {seed.name} at {point(told['at_mm'])} mm, radius "
-        f"{number(told['radius_mm'])} mm: {told['n_placements_used']} drawn placements within "
-        f"{number(told['within_mm'])} mm, {plural(told['n_participants'], 'participant')}, "
-        f"threshold {told['threshold']}.",
-        "(a) Reported centre and sphere, and the centres of the drawn placements projected on "
-        f"three planes through the reported centre. {axes}",
-        "(b) Share of drawn placements with a voxel in class + and in class −, on axial slices at "
-        "the seed and at the most contested voxel of each of the largest contested clusters; "
-        f"{outlines}, hatching the voxels left out around the cloud (spheres widened by "
-        f"{number(told['exclude_margin_mm'])} mm).",
-        "(c) Dice of class + and of class −, and spatial correlation of the effect maps, of each "
-        "drawn placement with the reported one; lines join medians of neighbouring distances.",
-        *undefined,
-    ]
-    if len(regions):
-        parts.append(
-            "(d) Network regions: reported effect, range over the drawn placements (bars), "
-            "stability score (Gwet's AC1 over the voxels of the region), and state. A silent "
-            "region is stable only because it is never connected."
-        )
-        if regions[["reported_low", "stability_low"]].notna().any(axis=None):
-            parts.append("Lines are 95 % intervals from resampling participants.")
-    else:
-        parts.append("(d) No regions were given.")
-    return " ".join(parts)
+def joined(names: Sequence[str]) -> str:
+    """Names as a list in a sentence."""
+    return " and ".join(filter(None, [", ".join(names[:-1]), *names[-1:]]))
 
 
-def alternative_text(seed: SeedAudit) -> str:
-    """What the figure shows, for those who cannot see it, as plain text."""
-    told, regions = seed.summary, seed.tables["regions"]
-    drawn = seed.tables["similarity"].query("placement != 0")
-    farthest = drawn.sort_values("distance").tail(max(1, len(drawn) // 4))
-    far = ", ".join(
-        f"{label} {similarity(farthest[key].median())}"
-        for key, label in (
-            ("dice_positive", "Dice+"),
-            ("dice_negative", "Dice−"),
-            ("spatial_r", "spatial r"),
-        )
-    )
-    states = [
-        f"{state}: {', '.join(' '.join(str(name).split()) for name in group['region'])}"
-        for state, group in regions.groupby("state", sort=False)
-    ]
-    return " ".join(
-        [
-            "Four panels: slices with the cloud of placements, slices with the share of "
-            "placements in each class, similarity against shift distance, and network regions.",
-            str(told["sentence"]),
-            f"Medians of the quarter of placements farthest from the reported centre (from "
-            f"{number(farthest['distance'].min())} mm): {far}.",
-            f"Regions {'; '.join(states)}." if states else "No regions were given.",
-        ]
-    )
+def _claim_clause(numbers: Mapping[str, Any]) -> list[str]:
+    counts = numbers.get("claims") or {}
+    total = sum(counts.values())
+    if not total:
+        return []
+    single = {"holds": "holds", "breaks": "breaks", "open": "is open"}
+    several = {"holds": "hold", "breaks": "break", "open": "are open"}
+    told = [state for state in single if counts.get(state)]
+    if len(told) == 1:
+        whole = "the one claim" if total == 1 else f"all {total} claims"
+        return [f"{whole} {(single if total == 1 else several)[told[0]]}"]
+    parts = [f"{counts[s]} {(single if counts[s] == 1 else several)[s]}" for s in told]
+    return [f"of {total} claims, {joined(parts)}"]
 
 
 def methods_text(seed: SeedAudit, audit: Audit) -> str:

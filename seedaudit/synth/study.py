@@ -29,7 +29,7 @@ from seedaudit.synth.atlas import (
 )
 from seedaudit.synth.settings import SynthSettings
 from seedaudit.synth.signals import personal_coupling, simulate_run
-from seedaudit.synth.truth import CLAIMS, SEED_RADIUS, planted_truth, seed_at
+from seedaudit.synth.truth import CLAIMS, OTHER_SEEDS, SEED_RADIUS, planted_truth, seed_at
 
 MNI_SPACE = 4  # NIfTI-1 code for MNI-152 coordinates
 REPEATED = 3  # the participant, counted from 1, who has two runs
@@ -232,16 +232,11 @@ drift = 1
 band = [0.008, 0.1]             # Hz
 censor = {{ column = "framewise_displacement", above = 0.5, before = 0, after = 1 }}
 
-[[seed]]
-name = "posterior"
-at = [{at}]             # mm
-space = "mni"
-radius = {radius:g}
-
+{seeds}
 [placements]
-within = 8                      # mm
+within = {within:g}                      # mm
 draw = "ball"
-count = 100
+count = {count}
 random_state = 20
 inside = "grey.nii.gz"
 
@@ -256,6 +251,21 @@ table = "participants.tsv"
 safe = 0.95
 """
 
+SEED_SECTION = """\
+[[seed]]
+name = "{name}"
+at = [{at}]             # mm
+space = "mni"
+radius = {radius:g}
+"""
+
+STEADIER_SECTION = """
+[steadier]
+search = 8                      # mm
+step = 4                        # mm
+keep_similarity = 0.8
+"""
+
 CLAIMS_SECTION = """
 [claims]
 table = "claims.tsv"
@@ -264,25 +274,51 @@ smallest_effect = 0.05          # Fisher z
 
 
 def _write_study_files(folder: Path, settings: SynthSettings) -> Path:
-    at = ", ".join(f"{value:g}" for value in seed_at(settings.border_distance))
-    means = STUDY_FILE.format(
-        title="Posterior seed, invented sleep study",
-        output="audit",
-        at=at,
-        radius=SEED_RADIUS,
-        group='model = "~ 1"',
-        threshold='rule = "fdr"\nlevel = 0.05',
-    )
-    arms = STUDY_FILE.format(
-        title="Posterior seed, rested against restricted (invented)",
-        output="audit_arms",
-        at=at,
-        radius=SEED_RADIUS,
-        group='model = "~ arm + age"\neffect = "arm[rested] - arm[restricted]"',
+    reported = {"posterior": seed_at(settings.border_distance)}
+    means = {"group": 'model = "~ 1"', "threshold": 'rule = "fdr"\nlevel = 0.05'}
+    arms = {
+        "group": 'model = "~ arm + age"\neffect = "arm[rested] - arm[restricted]"',
         # The arms of the demonstration are too small for a corrected threshold.
-        threshold='rule = "p"\nlevel = 0.01',
+        "threshold": 'rule = "p"\nlevel = 0.01',
+    }
+    files = {
+        "study.toml": _study_text("Posterior seed, invented sleep study", "audit", reported, means)
+        + CLAIMS_SECTION
+        + STEADIER_SECTION,
+        "study_arms.toml": _study_text(
+            "Posterior seed, rested against restricted (invented)", "audit_arms", reported, arms
+        ),
+        "study_seeds.toml": _study_text(
+            "Three seeds, invented sleep study", "audit_seeds", OTHER_SEEDS, means, within=6,
+            count=40,
+        ),
+    }  # fmt: skip
+    for name, text in files.items():
+        (folder / name).write_text(text, encoding="utf-8", newline="\n")
+    return folder / "study.toml"
+
+
+def _study_text(
+    title: str,
+    output: str,
+    seeds: dict[str, tuple[float, float, float]],
+    sections: dict[str, str],
+    *,
+    within: float = 8,
+    count: int = 100,
+) -> str:
+    """A study file of these seeds."""
+    written = [
+        SEED_SECTION.format(
+            name=name, at=", ".join(f"{value:g}" for value in at), radius=SEED_RADIUS
+        )
+        for name, at in seeds.items()
+    ]
+    return STUDY_FILE.format(
+        title=title,
+        output=output,
+        seeds="\n".join(written),
+        within=within,
+        count=count,
+        **sections,
     )
-    (folder / "study_arms.toml").write_text(arms, encoding="utf-8", newline="\n")
-    path = folder / "study.toml"
-    path.write_text(means + CLAIMS_SECTION, encoding="utf-8", newline="\n")
-    return path

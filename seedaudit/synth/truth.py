@@ -27,6 +27,12 @@ Floats = NDArray[np.float64]
 
 SEED_RADIUS = 6.0  # mm
 INSIDE, ACROSS = 12.0, -8.0  # mm in front of the border, of the points to compare with
+OTHER_SEEDS = {
+    "left": (-8.0, BORDER_Y + INSIDE, 28.0),
+    "right": (8.0, BORDER_Y + INSIDE, 28.0),
+    "behind": (-8.0, BORDER_Y + ACROSS, 28.0),
+}
+"""Seeds of the study of several seeds: two in the seed's network, one across the border."""
 SIGN_FROM = 0.2  # latent correlations below it are called 0
 OCCIPITAL_TARGET = (14.0, -88.0, 6.0)  # mm, well inside the neighbour
 CLAIMS: tuple[dict[str, Any], ...] = (
@@ -177,6 +183,14 @@ def planted_truth(distance: float, warps: Mapping[str, Warp]) -> dict[str, Any]:
             **{arm: (np.round(coupling(arm), 3) + 0.0).tolist() for arm in ARM_COUPLING},
         },
         "arm_difference": _arm_difference(),
+        "steadier": {
+            "direction_vector": (0, 1, 0),
+            "reason": "away from the border, towards the middle of the seed's own network",
+        },
+        "other_seeds": {
+            name: {"at": place, "network": NAMES[int(network_at(np.array(place))) - 1]}
+            for name, place in OTHER_SEEDS.items()
+        },
         "claims": {
             claim["claim"]: {"expected": claim["expected"], "reason": claim["reason"]}
             for claim in CLAIMS

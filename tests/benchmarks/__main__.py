@@ -86,6 +86,7 @@ def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: in
     _cluster(report, six, ours)
     _placements(report, six)
     _prepared(report, six, folder, ours)
+    _search(report, six, ours)
     return report
 
 
@@ -110,6 +111,14 @@ def _placements(report: Report, table: str) -> None:
         report.add(f"(h) {n} placements over {counts[0]}, the pass",
                    found[n]["pass"] / found[counts[0]]["pass"], "x", f"<< {n // counts[0]}",
                    f"{found[n]['pass']:.2f} s, {found[n]['peak_gb']:.2f} GB")  # fmt: skip
+
+
+def _search(report: Report, table: str, plain: dict[str, float]) -> None:
+    found = measured("audit", table=table, workers=2, placements=100, searched=1)
+    report.add("(i) search of 8 mm at 2 mm over the plain audit, whole run",
+               found["seconds"] / plain["seconds"], "x", "<= 3",
+               f"{found['seconds']:.1f} s over {plain['seconds']:.1f} s, {found['peak_gb']:.2f} GB "
+               f"over {plain['peak_gb']:.2f} GB")  # fmt: skip
 
 
 def _prepared(report: Report, table: str, folder: Path, local: dict[str, float]) -> None:

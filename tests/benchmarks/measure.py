@@ -17,7 +17,11 @@ from typing import Any
 SEED = (0.0, -52.0, 26.0)
 
 
-def study(table: str, placements: int, *, cleaned: bool = False) -> Any:
+SEARCH = {"search": 8.0, "step": 2.0}
+"""mm; with neighbourhoods of 6 mm a lattice of 1419 spheres."""
+
+
+def study(table: str, placements: int, *, cleaned: bool = False, searched: bool = False) -> Any:
     """A study of the benchmark's runs."""
     from seedaudit.study import Study
 
@@ -28,6 +32,8 @@ def study(table: str, placements: int, *, cleaned: bool = False) -> Any:
     }
     if cleaned:
         content["cleaning"] = {"confounds": ["c*"], "drift": 1, "band": [0.008, 0.09]}
+    if searched:
+        content["steadier"] = SEARCH
     return Study.from_mapping(content, Path(table).parent)
 
 
@@ -57,6 +63,7 @@ def audit(
     workers: int,
     placements: int,
     cleaned: int = 0,
+    searched: int = 0,
     cluster: str = "",
     prepared: str = "",
 ) -> dict[str, float]:
@@ -68,7 +75,7 @@ def audit(
         options["cluster"] = cluster
     if prepared:
         options["prepared"] = Path(prepared)
-    asked = study(table, placements, cleaned=bool(cleaned))
+    asked = study(table, placements, cleaned=bool(cleaned), searched=bool(searched))
     started = time.perf_counter()
     result = run(asked, **options)
     took = time.perf_counter() - started

@@ -37,7 +37,7 @@ def test_the_voxels_that_reach_it_are_those_in_the_class(statistics, rule, sign)
 
 
 def test_textbook_value_and_the_most_degrees_of_freedom(statistics):
-    """t table: two-sided 0.05 at 14 df is 2.1448; fewer participants at some voxels do not count."""
+    """t table: 2.1448 at 14 df, two-sided 0.05; voxels with fewer participants do not count."""
     df = np.full(400, float(DF))
     df[:50] = 9
     found = critical_values(statistics, df, ThresholdRule("p", 0.05), 1)

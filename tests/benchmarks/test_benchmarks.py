@@ -1,0 +1,42 @@
+"""The benchmark command runs, small: its lines are there; no speed is judged here."""
+
+from __future__ import annotations
+
+import json
+
+import pytest
+
+from tests.benchmarks.__main__ import measured
+from tests.benchmarks.data import SMALL, write_runs
+
+
+@pytest.fixture(scope="module")
+def table(tmp_path_factory):
+    return str(write_runs(tmp_path_factory.mktemp("bench"), SMALL, 3))
+
+
+@pytest.mark.parametrize(
+    ("kind", "options"),
+    [
+        ("decompress", {"workers": 2}),
+        ("audit", {"workers": 2, "placements": 20, "cleaned": 1}),
+        ("maskers_batch", {"placements": 5}),
+        ("maskers_loop", {"placements": 5, "measured": 1}),
+    ],
+)
+def test_every_kind_of_measurement(table, kind, options):
+    found = measured(kind, table=table, **options)
+    assert found["seconds"] > 0
+    assert found["peak_gb"] > 0.01
+    json.dumps(found)
+
+
+def test_memory_of_an_audit_keeps_to_its_forecast(table):
+    """The predicted peak is not passed by more than a fifth, libraries included."""
+    from seedaudit.forecast import forecast
+    from seedaudit.preflight import make_plan
+    from tests.benchmarks.measure import study
+
+    predicted = forecast(make_plan(study(table, 100)), 2).memory
+    found = measured("audit", table=table, workers=2, placements=100)
+    assert found["peak_gb"] * 1e9 < 1.2 * predicted
