@@ -8,10 +8,9 @@ import os
 import signal
 import sys
 import traceback
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime
-from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -19,19 +18,9 @@ import click
 from rich.console import Console
 
 from seedaudit._version import __version__
-from seedaudit.errors import (
-    Findings,
-    Problem,
-    SeedAuditError,
-    StudyError,
-    counted,
-    printable,
-)
-
-CAUTION = (
-    "Research use. A seed that feeds stimulation or surgical targeting, or any decision on a "
-    "person's care, needs validated clinical software and licensed practice; local rules decide."
-)
+from seedaudit.asking import ready, shared
+from seedaudit.errors import Problem, SeedAuditError, StudyError, counted, printable
+from seedaudit.report import CAUTION
 
 DONE, FAULT, SET_ASIDE, INTERRUPTED = 0, 1, 4, 130
 
@@ -62,41 +51,15 @@ Examples:
 {CAUTION}
 """
 
+EPILOG_DRAW = f"""\b
+Examples:
+  seedaudit draw audit
+  seedaudit draw audit --out slides --dark --format png --panels c,rose
+  seedaudit draw audit --out column --width 85 --format pdf --panels regions
 
-def _shared(command: Callable[..., Any]) -> Callable[..., Any]:
-    """Options that `run` and `check` share."""
-    options = [
-        click.argument("study", nargs=-1, type=click.Path(path_type=Path), metavar="[STUDY]"),
-        click.option("--seed", type=float, nargs=3, metavar="X Y Z", help="Seed centre, mm."),
-        click.option("--radius", type=float, metavar="MM", help="Sphere radius (default 6 mm)."),
-        click.option("--within", type=float, metavar="MM", help="Cloud radius (default 6 mm)."),
-        click.option("--count", type=int, metavar="N", help="Placements to draw (default 100)."),
-        click.option(
-            "--steadier", type=float, metavar="MM", help="Look for a steadier seed so far away."
-        ),
-        click.option(
-            "--space",
-            type=click.Choice(["mni", "talairach", "native"]),
-            help="Space of the seed (default mni).",
-        ),
-        click.option("--bold", metavar="GLOB", help="4-D runs, quoted: 'sub-*_bold.nii.gz'."),
-        click.option("--mask", metavar="FILE", help="Analysis mask on the grid of the runs."),
-        click.option(
-            "--regions", metavar="FILE", help="Label image with its table, or dosenbach2010."
-        ),
-        click.option(
-            "--out", type=click.Path(path_type=Path), metavar="FOLDER", help="Result folder."
-        ),
-        click.option(
-            "--workers", type=click.IntRange(1), metavar="N", help="Threads (default: all cores)."
-        ),
-        click.option("--memory", metavar="SIZE", help="Keep to so much memory, such as 6GB."),
-        click.option("--json", "as_json", is_flag=True, help="JSON on standard output."),
-        click.option("--quiet", is_flag=True, help="No progress, no warnings."),
-    ]
-    for option in reversed(options):
-        command = option(command)
-    return command
+Panels of the figure: a cloud, b agreement, c decay, d regions, e rose, f claims; where the result
+has them, also landscape and front (steadier seed), seeds, radii. Widths are in mm. {CAUTION}
+"""
 
 
 @click.group(
@@ -110,7 +73,7 @@ def app(debug: bool) -> None:
 
 
 @app.command(epilog=EPILOG_RUN)
-@_shared
+@shared
 @click.option("--replace", is_flag=True, help="Put the result in the place of an earlier one.")
 @click.option("--fresh", is_flag=True, help="Ignore the progress of an interrupted run.")
 @click.option("--cluster", metavar="ADDRESS", help="Dask scheduler whose workers do the pass.")
@@ -132,7 +95,7 @@ def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool
     from seedaudit.overview import seeds_text
     from seedaudit.progress import LiveProgress, PlainProgress
 
-    plan, folder, _ = _ready(asked, out, workers, memory, replace=replace)
+    plan, folder, _ = ready(asked, out, workers, memory, replace=replace)
     _print_warnings(plan.warnings, quiet)
     console = Console(stderr=True)
     bar = LiveProgress(console) if console.is_terminal and not quiet else PlainProgress(quiet=quiet)
@@ -149,7 +112,7 @@ def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool
             )
         result.save(folder, replace=replace)
         progress.finish()
-    _print_warnings(result.provenance["warnings"], quiet)
+    _repeat_warnings(result.provenance["warnings"], plan.warnings, quiet)
     if as_json:
         _print_json(result.summary)
     else:
@@ -162,7 +125,7 @@ def run(out: Path | None, workers: int | None, memory: str | None, as_json: bool
 
 
 @app.command(epilog=EPILOG_CHECK)
-@_shared
+@shared
 def check(out: Path | None, workers: int | None, memory: str | None, as_json: bool, quiet: bool,
           **asked: Any) -> int:  # fmt: skip
     """Check a study without running it: runs, placements, regions, design, predicted needs.
@@ -172,7 +135,7 @@ def check(out: Path | None, workers: int | None, memory: str | None, as_json: bo
     """
     from seedaudit.overview import overview, overview_text
 
-    plan, _, needs = _ready(asked, out, workers, memory, replace=False)
+    plan, _, needs = ready(asked, out, workers, memory, replace=False)
     found = overview(plan, needs)
     _print_warnings(plan.warnings, quiet)
     if as_json:
@@ -208,99 +171,52 @@ def synth(folder: Path, **asked: Any) -> int:
     return DONE
 
 
-def _ready(
-    asked: dict[str, Any],
+@app.command(epilog=EPILOG_DRAW)
+@click.argument("results", type=click.Path(path_type=Path))
+@click.option(
+    "--format",
+    "formats",
+    type=click.Choice(["pdf", "svg", "png"]),
+    multiple=True,
+    help="Format of the figures, once for each (default: all).",
+)
+@click.option(
+    "--width",
+    type=click.FloatRange(85, 400),
+    metavar="MM",
+    help="Width of the figures, 85 to 400 mm (default 180).",
+)
+@click.option("--panels", metavar="LIST", help="Letters or names, with commas: a,b or decay,rose.")
+@click.option("--dark", is_flag=True, help="Light ink on dark.")
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path),
+    metavar="FOLDER",
+    help="Draw there and leave the result as it is.",
+)
+@click.option("--replace", is_flag=True, help="Put new drawings in the place of those in --out.")
+def draw(
+    results: Path,
+    formats: tuple[str, ...],
+    width: float | None,
+    panels: str | None,
+    dark: bool,
     out: Path | None,
-    workers: int | None,
-    memory: str | None,
-    *,
     replace: bool,
-) -> tuple[Any, Path, Any]:
-    """The plan of what is asked, the folder of its result and its needs, all problems at once."""
-    from seedaudit.budget import fitted, parse_size
-    from seedaudit.forecast import forecast, strains
-    from seedaudit.preflight import make_plan
-    from seedaudit.workers import available_cores
+) -> int:
+    """Draw the figures of a finished result again, without the data.
 
-    study, findings = _study(asked), Findings()
-    folder = out or study.path(study.output)
-    folder = folder if folder.name else folder.absolute()
-    findings.attempt(partial(_check_output, replace=replace), folder)
-    plan = findings.attempt(make_plan, study)
-    findings.raise_if_any()
-    assert plan is not None
-    if memory is not None:
-        plan = fitted(plan, workers or available_cores(), parse_size(memory))
-    needs = forecast(plan, workers or available_cores())
-    short = strains(needs, folder)
-    plan = dataclasses.replace(plan, warnings=(*plan.warnings, *short))
-    return plan, folder, needs
+    RESULTS is a result folder. Captions, methods text, tables and explorer are written again too.
+    Without --out they take the place of those in RESULTS, each as a whole.
+    """
+    from seedaudit.redraw import drawing_of, redraw
+    from seedaudit.store import load_audit
 
-
-def _check_output(folder: Path, *, replace: bool) -> None:
-    """Refuse what could only fail after the work: the name, the place, what is there already."""
-    from seedaudit.store import check_free
-
-    where = f"output {folder.name[:60]}"
-    try:
-        # the longest name that is made of it
-        os.lstat(folder.absolute().with_name(f".{folder.name}-old-12345678"))
-    except (FileNotFoundError, NotADirectoryError):
-        pass
-    except (OSError, ValueError):  # too long, or with a zero byte
-        found = "is no name for a folder"
-        raise StudyError(Problem(where, found, "a name of a usual length")) from None
-    there = next(parent for parent in folder.absolute().parents if parent.exists())
-    if not (there.is_dir() and os.access(there, os.W_OK | os.X_OK)):
-        found = f"cannot be made in {there}, which is " + (
-            "not writable" if there.is_dir() else "a file"
-        )
-        raise StudyError(Problem(where, found, "a writable folder", "choose another --out"))
-    check_free(folder, replace=replace)
-
-
-def _study(asked: dict[str, Any]) -> Any:
-    """The study of a study file, or of options alone."""
-    from seedaudit.study import Study
-
-    path, images = _split(asked.pop("study"))
-    given = {key: value for key, value in asked.items() if value is not None}
-    if path is not None:
-        if given:
-            options = ", ".join(f"--{key}" for key in given)
-            raise StudyError(
-                Problem(options, "given beside a study file", "one or the other",
-                        "put it into the study file")
-            )  # fmt: skip
-        return Study.load(path)
-    missing = [f"--{key}" for key in ("seed", "bold") if key not in given]
-    if missing:
-        raise StudyError(
-            Problem(
-                "command line",
-                f"no study file and no {' and no '.join(missing)}",
-                "a study file, or --seed and --bold",
-                "see seedaudit run --help",
-            )
-        )
-    content: dict[str, dict[str, Any]] = {
-        "data": {"runs": [given["bold"], *images] if images else given["bold"]},
-        "seed": {"at": given["seed"]},
-        "placements": {},
-    }
-    if "steadier" in given:
-        content["steadier"] = {"search": given["steadier"]}
-    for key, section in {
-        "mask": "data",
-        "regions": "data",
-        "radius": "seed",
-        "space": "seed",
-        "within": "placements",
-        "count": "placements",
-    }.items():
-        if key in given:
-            content[section][key] = given[key]
-    return Study.from_mapping({**content, "seed": [content["seed"]]}, Path())
+    result = load_audit(results)
+    drawing = drawing_of(result, formats, width, panels, dark=dark)
+    written = redraw(result, out or results, drawing, replace=replace or out is None)
+    click.echo(f"Drawn: {counted(len(written), 'file')} in {out or results}")
+    return DONE
 
 
 def _say(text: str) -> None:
@@ -323,25 +239,20 @@ def _second_interrupt_ends() -> Iterator[None]:
         signal.signal(signal.SIGINT, earlier)
 
 
-def _split(named: Sequence[Path]) -> tuple[Path | None, list[str]]:
-    """The study file, and the images that a shell made of an unquoted pattern of --bold."""
-    images = [str(path) for path in named if path.name.endswith((".nii", ".nii.gz"))]
-    others = [path for path in named if str(path) not in images]
-    if len(others) > 1:
-        names = ", ".join(map(str, others))
-        raise StudyError(Problem("command line", f"names {names}", "one study file"))
-    if others and images:
-        raise StudyError(
-            Problem(images[0], "given beside a study file", "one or the other",
-                    "put it into the study file")
-        )  # fmt: skip
-    return (others[0] if others else None), images
-
-
 def _print_warnings(warnings: Sequence[str], quiet: bool) -> None:
     if warnings and not quiet:
         _say(f"{counted(len(warnings), 'warning')}:")
         for text in warnings:
+            _say(f"  - {text}")
+
+
+def _repeat_warnings(warnings: Sequence[str], told: Sequence[str], quiet: bool) -> None:
+    """How many warnings there are, and those that were not told before the pass."""
+    new = [text for text in warnings if text not in told]
+    if warnings and not quiet:
+        also = f", {len(new)} of them new:" if new else ", as listed above"
+        _say(f"{counted(len(warnings), 'warning')}{also}")
+        for text in new:
             _say(f"  - {text}")
 
 

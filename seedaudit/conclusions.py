@@ -82,9 +82,10 @@ def conclude_seed(
     )  # fmt: skip
     made = tables(plan, group, number, all_found, threshold_words(plan))
     numbers = summary(plan, group, all_found, made, threshold_words(plan))
+    states = zip(made["regions"]["region"], made["regions"]["state"], strict=True)
     return SeedAudit(
         seed.seed.name,
-        read_only({**numbers, "sentence": verdict(numbers)}),
+        read_only({**numbers, "sentence": verdict(numbers, states)}),
         read_only(made),
         read_only(_maps(plan, found, space.labels, anatomy)),
         found.placement_maps,

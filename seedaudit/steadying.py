@@ -151,25 +151,19 @@ def _headline(
 
 
 def _sentence(name: str, told: dict[str, Any]) -> str:
-    """The recommendation in one sentence."""
-    gain = number(told["gain"], 3)
+    """The recommendation in words."""
     interval = "no interval with two folds"
     if np.isfinite(told["gain_low"]):
         interval = f"95 % interval {number(told['gain_low'], 3)} to {number(told['gain_high'], 3)}"
-    gained = f"the search gains {gain} in participants who had no part in the choice ({interval})"
-    scored = (
-        "stability is the mean spatial r with the maps of neighbours within "
-        f"{number(told['within_mm'])} mm, scored on the {SCORED_ON}"
+    gained = (
+        f"the search gains {number(told['gain'], 3)} ({interval}) of the mean spatial r between the "
+        f"map and those of its neighbours within {number(told['within_mm'])} mm, in participants "
+        "who had no part in the choice"
     )
+    advice = f"move {name} by {number(told['moved_mm'])} mm to {point(told['recommended_mm'])} mm"
     if told["recommended"] == "keep":
-        return (
-            f"Steadier seed: keep {name} where it is; {gained}, which is no gain beyond noise; "
-            f"{scored}."
-        )
-    return (
-        f"Steadier seed: move {name} by {number(told['moved_mm'])} mm to "
-        f"{point(told['recommended_mm'])} mm; {gained}; {scored}."
-    )
+        advice, gained = f"keep {name} where it is", f"{gained}: nothing beyond noise"
+    return f"Steadier seed: {advice}; {gained}. Scored on the {SCORED_ON}."
 
 
 def _score_volume(

@@ -203,12 +203,10 @@ def _write(audit: Audit, folder: Path) -> None:
             "GeneratedBy": [{"Name": "seedaudit", "Version": __version__}],
         },
     )
+    write_tables(audit, folder)
     for seed in audit.seeds:
         own = seed_folder(audit, folder, seed.name)
-        (own / "tables").mkdir(parents=True)
         (own / "maps").mkdir()
-        for name, table in seed.tables.items():
-            _write_described(own / "tables", name, table)
         for name, image in seed.maps.items():
             nib.save(image, own / "maps" / f"{name}.nii.gz")
             text, units = ALL_MAPS[name]
@@ -223,6 +221,15 @@ def _write(audit: Audit, folder: Path) -> None:
             )
         if seed.placement_maps is not None:
             _write_placement_maps(seed, own / "maps")
+
+
+def write_tables(audit: Audit, folder: Path) -> None:
+    """Write every table of a result with its data dictionary, where a result folder has them."""
+    for seed in audit.seeds:
+        own = seed_folder(audit, folder, seed.name) / "tables"
+        own.mkdir(parents=True)
+        for name, table in seed.tables.items():
+            _write_described(own, name, table)
     if audit.between is not None:
         (folder / "tables").mkdir(exist_ok=True)
         _write_described(folder / "tables", "seeds", audit.between)

@@ -14,6 +14,7 @@ from seedaudit.consensus.cloud import CloudConsensus, Table
 from seedaudit.consensus.components import instability_influence
 from seedaudit.dictionary import COLUMNS
 from seedaudit.groupstate import GroupState
+from seedaudit.inputs.design import Design
 from seedaudit.plan import Plan, SeedPlan
 from seedaudit.results import frozen_table
 from seedaudit.worth import Reach
@@ -192,6 +193,7 @@ def summary(
         "critical_value": found.critical,
         "statistic": "t" if np.isfinite(cloud.df) else "z",
         "df": cloud.df if np.isfinite(cloud.df) else None,
+        "effect_kind": effect_kind(plan.design),
         "stability": cloud.stability[0],
         "stability_low": cloud.stability[1],
         "stability_high": cloud.stability[2],
@@ -208,6 +210,18 @@ def summary(
     numbers["regions"] = {str(state): int(count) for state, count in states.items()}
     numbers |= _worth(found, made)
     return {key: json_number(value) for key, value in numbers.items()}
+
+
+def effect_kind(design: Design) -> str:
+    """What is tested: a `mean`, a `difference` of levels, or a `slope`.
+
+    A mean changes with what is added to every participant; the others do not.
+    """
+    ones = np.ones(len(design.matrix))
+    constant, *_ = np.linalg.lstsq(design.matrix, ones, rcond=None)
+    if not np.isclose(design.contrast @ constant, 0, atol=1e-8):
+        return "mean"
+    return "difference" if "[" in design.effect else "slope"
 
 
 def _worth(found: Found, made: dict[str, pd.DataFrame]) -> dict[str, Any]:

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from seedaudit.report.figures import Drawing
     from seedaudit.results import Audit
 
 
@@ -15,8 +16,8 @@ CAUTION = (
 )
 
 
-def write_report(audit: Audit, folder: Path) -> None:
-    """Write the explorer, the figure, its caption and the methods text of every seed.
+def write_report(audit: Audit, folder: Path, drawing: Drawing | None = None) -> None:
+    """Write the explorer, the figures, their captions and the methods text of every seed.
 
     With several seeds, a figure that compares them stands at the top.
 
@@ -25,28 +26,23 @@ def write_report(audit: Audit, folder: Path) -> None:
     audit : Audit
     folder : path
         The result folder; with several seeds, each has a folder of its own in it.
+    drawing : Drawing, optional
+        How figures are drawn.
     """
     # imported here: matplotlib is slow to load, and most commands draw nothing
     from seedaudit.report.explorer import write_explorer
-    from seedaudit.report.figures import save_figure
-    from seedaudit.report.methods import plain
+    from seedaudit.report.figures import Drawing, save_figures
     from seedaudit.report.seeds_figure import save_seeds_figure
-    from seedaudit.report.words import alternative_text, caption, methods_text
+    from seedaudit.report.words import methods_text
     from seedaudit.store import seed_folder
 
+    drawing = drawing or Drawing()
     for seed in audit.seeds:
         own = seed_folder(audit, folder, seed.name)
         own.mkdir(parents=True, exist_ok=True)
         write_explorer(seed, audit, own, between=audit.between)
-        save_figure(seed, own)
-        texts = {
-            "figure_caption.md": (
-                f"## Caption\n\n{plain(caption(seed))}\n\n"
-                f"## Alternative text\n\n{plain(alternative_text(seed))}\n"
-            ),
-            "methods.md": methods_text(seed, audit),
-        }
-        for name, text in texts.items():
-            (own / name).write_text(text, encoding="utf-8", newline="\n")
-    if audit.between is not None:
-        save_seeds_figure(audit.between, folder)
+        save_figures(seed, own, drawing)
+        text = methods_text(seed, audit)
+        (own / "methods.md").write_text(text, encoding="utf-8", newline="\n")
+    if audit.between is not None and drawing.wants("seeds"):
+        save_seeds_figure(audit.between, folder, drawing)

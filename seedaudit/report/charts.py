@@ -102,8 +102,8 @@ def regions(seed: SeedAudit, sheet: Sheet, letter: str = "", most: int = MOST_RE
         weight = "bold" if state in ("contested", "lost", "gained") else "normal"
         sheet.write(left.state, middle, str(state), va="center_baseline", weight=weight)
     head = HEAD - LINE - 0.4
-    fewer = f": {len(shown)} of {len(table)}, the least stable" if len(shown) < len(table) else ""
-    sheet.write(0, head, fitted(f"region{fewer}", left.effect - 2))
+    fewer = f"{len(shown)} of {len(table)}, least stable"
+    sheet.write(0, head, fewer if len(shown) < len(table) else "region")
     sheet.write(left.effect, head, "effect, Fisher z")
     sheet.write(left.stability, head, "stability")
     sheet.write(left.state, head, "state")
@@ -152,7 +152,7 @@ def _effects(ax: Axes, table: pd.DataFrame, rows: NDArray[np.int_], colours: Pal
     least, largest = (table[f"effect_{end}"].to_numpy(dtype=float) for end in ("min", "max"))
     _limits(ax, np.concatenate([[0.0], effect, low, high, least, largest]))
     ax.axvline(0, color=colours.ink, linewidth=0.6, zorder=0)
-    band = {"height": 0.62, "color": colours.pale, "linewidth": 0}
+    band: dict[str, Any] = {"height": 0.62, "color": colours.pale, "linewidth": 0}
     ax.barh(rows, largest - least, left=least, **band, zorder=1)
     ax.hlines(rows, low, high, color=colours.ink, linewidth=0.9, zorder=2)
     ax.plot(effect, rows, **_point(colours), zorder=3)
@@ -255,13 +255,12 @@ def claims(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     shown = shown_claims(table, max(1, int(room / pitch + 1e-6)))
     left = _ClaimColumns(sheet)
     head = HEAD - LINE - 0.4
-    fewer = f": {len(shown)} of {len(table)}" if len(shown) < len(table) else ""
     sheet.write(0, head, "claim" if left.verdict else "verdict")
     if left.verdict:
         sheet.write(left.verdict, head, "verdict")
     sheet.write(left.share, head, "passing")
     sheet.write(left.effect, head, "effect, Fisher z")
-    if fewer:
+    if len(shown) < len(table):
         sheet.write(sheet.width, 0.6, f"{len(shown)} of {len(table)}", ha="right")
     bounds = shown[
         ["reported_effect", "reported_low", "reported_high", "effect_min", "effect_max"]
@@ -270,7 +269,9 @@ def claims(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
         top = HEAD + row * pitch
         ax = _claim_row(sheet, claim, top, left)
         _limits(ax, np.append(bounds.ravel(), 0.0))
-        ax.tick_params(labelbottom=row == len(shown) - 1)
+        last = row == len(shown) - 1
+        ax.spines["bottom"].set_visible(last)
+        ax.tick_params(labelbottom=last, bottom=last)
     sheet.legend(0, HEAD + len(shown) * pitch + FOOT, handles, columns)
 
 
@@ -326,7 +327,7 @@ def _claim_row(sheet: Sheet, claim: dict[str, Any], top: float, left: _ClaimColu
 
 
 def _claim_pitch(width: float) -> float:
-    return CLAIM_ROW + 0.4 + (0 if width >= NAME_BESIDE else LINE + 0.8)
+    return CLAIM_ROW + 0.4 + (0 if width >= NAME_BESIDE else LINE + 1.4)
 
 
 def shown_claims(table: pd.DataFrame, most: int) -> pd.DataFrame:
@@ -344,7 +345,9 @@ def claims_height(table: pd.DataFrame | None, width: float, room: float = np.inf
     entries = len(_claim_legend(table, LIGHT))
     around = HEAD + FOOT + legend_rows(entries, _legend_columns(width)) * LINE
     pitch = _claim_pitch(width)
-    rows = max(1, min(len(table), int((room - around) / pitch)) if np.isfinite(room) else len(table))
+    rows = max(
+        1, min(len(table), int((room - around) / pitch)) if np.isfinite(room) else len(table)
+    )
     return around + rows * pitch
 
 

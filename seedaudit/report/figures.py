@@ -12,8 +12,10 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
+from seedaudit.report.captions import alternative_text, caption, lettered
 from seedaudit.report.charts import claims, claims_height, regions, regions_height
 from seedaudit.report.landscape import FRONT_HEIGHT, front, landscape, landscape_height
+from seedaudit.report.methods import plain
 from seedaudit.report.panels import agreement, agreement_height, cloud, cloud_height
 from seedaudit.report.reach import decay, decay_height, rose, rose_height
 from seedaudit.report.several import radii, radii_height, seeds, seeds_height
@@ -26,7 +28,6 @@ from seedaudit.report.style import (
     blank_figure,
     look,
 )
-from seedaudit.report.words import alternative_text, lettered
 from seedaudit.results import SeedAudit
 
 WIDTH = 180.0
@@ -94,10 +95,13 @@ class Drawing:
         """The scheme."""
         return DARK if self.dark else LIGHT
 
+    def wants(self, panel: str) -> bool:
+        """Whether a panel is to be drawn."""
+        return self.panels is None or panel in self.panels
+
     def rows(self, name: str) -> list[tuple[str, ...]]:
         """The rows of a figure with the panels that are wanted; none: no such figure."""
-        wanted = set(PANELS if self.panels is None else self.panels)
-        rows = [tuple(panel for panel in row if panel in wanted) for row in FIGURES[name]]
+        rows = [tuple(filter(self.wants, row)) for row in FIGURES[name]]
         if self.width < STACKED:
             rows = [(panel,) for row in rows for panel in row]
         return [row for row in rows if row]
@@ -227,12 +231,17 @@ def _sheet(
 def save_figure(
     seed: SeedAudit, folder: Path, drawing: Drawing | None = None, *, name: str = "figure"
 ) -> None:
-    """Write one figure in every format; the same seed gives the same bytes."""
+    """Write one figure in every format, and its caption; the same seed gives the same bytes."""
     drawing = drawing or Drawing()
     page = figure(seed, drawing, name=name)
     panels = [panel for row in drawing.rows(name) for panel in row]
     described = alternative_text(seed, panels)
     write_formats(page, folder, name, drawing, f"Seed placement audit: {seed.name}", described)
+    text = (
+        f"## Caption\n\n{plain(caption(seed, panels))}\n\n"
+        f"## Alternative text\n\n{plain(described)}\n"
+    )
+    (folder / f"{name}_caption.md").write_text(text, encoding="utf-8", newline="\n")
 
 
 def write_formats(

@@ -40,7 +40,6 @@ LANDSCAPE_FOOT = 9.5 + 2 * LINE
 FRONT_FOOT = 9.0 + 4 * LINE
 
 
-
 def _moved_mark(colours: Palette) -> dict[str, Any]:
     return mark("*", 8.5, colours.paper, colours.ink, 0.9)
 
@@ -91,7 +90,9 @@ def landscape(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
             ax.plot(*places[moved, [along, up]], **_moved_mark(sheet.colours), zorder=5)
         sheet.write(left, TITLE, f"{kind}, {'xyz'[through]} = {number(at[through])} mm")
     _score_bar(sheet, top + side + 1.5, scale)
-    sheet.legend(0.42 * sheet.width, top + side + 1.5, _landscape_legend(table, at, sheet.colours), 1)
+    sheet.legend(
+        0.42 * sheet.width, top + side + 1.5, _landscape_legend(table, at, sheet.colours), 1
+    )
 
 
 def _cell(

@@ -11,10 +11,22 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
+from seedaudit.consensus.ceiling import LEAST_CEILING
+from seedaudit.consensus.claims import LEVEL
 from seedaudit.consensus.regional import CALL_SHARE
 from seedaudit.consensus.resampling import SMALLEST_STRATUM, bootstrap_interval
+from seedaudit.placements import CONTROL_DISTANCE
 from seedaudit.plan import cloud_size
-from seedaudit.report.words import number, percent, plural, point, similarity
+from seedaudit.report import CAUTION
+from seedaudit.report.words import (
+    MEASURES,
+    distance_words,
+    number,
+    percent,
+    plural,
+    point,
+    similarity,
+)
 from seedaudit.results import Audit, SeedAudit
 from seedaudit.study import Cleaning, Placements
 
@@ -32,6 +44,14 @@ REFERENCES = {
     "gwet": "Gwet K.L. (2008) *Br. J. Math. Stat. Psychol.* 61:29–48.",
     "fleiss": "Fleiss J.L. (1971) *Psychol. Bull.* 76:378–382.",
     "busing": "Busing F.M.T.A., Meijer E. & van der Leeden R. (1999) *Stat. Comput.* 9:3–8.",
+    "barlow": "Barlow R.E. et al. (1972) *Statistical Inference under Order Restrictions*.",
+    "forman": "Forman S.D. et al. (1995) *Magn. Reson. Med.* 33:636–647.",
+    "freedman": "Freedman D. & Lane D. (1983) *J. Bus. Econ. Stat.* 1:292–298.",
+    "winkler": "Winkler A.M. et al. (2014) *NeuroImage* 92:381–397.",
+    "nieuwenhuis": "Nieuwenhuis S. et al. (2011) *Nat. Neurosci.* 14:1105–1107.",
+    "schuirmann": "Schuirmann D.J. (1987) *J. Pharmacokinet. Biopharm.* 15:657–680.",
+    "holm": "Holm S. (1979) *Scand. J. Stat.* 6:65–70.",
+    "searle": "Searle S.R. et al. (1992) *Variance Components*.",
     "wolter": "Wolter K.M. (2007) *Introduction to Variance Estimation*, ch. 4.",
     "cornfield": "Cornfield J. & Tukey J.W. (1956) *Ann. Math. Stat.* 27:907–949.",
     "efron": "Efron B. & Tibshirani R.J. (1993) *An Introduction to the Bootstrap*, ch. 12.",
@@ -116,8 +136,17 @@ def render_methods(seed: SeedAudit, audit: Audit) -> str:
         "intervals": seed.summary["stability_low"] is not None,
         "regional_intervals": bool(regions["reported_low"].notna().any()),
         "has_ceiling": seed.summary.get("ceiling") is not None,
-        "has_tolerance": seed.summary.get("tolerance_mm") is not None,
-        "has_claims": seed.summary.get("claims") is not None,
+        "least_ceiling": LEAST_CEILING,
+        "control_distance": CONTROL_DISTANCE,
+        "tolerances": _tolerances(seed),
+        "claims": study.get("claims"),
+        "n_claims": sum((seed.summary.get("claims") or {}).values()),
+        "claim_level": LEVEL,
+        "one_sample": seed.summary.get("effect_kind") == "mean"
+        and len(told["group"]["columns"]) == 1,
+        "has_placement_share": "placement_share" in regions
+        and bool(regions["placement_share"].notna().any()),
+        "caution": CAUTION,
         "steadier": seed.summary.get("steadier"),
         "radii": seed.summary.get("radii"),
         "n_seeds": 0 if audit.between is None else len(audit.seeds),
@@ -127,13 +156,35 @@ def render_methods(seed: SeedAudit, audit: Audit) -> str:
         "choices": told["choices"],
         "versions": {"seedaudit": told["seedaudit"], "Python": told["python"], **told["libraries"]},
     }
+    facts["numbers"] = {**dict.fromkeys(WORTH), **facts["numbers"]}
     facts["references"] = [REFERENCES[key] for key in REFERENCES if key in set(_cited(facts))]
     return templates().get_template("methods.md.jinja").render(facts)
+
+
+WORTH = (
+    "ceiling", "ceiling_relative", "ceiling_relative_low", "floor", "n_controls", "smoothness_mm",
+    "n_class_half_splits", "most_fragile_direction", "motion_rank_correlation", "critical_value",
+)  # fmt: skip
+"""Numbers that a result need not have."""
+
+
+def _tolerances(seed: SeedAudit) -> list[dict[str, Any]]:
+    """The measures with a tolerance, in words."""
+    return [
+        {
+            "name": MEASURES[measure],
+            "target": limit["target"],
+            "words": distance_words(limit["mm"], bool(limit["censored"])),
+        }
+        for measure, limit in (seed.summary.get("tolerances") or {}).items()
+    ]
 
 
 def _cited(facts: Mapping[str, Any]) -> Iterator[str]:
     """Keys of the references that the text of these facts cites."""
     yield from ("dice", "lin", "gwet", "fleiss", "nichols")
+    worth, claims = facts["numbers"], bool(facts["n_claims"]) and not facts["single"]
+    rearranged = claims or facts["threshold"]["rule"] == "fwe"
     conditions = {
         "lancaster": facts["asked"]["space"] == "talairach",
         "owen": facts["placements"]["draw"] in ("ball", "normal"),
@@ -142,7 +193,18 @@ def _cited(facts: Mapping[str, Any]) -> Iterator[str]:
         "bartlett": facts["single"],
         "dosenbach": facts["atlas"]["source"] == "dosenbach2010",
         "benjamini": facts["threshold"]["rule"] == "fdr",
-        "busing": facts["intervals"] or bool(facts["steadier"]) or facts["n_seeds"] > 1,
+        "busing": facts["intervals"]
+        or bool(facts["steadier"])
+        or facts["n_seeds"] > 1
+        or worth["ceiling_relative_low"] is not None,
+        "barlow": bool(facts["tolerances"]),
+        "forman": worth["smoothness_mm"] is not None,
+        "freedman": rearranged,
+        "holm": claims,
+        "nieuwenhuis": claims,
+        "schuirmann": claims,
+        "searle": facts["has_placement_share"] and not facts["single"],
+        "winkler": rearranged,
         "wolter": bool(facts["steadier"]),
         "cornfield": bool(facts["radii"]),
         "efron": facts["regional_intervals"],

@@ -108,7 +108,10 @@ def _placements(ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette) -> No
     drawn = table["kind"].isin(["jitter", "lattice"]).to_numpy()
     used = table["used"].to_numpy(dtype=bool)
     shrink, many = crowding(len(table))
-    for shown, style in ((drawn & ~used, _aside_mark(colours)), (drawn & used, _used_mark(colours))):
+    for shown, style in (
+        (drawn & ~used, _aside_mark(colours)),
+        (drawn & used, _used_mark(colours)),
+    ):
         size = {"markersize": style["markersize"] * shrink}
         ax.plot(*centres[shown].T, **style | size, rasterized=many)
     at = np.asarray(seed.summary["at_mm"], dtype=float)[[along, up]]

@@ -26,29 +26,27 @@ from seedaudit.report.style import (
     plain_axes,
     wrapped,
 )
-from seedaudit.report.words import distance_words, number
+from seedaudit.report.words import MEASURES, distance_words, number
 from seedaudit.results import SeedAudit
 
 FloatArray = NDArray[np.float64]
 
-MEASURES = {
-    "dice_positive": "Dice +",
-    "dice_negative": "Dice −",
-    "spatial_r": "spatial r",
-    "ceiling_relative": "ceiling-relative",
-}
-"""Similarities in the order of their charts."""
+SHORT = MEASURES | {"ceiling_relative": "ceiling-relative"}
+"""What stands over the charts, in their order."""
 
 LIMITS = -0.3, 1.3
 """A similarity beyond these stands at the edge of its chart, as a triangle."""
 
-AXIS = 8.5
+AXIS = 9.5
 """Room for the numbers and the label of the left axis, mm."""
 BETWEEN = 2.5
 HEAD = 2 * LINE + 0.5
 PLOT = 26.0
 """Height of a chart, mm."""
 FOOT = 8.0
+
+FOUND, OPEN = "\N{BLACK DOWN-POINTING TRIANGLE}", "\N{WHITE RIGHT-POINTING TRIANGLE}"
+"""A tolerance, and one that is a lower bound."""
 
 WAYS = {
     "superior": 90, "anterior": 45, "right": 0, "inferior": 270, "posterior": 225, "left": 180,
@@ -90,7 +88,7 @@ def decay(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
         ax.set_xlim(0, 1.04 * _farthest(seed))
         ax.set_ylim(*limits)
         ax.xaxis.set_major_locator(MaxNLocator(max(2, int(width / 7)), steps=[1, 2, 4, 5, 10]))
-        ax.yaxis.set_major_locator(MaxNLocator(5))
+        ax.yaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5]))
         if column:
             ax.tick_params(labelleft=False)
         sheet.write(left, top, "\n".join(_head(seed, measure)), linespacing=1.25)
@@ -165,9 +163,9 @@ def _limits(seed: SeedAudit) -> tuple[float, float]:
 
 def _head(seed: SeedAudit, measure: str) -> list[str]:
     """What stands over a chart: its measure, its tolerance, and how much of it is undefined."""
-    lines = [MEASURES[measure], ""]
+    lines = [SHORT[measure], ""]
     if (limit := tolerance(seed, measure)) is not None:
-        shape = "\N{WHITE RIGHT-POINTING TRIANGLE}" if limit["censored"] else "\N{BLACK DOWN-POINTING TRIANGLE}"
+        shape = OPEN if limit["censored"] else FOUND
         lines[1] = f"{shape} {distance_words(limit['mm'], limit['censored'])}"
     elif measure.startswith("dice") and not seed.summary[f"n_reported_{measure[5:]}"]:
         lines[1] = "empty as reported"
@@ -286,8 +284,8 @@ def rose(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     limits = {way: tolerance(seed, measure, way) for way in WAYS}
     overall = tolerance(seed, measure)
     target = next(limit["target"] for limit in (overall, *limits.values()) if limit is not None)
-    name = "ceiling-relative stability" if measure == "ceiling_relative" else MEASURES[measure]
-    sheet.write(0, TITLE, f"mm until {name} is below {number(target, 2)}")
+    words = f"mm until {MEASURES[measure]} is below {number(target, 2)}"
+    sheet.write(0, TITLE, words)
     top = TITLE + LINE + 1
     side = min(sheet.width - ROSE_LIST - 2, sheet.height - top)
     _petals(sheet, top, side, _farthest(seed), limits)
@@ -313,13 +311,14 @@ def _petals(
              if 0 < ring <= farthest + 1e-9]  # fmt: skip
     for ring in rings:
         ax.add_patch(Circle((0, 0), ring, fill=False, edgecolor=colours.pale, linewidth=0.6))
-        place = ring * np.array([np.cos(np.radians(315)), np.sin(np.radians(315))])
+        x, y = ring * _unit(315)
         plate: dict[str, Any] = {"facecolor": colours.paper, "edgecolor": "none", "pad": 0.4}
-        ax.text(*place, number(ring), ha="center", va="center", fontsize=TYPE, color=colours.soft,
+        ax.text(x, y, number(ring), ha="center", va="center", fontsize=TYPE, color=colours.soft,
                 bbox=plate)  # fmt: skip
     for way, angle in WAYS.items():
-        along = np.array([np.cos(np.radians(angle)), np.sin(np.radians(angle))])
-        ax.text(*(1.12 * farthest * along), way[0].upper(), ha="center", va="center_baseline",
+        along = _unit(angle)
+        x, y = 1.12 * farthest * along
+        ax.text(x, y, way[0].upper(), ha="center", va="center_baseline",
                 fontsize=TYPE)  # fmt: skip
         if (limit := limits[way]) is None:
             continue
@@ -331,6 +330,11 @@ def _petals(
             style = {"facecolor": colours.paper, "edgecolor": colours.ink, "linestyle": "dashed"}
         ax.add_patch(Polygon([(0, 0), belly + half, tip, belly - half], linewidth=0.8, **style))
     ax.plot(0, 0, **mark("D", 2.4, colours.ink, colours.paper, 0.4), zorder=4)
+
+
+def _unit(angle: float) -> FloatArray:
+    """The direction of an angle in degrees, from the right and upwards."""
+    return np.array([np.cos(np.radians(angle)), np.sin(np.radians(angle))])
 
 
 def _rose_list(

@@ -11,7 +11,16 @@ from matplotlib.figure import Figure
 from seedaudit.report.figures import Drawing, write_formats
 from seedaudit.report.methods import plain
 from seedaudit.report.several import MATRIX_FOOT, seeds_matrix
-from seedaudit.report.style import LIGHT, LINE, MM_PER_INCH, TITLE, Palette, Sheet, blank_figure, look
+from seedaudit.report.style import (
+    LIGHT,
+    LINE,
+    MM_PER_INCH,
+    TITLE,
+    Palette,
+    Sheet,
+    blank_figure,
+    look,
+)
 from seedaudit.report.words import number
 
 WIDTH = 120.0

@@ -135,9 +135,8 @@ def look(colours: Palette = LIGHT) -> Iterator[None]:
     with matplotlib.rc_context():
         matplotlib.rcdefaults()
         matplotlib.rcParams.update(_SETTINGS)
-        matplotlib.rcParams.update(
-            dict.fromkeys(_PAPER, colours.paper) | dict.fromkeys(_INKED, colours.ink)
-        )
+        scheme: Any = dict.fromkeys(_PAPER, colours.paper) | dict.fromkeys(_INKED, colours.ink)
+        matplotlib.rcParams.update(scheme)
         yield
 
 

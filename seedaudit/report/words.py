@@ -30,6 +30,13 @@ ABSENT = {
 }
 """What a silent region lacks, by the kind of effect that is tested."""
 
+MEASURES = {
+    "dice_positive": "Dice +",
+    "dice_negative": "Dice −",
+    "spatial_r": "spatial r",
+    "ceiling_relative": "ceiling-relative stability",
+}
+
 NAMED = 3
 """So many regions of one state are named in the verdict; more are counted."""
 LONGEST_NAME = 30
@@ -89,7 +96,7 @@ def absent_words(numbers: Mapping[str, Any]) -> str:
 
 
 def verdict(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]] = ()) -> str:
-    """One plain sentence on how much of a seed's result its placements share.
+    """What a seed's placements share, in a plain sentence on the map and one on what is claimed.
 
     The stability score of all voxels takes no part in it: where hardly anything passes the
     threshold, placements agree on nothing being there, and the score is high for no merit.
@@ -101,13 +108,9 @@ def verdict(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]] = ())
     regions : iterable of (name, state)
         The regions, of which a few are named.
     """
-    clauses = [
-        *_map_clauses(numbers),
-        *_worth_clauses(numbers),
-        _region_clause(numbers, regions),
-        *_claim_clause(numbers),
-    ]
-    return f"{_subject(numbers)}: {'; '.join(clauses)}."
+    first = "; ".join([*_map_clauses(numbers), *_worth_clauses(numbers)])
+    second = "; ".join([_region_clause(numbers, regions), *_claim_clause(numbers)])
+    return f"{_subject(numbers)}: {first}. {second[0].upper()}{second[1:]}."
 
 
 def _subject(numbers: Mapping[str, Any]) -> str:
@@ -179,19 +182,11 @@ def _worth_clauses(numbers: Mapping[str, Any]) -> list[str]:
     if (relative := numbers.get("ceiling_relative")) is not None:
         clauses.append(f"ceiling-relative stability {similarity(relative)}")
     if (distance := numbers.get("tolerance_mm")) is not None:
-        measure = SHORT_MEASURES[numbers["tolerance_measure"]]
+        measure = MEASURES[numbers["tolerance_measure"]]
         within = distance_words(distance, bool(numbers["tolerance_censored"]))
         target = number(numbers["tolerance_target"], 2)
         clauses.append(f"similar ({measure} {target}) within {within}")
     return clauses
-
-
-SHORT_MEASURES = {
-    "dice_positive": "Dice +",
-    "dice_negative": "Dice −",
-    "spatial_r": "spatial r",
-    "ceiling_relative": "ceiling-relative",
-}
 
 
 def _region_clause(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]]) -> str:
@@ -210,6 +205,7 @@ def _region_clause(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]
     parts = []
     for state in told:
         few = names[state] if len(names[state]) == counts[state] <= NAMED else []
+        few = few if state != "n/a" else []
         short = few and max(map(len, few)) <= LONGEST_NAME
         parts.append(f"{joined(few) if short else counts[state]} {words[state]}")
     return f"of {total} regions, {', '.join(parts)}"
@@ -232,7 +228,7 @@ def _claim_clause(numbers: Mapping[str, Any]) -> list[str]:
         whole = "the one claim" if total == 1 else f"all {total} claims"
         return [f"{whole} {(single if total == 1 else several)[told[0]]}"]
     parts = [f"{counts[s]} {(single if counts[s] == 1 else several)[s]}" for s in told]
-    return [f"of {total} claims, {joined(parts)}"]
+    return [f"of {total} claims {joined(parts)}"]
 
 
 def methods_text(seed: SeedAudit, audit: Audit) -> str:

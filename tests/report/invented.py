@@ -249,7 +249,8 @@ def invented_seed(
             summary
         )
     numbers = invented_summary(tables, n_participants=participants, **summary)
-    numbers["sentence"] = verdict(numbers)
+    states = zip(tables["regions"]["region"], tables["regions"]["state"], strict=True)
+    numbers["sentence"] = verdict(numbers, states)
     maps = {}
     for name, volume in head_volumes(
         grid, placements, negative=negative, contested=contested
