@@ -11,6 +11,7 @@ import pandas as pd
 from seedaudit.errors import counted, printable
 from seedaudit.forecast import Forecast
 from seedaudit.plan import Plan
+from seedaudit.report.words import similarity
 from seedaudit.searching import PlannedSearch
 
 
@@ -215,8 +216,8 @@ def regions_text(regions: pd.DataFrame) -> str:
                 row["state"],
                 number(row["reported_effect"]),
                 f"{number(row['effect_min'])} to {number(row['effect_max'])}",
-                number(row["stability"]),
-                f"{number(row['stability_low'])} to {number(row['stability_high'])}",
+                similarity(row["stability"]),
+                f"{similarity(row['stability_low'])} to {similarity(row['stability_high'])}",
             ]
             for row in regions.to_dict("records")
         ),
@@ -227,7 +228,8 @@ def number(value: float | None, digits: int = 2) -> str:
     """A number with a true minus sign, or n/a."""
     if value is None or not np.isfinite(value):
         return "n/a"
-    return f"{value:.{digits}f}".replace("-", "\N{MINUS SIGN}")
+    text = f"{value:.{digits}f}"
+    return text.lstrip("-") if float(text) == 0 else text.replace("-", "\N{MINUS SIGN}")
 
 
 def aligned(head: Sequence[str], rows: Iterable[Sequence[Any]]) -> str:

@@ -156,9 +156,9 @@ def _sentence(name: str, told: dict[str, Any]) -> str:
     if np.isfinite(told["gain_low"]):
         interval = f"95 % interval {number(told['gain_low'], 3)} to {number(told['gain_high'], 3)}"
     gained = (
-        f"the search gains {number(told['gain'], 3)} ({interval}) of the mean spatial r between the "
-        f"map and those of its neighbours within {number(told['within_mm'])} mm, in participants "
-        "who had no part in the choice"
+        f"the search gains {number(told['gain'], 3)} ({interval}) of the mean spatial r between "
+        f"the map and those of its neighbours within {number(told['within_mm'])} mm, in "
+        "participants who had no part in the choice"
     )
     advice = f"move {name} by {number(told['moved_mm'])} mm to {point(told['recommended_mm'])} mm"
     if told["recommended"] == "keep":

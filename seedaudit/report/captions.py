@@ -6,6 +6,7 @@ from collections.abc import Callable, Sequence
 
 import numpy as np
 
+from seedaudit.consensus.tolerance import LEAST_PLACEMENTS
 from seedaudit.report.words import (
     MEASURES,
     STATES,
@@ -23,6 +24,9 @@ from seedaudit.results import SeedAudit
 
 MAIN = ("cloud", "agreement", "decay", "regions", "rose", "claims")
 """Panels of the supplementary figure in the order of their letters."""
+
+LISTED = 12
+"""So many regions of one state are named to a listener; more are counted."""
 
 COUNTS = ("no", "one", "two", "three", "four", "five", "six")
 
@@ -78,10 +82,11 @@ def _agreement(seed: SeedAudit) -> str:
 
 def _decay(seed: SeedAudit) -> str:
     told, fits = seed.summary, seed.tables.get("decay")
+    halves = "participants" if told["n_participants"] > 1 else "series"
     parts = [
         "Dice of class + and of class −, and spatial correlation of the effect maps, of each drawn "
-        "placement with the reported one, and its spatial correlation across halves of the "
-        "participants relative to that of the reported map with itself (ceiling-relative)."
+        f"placement with the reported one, and its spatial correlation across halves of the "
+        f"{halves} relative to that of the reported map with itself (ceiling-relative)."
     ]
     if fits is None or not len(fits):
         parts.append("Lines join medians of neighbouring distances.")
@@ -89,11 +94,9 @@ def _decay(seed: SeedAudit) -> str:
         parts.append("Solid lines: fits that can only fall with distance (isotonic).")
         levels = {
             "ceiling": (
-                "Dashed: ceiling, the same for the reported map in two halves of the participants "
-                "(so it can lie below maps that share all participants)."
-            )
-            if told["n_participants"] > 1
-            else "Dashed: ceiling, the same for the reported map in two halves of the series.",
+                f"Dashed: ceiling, the same for the reported map in two halves of the {halves} (so "
+                "it can lie below the similarity of maps from all of them)."
+            ),
             "floor": f"Dotted: floor, the median over {told.get('n_controls')} unrelated seeds.",
             "geometry": (
                 "Dash-dotted: the correlation that overlap and smoothness alone would give two "
@@ -152,7 +155,7 @@ def _rose(seed: SeedAudit) -> str:
     if rows["censored"].any():
         parts.append("Dashed petals: at least so far, to the last placement of that sector.")
     if rows["tolerance"].isna().any():
-        parts.append("Unknown: too few placements (pl.).")
+        parts.append(f"Unknown: fewer than {LEAST_PLACEMENTS} placements in that sector.")
     if (fragile := told.get("most_fragile_direction")) is not None:
         parts.append(f"Most fragile direction: {fragile}.")
     return " ".join(parts)
@@ -266,12 +269,12 @@ def _farthest_words(seed: SeedAudit) -> str:
 def _state_words(seed: SeedAudit) -> str:
     regions = seed.tables["regions"]
     groups = dict(list(regions.groupby("state", sort=False)))
-    states = [
-        f"{state}: {', '.join(' '.join(str(name).split()) for name in groups[state]['region'])}"
-        for state in STATES
-        if state in groups
-    ]
-    return f"Regions {'; '.join(states)}." if states else "No regions were given."
+    told = []
+    for state in filter(groups.__contains__, STATES):
+        names = [" ".join(str(name).split()) for name in groups[state]["region"]]
+        listed = ", ".join(names) if len(names) <= LISTED else f"{len(names)} regions"
+        told.append(f"{state}: {listed}")
+    return f"Regions {'; '.join(told)}." if told else "No regions were given."
 
 
 def _direction_words(seed: SeedAudit) -> str:

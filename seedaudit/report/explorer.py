@@ -21,7 +21,7 @@ from seedaudit.report.methods import templates
 from seedaudit.report.slices import contested_places, grid_of
 from seedaudit.report.words import STATES, methods_text
 from seedaudit.results import Audit, SeedAudit
-from seedaudit.store import write_table
+from seedaudit.tsv import write_table
 
 LARGEST_PAGE = 8_000_000
 """Bytes of a page."""

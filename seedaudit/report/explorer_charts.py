@@ -12,7 +12,7 @@ from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from seedaudit.report.charts import binned_medians
-from seedaudit.report.words import number, similarity
+from seedaudit.report.words import distance_words, number, similarity
 from seedaudit.results import SeedAudit
 
 MEASURES = {
@@ -171,7 +171,7 @@ class Petal:
         """As text."""
         if not np.isfinite(self.tolerance):
             return f"unknown ({self.n} placements)"
-        return f"{'at least ' if self.censored else ''}{number(self.tolerance)} mm"
+        return distance_words(self.tolerance, self.censored)
 
 
 def rose(table: pd.DataFrame | None, measure: str = "dice_positive") -> list[Petal]:

@@ -14,7 +14,7 @@ from matplotlib.figure import Figure
 
 from seedaudit.report.captions import alternative_text, caption, lettered
 from seedaudit.report.charts import claims, claims_height, regions, regions_height
-from seedaudit.report.landscape import FRONT_HEIGHT, front, landscape, landscape_height
+from seedaudit.report.landscape import front, front_height, landscape, landscape_height
 from seedaudit.report.methods import plain
 from seedaudit.report.panels import agreement, agreement_height, cloud, cloud_height
 from seedaudit.report.reach import decay, decay_height, rose, rose_height
@@ -103,7 +103,7 @@ class Drawing:
         """The rows of a figure with the panels that are wanted; none: no such figure."""
         rows = [tuple(filter(self.wants, row)) for row in FIGURES[name]]
         if self.width < STACKED:
-            rows = [(panel,) for row in rows for panel in row]
+            rows = [(panel,) for panel in PANELS if any(panel in row for row in rows)]
         return [row for row in rows if row]
 
 
@@ -194,7 +194,7 @@ def _height(panel: str, width: float, seed: SeedAudit, room: float = np.inf) -> 
         "regions": lambda: regions_height(tables["regions"], width, room),
         "claims": lambda: claims_height(tables.get("claims"), width, room),
         "landscape": lambda: landscape_height(width),
-        "front": lambda: FRONT_HEIGHT,
+        "front": lambda: front_height(width),
         "radii": lambda: radii_height(tables.get("radii")),
     }
     return heights[panel]()

@@ -37,7 +37,8 @@ LEAST_SPAN = 0.05
 """Least range of the scores that the colours of the landscape cover."""
 
 LANDSCAPE_FOOT = 9.5 + 2 * LINE
-FRONT_FOOT = 9.0 + 4 * LINE
+BESIDE = 105.0
+"""A sheet from this width on has the legend of the landscape beside its colour bar, mm."""
 
 
 def _moved_mark(colours: Palette) -> dict[str, Any]:
@@ -50,17 +51,29 @@ def _lost_mark(colours: Palette) -> dict[str, Any]:
 
 def landscape_height(width: float) -> float:
     """Height of the panel of the landscape at that width, mm."""
-    return TITLE + LINE + 0.5 + (width - 2 * GAP) / 3 + LANDSCAPE_FOOT
+    return TITLE + LINE + 0.5 + (width - 2 * GAP) / 3 + _landscape_foot(width)
 
 
-FRONT_HEIGHT = 62.0
-"""Height of the panel of the front, mm."""
+def _landscape_foot(width: float) -> float:
+    return LANDSCAPE_FOOT + (0 if width >= BESIDE else 3 * LINE + 0.5)
+
+
+def front_height(width: float) -> float:
+    """Height of the panel of the front at that width, mm."""
+    return TITLE + 1 + 36 + _front_foot(width)
+
+
+def _front_foot(width: float) -> float:
+    """Axis, and the five entries of the legend in one or two columns, mm."""
+    return 9.0 + (3 if width > 95 else 5) * LINE
+
+
 NO_SEARCH = "No steadier seed was searched for (section steadier of the study file)."
 
 
 def landscape(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     """Panel of the landscape: the score of every candidate on three planes through the seed."""
-    sheet.title("Stability around the reported seed, in other participants", letter)
+    sheet.title("Stability of nearby seeds in other participants", letter)
     if "steadier" not in seed.tables:
         sheet.write(0, TITLE, wrapped(NO_SEARCH, sheet.width), linespacing=1.25)
         return
@@ -72,7 +85,7 @@ def landscape(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     keeps = table["keeps_identity"].to_numpy(dtype=bool)
     scale = Normalize(*_limits(score[keeps]))
     top = TITLE + LINE + 0.5
-    side = min((sheet.width - 2 * GAP) / 3, sheet.height - top - LANDSCAPE_FOOT)
+    side = min((sheet.width - 2 * GAP) / 3, sheet.height - top - _landscape_foot(sheet.width))
     half = float(np.abs(places - at).max(initial=0.0)) + 2.5 * step
     for position, kind in enumerate(DIRECTIONS):
         left = position * (side + GAP)
@@ -90,9 +103,10 @@ def landscape(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
             ax.plot(*places[moved, [along, up]], **_moved_mark(sheet.colours), zorder=5)
         sheet.write(left, TITLE, f"{kind}, {'xyz'[through]} = {number(at[through])} mm")
     _score_bar(sheet, top + side + 1.5, scale)
-    sheet.legend(
-        0.42 * sheet.width, top + side + 1.5, _landscape_legend(table, at, sheet.colours), 1
-    )
+    beside = sheet.width >= BESIDE
+    left, below = (0.42 * sheet.width, 1.5) if beside else (0.0, LANDSCAPE_FOOT + 0.5)
+    handles = _landscape_legend(table, at, sheet.colours)
+    sheet.legend(left, top + side + below, handles, 1)
 
 
 def _cell(
@@ -179,7 +193,9 @@ def front(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     score = table["stability_out"].to_numpy(dtype=float)
     keeps = table["keeps_identity"].to_numpy(dtype=bool)
     on_front = table["on_front"].to_numpy(dtype=bool)
-    ax = sheet.place(9.5, TITLE + 1, sheet.width - 10.5, sheet.height - TITLE - 1 - FRONT_FOOT)
+    ax = sheet.place(
+        9.5, TITLE + 1, sheet.width - 10.5, sheet.height - TITLE - 1 - _front_foot(sheet.width)
+    )
     plain_axes(ax)
     colours = sheet.colours
     shrink, many = crowding(len(table))
@@ -211,7 +227,9 @@ def front(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     ax.yaxis.set_major_locator(MaxNLocator(5))
     ax.set_xlabel("moved, mm", fontsize=TYPE, labelpad=1.5)
     ax.set_ylabel("stability", fontsize=TYPE, labelpad=2)
-    sheet.legend(0, sheet.height - 4 * LINE, handles, 2 if sheet.width > 95 else 1)
+    sheet.legend(
+        0, sheet.height - _front_foot(sheet.width) + 9, handles, 2 if sheet.width > 95 else 1
+    )
 
 
 def _candidate_mark(colours: Palette) -> dict[str, Any]:
@@ -234,5 +252,5 @@ def _search_gain(
     if (row := _moved_to(table)) is not None:
         moved = float(table["moved_mm"].iloc[row])
     for colour, width in ((colours.paper, 2.6), (colours.ink, 1.0)):
-        ax.vlines(moved, ends[0], ends[2], color=colour, linewidth=width, zorder=6)
-    ax.plot(moved, ends[1], **_search_mark(colours), zorder=7)
+        ax.vlines(moved, ends[0], ends[2], color=colour, linewidth=width, zorder=3.5)
+    ax.plot(moved, ends[1], **_search_mark(colours), zorder=3.6)

@@ -6,6 +6,7 @@ import re
 from collections.abc import Iterator, Mapping
 from functools import cache
 from inspect import signature
+from math import floor
 from typing import Any
 
 from jinja2 import Environment, PackageLoader, StrictUndefined
@@ -15,11 +16,11 @@ from seedaudit.consensus.ceiling import LEAST_CEILING
 from seedaudit.consensus.claims import LEVEL
 from seedaudit.consensus.regional import CALL_SHARE
 from seedaudit.consensus.resampling import SMALLEST_STRATUM, bootstrap_interval
-from seedaudit.placements import CONTROL_DISTANCE
 from seedaudit.plan import cloud_size
 from seedaudit.report import CAUTION
 from seedaudit.report.words import (
     MEASURES,
+    absent_words,
     distance_words,
     number,
     percent,
@@ -102,6 +103,7 @@ def templates() -> Environment:
     environment.filters.update(
         code=code, plain=plain, number=number, percent=percent, point=point, similarity=similarity,
         plural=plural, one_line=one_line,
+        distance_words=distance_words, absent_words=absent_words,
     )  # fmt: skip
     return environment
 
@@ -137,7 +139,7 @@ def render_methods(seed: SeedAudit, audit: Audit) -> str:
         "regional_intervals": bool(regions["reported_low"].notna().any()),
         "has_ceiling": seed.summary.get("ceiling") is not None,
         "least_ceiling": LEAST_CEILING,
-        "control_distance": CONTROL_DISTANCE,
+        "nearest_control": _nearest_control(seed),
         "tolerances": _tolerances(seed),
         "claims": study.get("claims"),
         "n_claims": sum((seed.summary.get("claims") or {}).values()),
@@ -166,6 +168,12 @@ WORTH = (
     "n_class_half_splits", "most_fragile_direction", "motion_rank_correlation", "critical_value",
 )  # fmt: skip
 """Numbers that a result need not have."""
+
+
+def _nearest_control(seed: SeedAudit) -> float | None:
+    """Distance of the nearest control seed from the reported centre, rounded down, mm."""
+    table = seed.tables.get("controls")
+    return None if table is None or not len(table) else floor(table["distance"].min() * 10) / 10
 
 
 def _tolerances(seed: SeedAudit) -> list[dict[str, Any]]:

@@ -40,9 +40,11 @@ LEGEND_WIDTH = 58.0
 """Of the legend of the cloud, mm; it stands beside the windows where there is room for both."""
 WIDE = 130.0
 """A sheet from this width on has its legends side by side with something, mm."""
+LEAST_TITLE = 33.0
+"""Least side of a window whose title stands on one line, mm."""
 NARROWEST_SLICE = 31.0
 """Of a slice with its two lines of title, mm."""
-MOST_COLUMNS = 4
+USUAL_SLICES = 4
 
 SLICE_TITLE = 2 * LINE + 0.5
 
@@ -63,9 +65,8 @@ def _aside_mark(colours: Palette) -> dict[str, Any]:
 def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
     """Panel of the cloud: three planes through the reported centre, all centres projected."""
     sheet.title("Reported seed and drawn placements", letter)
-    top = TITLE + LINE + 0.5
     beside = sheet.width >= WIDE
-    foot = 0.0 if beside else _cloud_foot(sheet.width)
+    top, foot = _cloud_head(sheet.width), 0.0 if beside else _cloud_foot(sheet.width)
     side = min(_window(sheet.width), sheet.height - top - foot)
     at = np.asarray(seed.summary["at_mm"], dtype=float)
     reach = float(seed.summary["radius_mm"]) + float(seed.summary["within_mm"])
@@ -78,8 +79,9 @@ def cloud(seed: SeedAudit, sheet: Sheet, letter: str = "") -> None:
         frame(ax, plane, sheet.colours)
         _placements(ax, seed, plane, sheet.colours)
         axis = "xyz"[plane.through]
-        label = f"{kind}, {axis} = {number(at[plane.through])} mm"
-        sheet.write(left, TITLE, label)
+        parts = kind, f"{axis} = {number(at[plane.through])} mm"
+        words = (", " if top < TITLE + 2 * LINE else "\n").join(parts)
+        sheet.write(left, TITLE, words, linespacing=1.2)
     handles = _cloud_legend(seed, sheet.colours)
     if beside:
         sheet.legend(3 * (side + GAP) + 2, top + 1, handles, 1)
@@ -92,13 +94,18 @@ def _window(width: float) -> float:
     return (width - 2 * GAP - (LEGEND_WIDTH if width >= WIDE else 0)) / 3
 
 
+def _cloud_head(width: float) -> float:
+    """Height of the titles: two lines over narrow windows, mm."""
+    return TITLE + (1 if _window(width) >= LEAST_TITLE else 2) * LINE + 0.5
+
+
 def _cloud_foot(width: float) -> float:
     return (2 if width > 105 else 4) * LINE + 1.5
 
 
 def cloud_height(width: float) -> float:
     """Height of the panel at that width, mm."""
-    return TITLE + LINE + 0.5 + _window(width) + (0 if width >= WIDE else _cloud_foot(width))
+    return _cloud_head(width) + _window(width) + (0 if width >= WIDE else _cloud_foot(width))
 
 
 def _placements(ax: Axes, seed: SeedAudit, plane: Plane, colours: Palette) -> None:
@@ -169,15 +176,18 @@ def agreement(seed: SeedAudit, sheet: Sheet, letter: str = "", places: int = 3) 
             ax.plot(at[0], at[1], **reported_mark(sheet.colours))
     if not found:
         sheet.write(room + GAP, TITLE, "No voxel is contested.")
-    used_rows = _columns(sheet.width, len(shown))[1]
+    used_rows = -(-len(shown) // columns)
     _agreement_key(sheet, TITLE + used_rows * pitch - GAP + 1.5)
 
 
 def _columns(width: float, count: int) -> tuple[int, int]:
-    """Columns and rows of so many slices on a sheet of that width."""
-    fit = max(1, int((width + GAP) / (NARROWEST_SLICE + GAP)))
-    columns = fit if count > MOST_COLUMNS else min(fit, MOST_COLUMNS)
-    return columns, -(-count // columns)
+    """Columns and rows of so many slices on a sheet of that width, as even as can be.
+
+    A few slices keep the size that they have among `USUAL_SLICES`.
+    """
+    count = max(count, USUAL_SLICES)
+    rows = -(-count // max(1, int((width + GAP) / (NARROWEST_SLICE + GAP))))
+    return -(-count // rows), rows
 
 
 def agreement_height(width: float, seed: SeedAudit, most_slice: float, places: int = 3) -> float:

@@ -110,7 +110,7 @@ def _columns(width: float) -> int:
 
 
 def _decay_legend_columns(width: float) -> int:
-    return 3 if width >= 100 else 2
+    return 3 if width >= 110 else 2
 
 
 def decay_height(width: float, seed: SeedAudit) -> float:
@@ -147,7 +147,7 @@ def _fit(seed: SeedAudit, measure: str) -> pd.DataFrame:
 
 def _undefined(seed: SeedAudit) -> bool:
     """Whether a Dice is undefined somewhere, which takes a line of its own."""
-    return any(np.isnan(_values(seed, measure)).any() for measure in list(MEASURES)[:2])
+    return any(len(_head(seed, measure)) > 2 for measure in MEASURES)
 
 
 def _limits(seed: SeedAudit) -> tuple[float, float]:
@@ -171,8 +171,8 @@ def _head(seed: SeedAudit, measure: str) -> list[str]:
         lines[1] = "empty as reported"
     values = _values(seed, measure)
     missing = int(np.isnan(values).sum())
-    if measure.startswith("dice") and missing:
-        lines.append(f"{missing} of {len(values)} undefined")
+    if measure.startswith("dice") and 0 < missing < len(values):
+        lines.append(f"{missing} undefined")
     return lines
 
 
@@ -342,13 +342,8 @@ def _rose_list(
 ) -> None:
     pitch = min(2 * LINE + 0.7, (sheet.height - top) / len(limits))
     fragile = seed.summary.get("most_fragile_direction")
-    counts = seed.tables["tolerance"].set_index(["measure", "direction"])["n"]
     for row, (way, limit) in enumerate(limits.items()):
-        if limit is None:
-            known = counts.get((rose_measure(seed), way), 0)
-            words = f"unknown ({int(known)} pl.)"
-        else:
-            words = distance_words(limit["mm"], limit["censored"])
+        words = "unknown" if limit is None else distance_words(limit["mm"], limit["censored"])
         weight = "bold" if way == fragile else "normal"
         sheet.write(left, top + row * pitch, f"{way}\n{words}", linespacing=1.15, weight=weight)
 

@@ -141,14 +141,14 @@ def _map_clauses(numbers: Mapping[str, Any]) -> list[str]:
             nothing = ", and ".join(_empty_tail(numbers, tail) for tail in tails)
         return [
             f"{nothing}, so there is no reported map to compare with",
-            f"the unthresholded maps have a median spatial r of {alike} with the reported one",
+            f"unthresholded, the median spatial r with the reported one is {alike}",
         ]
     told = [tail for tail, count in zip(tails, voxels, strict=True) if count]
     overlap = " and ".join(_overlap(numbers, tail, first=tail == told[0]) for tail in told)
     clauses = [f"median Dice {overlap}"]
     clauses += [_empty_tail(numbers, tail) for tail in tails if tail not in told]
     if sum(voxels) < NEARLY_EMPTY * numbers["n_analysis_voxels"]:
-        clauses.append("so little is there that agreement on the rest of the brain says nothing")
+        clauses.append("so little that agreement on the rest of the brain says nothing")
     return clauses
 
 
@@ -204,11 +204,14 @@ def _region_clause(numbers: Mapping[str, Any], regions: Iterable[tuple[str, str]
         names.setdefault(state, []).append(" ".join(str(name).split()))
     parts = []
     for state in told:
-        few = names[state] if len(names[state]) == counts[state] <= NAMED else []
-        few = few if state != "n/a" else []
-        short = few and max(map(len, few)) <= LONGEST_NAME
-        parts.append(f"{joined(few) if short else counts[state]} {words[state]}")
+        few = names[state] if len(names[state]) == counts[state] else []
+        named = state != "n/a" and 0 < len(few) <= NAMED and all(map(_fits_in_a_list, few))
+        parts.append(f"{joined(few) if named else counts[state]} {words[state]}")
     return f"of {total} regions, {', '.join(parts)}"
+
+
+def _fits_in_a_list(name: str) -> bool:
+    return len(name) <= LONGEST_NAME and not set(name) & set(",;:")
 
 
 def joined(names: Sequence[str]) -> str:

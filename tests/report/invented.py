@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from seedaudit.consensus.tolerance import decay_fits, decay_table, tolerance_table
 from seedaudit.report.words import verdict
 from seedaudit.results import Audit, SeedAudit, frozen_table, map_image
 from seedaudit.space.grid import Grid
@@ -73,6 +74,7 @@ def head_volumes(
     volumes = {name: np.where(inner, volume, np.nan) for name, volume in volumes.items()}
     volumes["contested"] = inner & (between[0] | between[1])
     volumes["analysis_mask"] = inner
+    volumes["region_labels"] = np.where(brain, 1 + (xyz[..., 1] > -20), 0)
     volumes["anatomy"] = np.where(brain, np.where(ventricle, 0.2, 0.55 + 0.4 * folds), 0.0)
     return volumes
 
@@ -176,6 +178,87 @@ def invented_regions(names: Sequence[str], states: Sequence[str], *, single: boo
     return frozen_table("regions", columns)
 
 
+def invented_worth(
+    tables: dict[str, pd.DataFrame], claims: Sequence[str], *, ceiling: bool, single: bool
+) -> tuple[dict[str, pd.DataFrame], dict[str, Any]]:
+    """Tables of what similarities are worth, and the headline numbers that go with them."""
+    rng = np.random.default_rng(7)
+    placed = tables["placements"].set_index("placement")
+    similar = tables["similarity"]
+    distance = similar["distance"].to_numpy()
+    if ceiling:
+        relative = np.where(distance > 0, 1.1 - 0.04 * distance - 0.3 * rng.random(len(similar)), 1)
+        similar = similar.assign(ceiling_relative=relative)
+    shifts = placed.loc[similar["placement"][1:], ["dx", "dy", "dz"]].to_numpy()
+    measures = ["dice_positive", "dice_negative", "spatial_r", *["ceiling_relative"] * ceiling]
+    fits = decay_fits(shifts, {name: similar[name].to_numpy()[1:] for name in measures})
+    steps = np.arange(0, 8.25, 0.25)
+    levels = {"dice_positive": 0.6, "dice_negative": 0.3, "spatial_r": 0.7, "ceiling_relative": 1.0}
+    floors = {"dice_positive": 0.02, "spatial_r": -0.05, "ceiling_relative": 0.0}
+    geometry = {"spatial_r": np.clip(1 - steps / 9, 0, 1)}
+    decay = decay_table(fits, steps, levels if ceiling else {}, floors, geometry)
+    limits = tolerance_table(fits)
+    verdicts = np.array(["holds", "breaks", "open"], dtype=object)[np.arange(len(claims)) % 3]
+    effect = rng.normal(0.3, 0.2, len(claims))
+    missing = np.nan if single else 1.0
+    told = {
+        "seed": ["posterior"] * len(claims),
+        "claim": list(claims),
+        "target": "region",
+        "direction": "positive",
+        "reported_effect": effect,
+        "reported_low": (effect - 0.1) * missing,
+        "reported_high": (effect + 0.1) * missing,
+        "passes_reported": verdicts != "open",
+        "share_passing": np.where(verdicts == "holds", 1.0, rng.random(len(claims))) * missing,
+        "effect_min": effect - 0.25,
+        "effect_max": effect + 0.05,
+        "verdict": verdicts,
+        "note": "",
+    }
+    regions = tables["regions"]
+    made = {
+        "similarity": similar,
+        "decay": frozen_table("decay", {"seed": ["posterior"] * len(decay["n"]), **decay}),
+        "tolerance": frozen_table(
+            "tolerance", {"seed": ["posterior"] * len(limits["n"]), **limits}
+        ),
+        "claims": frozen_table("claims", told),
+        "controls": frozen_table("controls", {"seed": ["posterior"] * 5, "distance": [41.26] * 5}),
+        "regions": regions.assign(ceiling=regions["stability"] * 0.9 if ceiling else np.nan),
+    }
+    known = made["tolerance"].query("direction == 'all'").dropna(subset="tolerance")
+    tolerances = {
+        row.measure: {"target": row.target, "mm": row.tolerance, "censored": bool(row.censored)}
+        for row in known.itertuples()
+    }
+    first = next(iter(tolerances), None)
+    numbers = {
+        "ceiling": 0.71 if ceiling else None,
+        "ceiling_relative": 0.8765 if ceiling else None,
+        "ceiling_relative_low": 0.81 if ceiling and not single else None,
+        "ceiling_relative_high": 0.93 if ceiling and not single else None,
+        "n_half_splits": 35,
+        "n_class_half_splits": 4,
+        "n_class_placements": 24,
+        "floor": -0.051,
+        "n_controls": 5,
+        "smoothness_mm": 6.28,
+        "tolerances": tolerances,
+        "tolerance_measure": first,
+        "tolerance_target": tolerances[first]["target"] if first else None,
+        "tolerance_mm": tolerances[first]["mm"] if first else None,
+        "tolerance_censored": tolerances[first]["censored"] if first else None,
+        "most_fragile_direction": "posterior",
+        "most_fragile_measure": "ceiling_relative" if "ceiling_relative" in tolerances else first,
+        "claims": {word: int((verdicts == word).sum()) for word in ("holds", "breaks", "open")},
+        "motion_rank_correlation": -0.43,
+        "effect_kind": "mean",
+        "notes": [],
+    }
+    return made, numbers
+
+
 def invented_summary(tables: dict[str, pd.DataFrame], **others: Any) -> dict[str, Any]:
     """The headline numbers that go with the tables."""
     drawn = tables["similarity"].iloc[1:]
@@ -226,6 +309,9 @@ def invented_seed(
     nothing: bool = False,
     grid: Grid | None = None,
     storage: Any = EVERYWHERE,
+    worth: bool = False,
+    ceiling: bool = True,
+    claims: Sequence[str] = ("Parietal", "Visual", "Motor"),
     **summary: Any,
 ) -> SeedAudit:
     """One seed's result; see the tests for what each option makes awkward."""
@@ -248,6 +334,10 @@ def invented_seed(
         summary = {"stability_low": None, "stability_high": None, "df": None, "statistic": "z"} | (
             summary
         )
+    if worth:
+        more, others = invented_worth(tables, claims, ceiling=ceiling, single=single)
+        tables |= more
+        summary = others | summary
     numbers = invented_summary(tables, n_participants=participants, **summary)
     states = zip(tables["regions"]["region"], tables["regions"]["state"], strict=True)
     numbers["sentence"] = verdict(numbers, states)
@@ -301,6 +391,7 @@ def invented_audit(*seeds: SeedAudit, **study: Any) -> Audit:
             "per_tail": False,
             "min_extent": 0.0,
             "neighbours": 26,
+            "rearrangements": 5000,
         },
         "consensus": {"safe": 0.95},
     } | study

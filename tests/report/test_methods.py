@@ -10,7 +10,7 @@ from markdown_it import MarkdownIt
 
 from seedaudit.report import write_report
 from seedaudit.report.methods import code, plain
-from seedaudit.report.words import methods_text
+from seedaudit.report.words import distance_words, methods_text
 from tests.report.invented import MARKUP, invented_audit, invented_seed
 
 PLAIN_TAGS = {"h1", "h2", "p", "strong", "em", "code", "ul", "li"}
@@ -125,6 +125,65 @@ def test_each_rule_is_described(rule, words, warned):
     assert "Benjamini" not in text
 
 
+def worthy(**options):
+    """An audit with ceiling, floor, tolerance and claims."""
+    seed = invented_seed(worth=True, **options)
+    return invented_audit(seed, claims={"table": "claims.tsv", "smallest_effect": 0.07})
+
+
+def test_what_similarities_are_worth_is_told_from_the_run():
+    audit = worthy()
+    text, told = text_of(audit), audit.seeds[0].summary
+    limits = told["tolerances"]
+    for words in (
+        "8 folds of participants were put into two halves in 35 ways",
+        "the mean spatial correlation, 0.71, is the ceiling",
+        "its mean over the placements is 0.876 (95 % delete-a-fold jackknife interval 0.81 to 0.93",
+        "means over 4 splits and 24 placements",
+        "5 control seeds, drawn at random 41.2 mm or more from the reported centre",
+        "(spatial correlation −0.051)",
+        "a smoothness of 6.28 mm",
+        f"{distance_words(limits['dice_positive']['mm'], False)} for Dice + of 0.8; ",
+        "the most fragile direction was posterior",
+        "3 claims were tested",
+        "in 5000 rearrangements",
+        "within 0.07 in Fisher z",
+        "Verdicts: 1 holds, 1 breaks, 1 open.",
+        "(rank correlation −0.43)",
+    ):
+        assert words in text, words
+    undone = section(text, "What was not done")
+    for words in ("ceiling", "floor", "tolerance", "claims"):
+        assert words not in undone
+    for name in ("Nieuwenhuis", "Freedman", "Winkler", "Holm", "Schuirmann", "Barlow", "Forman"):
+        assert name in section(text, "References")
+        assert name not in text_of(invented_audit())
+
+
+def test_one_participant_has_halves_of_the_series_and_no_test_of_claims():
+    text = text_of(worthy(participants=1))
+    assert "The time series were cut in halves" in text
+    assert "The claims were not tested" in section(text, "What was not done")
+    assert "Nieuwenhuis" not in text
+    assert "Busing" not in text
+
+
+def test_a_ceiling_that_cannot_be_used_is_said():
+    text = text_of(worthy(ceiling_relative=None, ceiling_relative_low=None))
+    assert "No ceiling-relative stability was formed" in section(text, "What was not done")
+    assert "its mean over the placements" not in text
+
+
+def test_the_family_wise_rule_gives_its_critical_value():
+    audit = worthy(critical_value=5.4321)
+    audit.provenance["study"]["threshold"]["rule"] = "fwe"
+    text = text_of(audit)
+    assert "a family-wise error rate of 0.05 over the analysis voxels" in text
+    assert "(sign flips; Freedman & Lane 1983; Winkler et al. 2014)" in text
+    assert "its critical value, 5.432, was used for all placements" in text
+    assert "was not controlled" not in section(text, "What was not done")
+
+
 def test_talairach_seeds_show_both_coordinates():
     audit = invented_audit()
     audit.provenance["study"]["seed"][0] |= {"space": "talairach", "at": [-5, -49, 40]}
@@ -138,6 +197,8 @@ def test_only_cited_references_are_listed_and_all_cited_are():
     for audit in (
         invented_audit(),
         invented_audit(invented_seed(participants=1, names=[]), cleaning=None),
+        worthy(),
+        worthy(participants=1),
     ):
         text = text_of(audit)
         body, listed = text.split("## References")
@@ -176,7 +237,7 @@ def test_ordinary_text_has_no_entities():
 
 
 def test_no_line_of_the_template_runs_into_the_next():
-    for audit in (invented_audit(), invented_audit(cleaning=None)):
+    for audit in (invented_audit(), invented_audit(cleaning=None), worthy()):
         text = text_of(audit)
         assert not re.search(r"[a-z)][.;][A-Z]", text)
         assert "  " not in text
@@ -222,7 +283,7 @@ def test_reports_go_to_the_folder_of_each_seed(tmp_path):
     second = type(first)("other", dict(first.summary) | {"name": "other"}, first.tables, first.maps)
     write_report(invented_audit(first, second), tmp_path)
     names = {
-        "figure.pdf", "figure.svg", "figure.png", "figure_caption.md", "methods.md",
+        "figure.pdf", "figure.svg", "figure.png", "figure_caption.md", "methods.md", "report.html",
     }  # fmt: skip
     for name in ("posterior", "other"):
         assert {path.name for path in (tmp_path / name).iterdir()} == names
