@@ -347,6 +347,7 @@ def test_band_confounds_and_censoring(tmp_path):
     rows.to_csv(tmp_path / "runs.tsv", sep="\t", index=False)
     content["data"] |= {"runs": str(tmp_path / "runs.tsv")}
     content["placements"] |= {"count": 3}
+    content.pop("steadier", None)  # needs two participants
     result = audit(Study.from_mapping(content, DEMO))
     mask = load64(DEMO / "mask.nii.gz")
     at, radius = study.seed[0].at, study.seed[0].radius

@@ -185,7 +185,9 @@ def test_images_carry_both_mni_forms(study: Path) -> None:
     brightness = bold.get_fdata()[..., 0][~outside]
     assert brightness.min() > 0
     low, middle, high = np.quantile(brightness, (0.1, 0.5, 0.99))
-    assert low < 820 and 800 < middle < 950 and high > 1000
+    assert low < 820
+    assert 800 < middle < 950
+    assert high > 1000
 
 
 def test_stored_steps_scale_back_to_the_signal(tmp_path: Path) -> None:
@@ -221,7 +223,8 @@ def test_tables_of_the_study(study: Path) -> None:
         missing = table.isna()
         late = [name for name in table if name.endswith("_derivative")]
         assert len(late) == 6
-        assert missing.iloc[0].sum() == 7 and not missing.iloc[1:].any(axis=None)
+        assert missing.iloc[0].sum() == 7
+        assert not missing.iloc[1:].any(axis=None)
         assert missing.loc[0, [*late, "framewise_displacement"]].all()
         # Power et al. 2012, as sums written out: 50 mm turns radian into mm.
         for t in (1, 57, len(table) - 1):
@@ -232,7 +235,8 @@ def test_tables_of_the_study(study: Path) -> None:
 
 def test_truth_agrees_with_the_study_file_and_the_label_image(study: Path, truth: dict) -> None:
     seed = tomllib.loads((study / "study.toml").read_text())["seed"][0]
-    assert seed["at"] == truth["seed"]["at"] and seed["radius"] == truth["seed"]["radius"]
+    assert seed["at"] == truth["seed"]["at"]
+    assert seed["radius"] == truth["seed"]["radius"]
     assert truth["border"]["distance"] == TINY.border_distance
     assert set(truth["claims"]) == set(read_tsv(study / "claims.tsv").claim)
     at = np.array(truth["seed"]["at"])
@@ -250,7 +254,8 @@ def test_truth_agrees_with_the_study_file_and_the_label_image(study: Path, truth
 
 def test_participants_have_borders_of_their_own(truth: dict) -> None:
     found = list(truth["border"]["distance_per_participant"].values())
-    assert len(set(found)) == len(found) and np.std(found) > 0.5
+    assert len(set(found)) == len(found)
+    assert np.std(found) > 0.5
     warps = draw_warps(np.random.default_rng(5), 40, 2.0)
     at = np.array([-8.0, -57.0, 28.0])
     moves = np.array([warp(at[None])[0] - at for warp in warps])
@@ -261,7 +266,8 @@ def test_participants_have_borders_of_their_own(truth: dict) -> None:
     assert np.corrcoef(moves[:, 1], np.array(shifts, dtype=float))[0, 1] > 0.8
     centres = build_brain(8.0).voxels.xyz
     first, second = (network_loads(centres, 8.0, warp) for warp in warps[:2])
-    assert np.abs(first - second).max() > 0.3 and first.sum(axis=1).max() <= 1
+    assert np.abs(first - second).max() > 0.3
+    assert first.sum(axis=1).max() <= 1
 
 
 def test_expected_correlations_match_a_simulation() -> None:
@@ -294,7 +300,8 @@ def test_haemodynamic_response_is_glovers() -> None:
     response = haemodynamic_response(times)
     # Glover (1999), from memory: the first term peaks at 6 x 0.9 s, an undershoot follows.
     assert times[response.argmax()] == pytest.approx(5.4, abs=0.4)
-    assert -0.4 < response.min() < -0.1 and 10 < times[response.argmin()] < 14
+    assert -0.4 < response.min() < -0.1
+    assert 10 < times[response.argmin()] < 14
     # nilearn's response has the same form with gamma densities of slightly other shape.
     other = glover_hrf(t_r=0.1, oversampling=1, time_length=32.0)
     assert np.corrcoef(response, other[: len(response)])[0, 1] > 0.97

@@ -9,6 +9,7 @@ import pytest
 from markdown_it import MarkdownIt
 
 from seedaudit.report import write_report
+from seedaudit.report.figures import Drawing
 from seedaudit.report.methods import code, plain
 from seedaudit.report.words import distance_words, methods_text
 from tests.report.invented import MARKUP, invented_audit, invented_seed
@@ -262,7 +263,8 @@ def test_markup_of_the_user_is_harmless_in_methods(name):
 
 @pytest.mark.parametrize("name", MARKUP)
 def test_markup_of_the_user_is_harmless_in_the_caption(name, tmp_path):
-    write_report(invented_audit(invented_seed(names=[name])), tmp_path)
+    seed = invented_seed(names=[name], worth=True, claims=[name])
+    write_report(invented_audit(seed), tmp_path, Drawing(formats=()))
     text = (tmp_path / "figure_caption.md").read_text(encoding="utf-8")
     page = Rendered(text)
     assert page.tags == {"h2", "p"}
