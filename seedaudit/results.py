@@ -139,6 +139,8 @@ class Audit:
 
     def plot(self, panel: str, ax: Axes | None = None, **options: Any) -> Axes:
         """Draw one panel of the first seed's figure."""
+        if panel == "seeds":
+            options = {"between": self.between, **options}
         return self.seeds[0].plot(panel, ax, **options)
 
     def save(self, folder: str | Path, *, replace: bool = False) -> Path:

@@ -8,6 +8,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
+from seedaudit.dictionary import ALL_COLUMNS, COUNT
 from seedaudit.guards import inert, live
 from seedaudit.results import SIGNIFICANT_DIGITS
 
@@ -35,6 +36,9 @@ WORDS = (
 
 NUMBERS = (("tolerance", "target"),)
 """Tables in which a column of such a name holds numbers after all."""
+
+NAMED = ("placement", "placement_a", "placement_b", "index")
+"""Columns of whole numbers that count nothing."""
 
 _VERDICTS = {True: "true", False: "false", None: "n/a"}
 """Whether two seeds are interchangeable: the one column that may say that it cannot be told."""
@@ -84,8 +88,16 @@ def read_table(path: Path) -> pd.DataFrame:
             table[key] = table[key].fillna("n/a" if key == "state" else "").map(live)
         elif key == "used":
             table[key] = table[key].astype(bool)
+        elif table[key].dtype.kind == "i" and not _whole(path.stem, key):
+            table[key] = table[key].astype(np.float64)  # all of them happen to be whole
         elif key == "interchangeable":
             told = {text: verdict for verdict, text in _VERDICTS.items()}
             cells = [told.get(str(cell).lower()) for cell in table[key]]
             table[key] = pd.Series(cells, dtype=object)
     return table
+
+
+def _whole(table: str, key: str) -> bool:
+    """Whether a column holds whole numbers: counts, and numbers that stand for something."""
+    columns = ALL_COLUMNS.get(table, {})
+    return key not in columns or key in NAMED or columns[key][1] == COUNT

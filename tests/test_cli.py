@@ -59,7 +59,7 @@ def test_version(capsys):
 def test_help_of_the_program(capsys):
     assert main(["--help"]) == 0
     told = capsys.readouterr().out
-    for command in ("run", "check", "synth"):
+    for command in ("run", "check", "draw", "synth"):
         assert f"  {command} " in told
     assert " ".join(told.split()).count(CAUTION) == 1
 
@@ -143,6 +143,25 @@ def test_json_alone_on_standard_output(folder, capsys):
     summary = json.loads(told.out)
     assert summary == json.loads((folder / "audit" / "summary.json").read_text())
     assert "reading participants: 3/3" in told.err
+
+
+def test_warnings_are_told_once_and_counted_at_the_end(folder, capsys):
+    assert main(["run", "study.toml"]) == 0
+    told = capsys.readouterr().err
+    assert told.count("no analysis voxel in region Outside") == 1
+    before, _, after = told.partition("reading participants")
+    assert "no analysis voxel in region Outside" in before
+    assert after.splitlines()[-2].endswith("warnings, 1 of them new:")
+    assert "1 participant lacks some mask voxels" in after.splitlines()[-1]
+
+
+def test_warnings_from_the_pass_are_listed_at_the_end(capsys):
+    cli._repeat_warnings(["a", "b", "c"], ["a", "c"], quiet=False)
+    assert capsys.readouterr().err.splitlines() == ["3 warnings, 1 of them new:", "  - b"]
+    cli._repeat_warnings(["a"], ["a"], quiet=False)
+    assert capsys.readouterr().err == "1 warning, as listed above\n"
+    cli._repeat_warnings(["a"], [], quiet=True)
+    assert capsys.readouterr().err == ""
 
 
 def test_json_of_a_failure_is_nothing(folder, capsys):

@@ -17,6 +17,7 @@ from seedaudit.auditing import audit
 from seedaudit.dictionary import COLUMNS, MAPS
 from seedaudit.errors import DataError, StudyError
 from seedaudit.report import write_report
+from seedaudit.results import frozen_table
 from seedaudit.store import load_audit, read_table, save, write_table
 from seedaudit.study import Study
 from tests.small_study import write_small_study
@@ -184,3 +185,13 @@ def test_tables_round_trip_awkward_cells(tmp_path):
     again = read_table(tmp_path / "t.tsv")
     expected = table.assign(region=["1", "n/a region", "tab and line", '"quoted"'])
     pd.testing.assert_frame_equal(again, expected, check_dtype=False)
+
+
+def test_fractions_that_happen_to_be_whole_stay_fractions(tmp_path):
+    """So that a page of the folder is written with the same digits as one of the run."""
+    table = frozen_table("regions", {"index": [1, 2], "n_voxels": [3, 4], "sign_share": [1.0, 0.0]})
+    write_table(tmp_path / "regions.tsv", table)
+    again = read_table(tmp_path / "regions.tsv")
+    pd.testing.assert_frame_equal(again, table)
+    assert again["sign_share"].dtype == np.float64
+    assert again["n_voxels"].dtype == np.int64
