@@ -59,7 +59,7 @@ def ready(
     replace: bool,
 ) -> tuple[Any, Path, Any]:
     """The plan of what is asked, the folder of its result and its needs, all problems at once."""
-    from seedaudit.budget import fitted, parse_size
+    from seedaudit.budget import fitted, parse_size, usual_memory
     from seedaudit.forecast import forecast, strains
     from seedaudit.preflight import make_plan
     from seedaudit.workers import available_cores
@@ -71,8 +71,8 @@ def ready(
     plan = findings.attempt(make_plan, study)
     findings.raise_if_any()
     assert plan is not None
-    if memory is not None:
-        plan = fitted(plan, workers or available_cores(), parse_size(memory))
+    size = usual_memory() if memory is None else parse_size(memory)
+    plan = fitted(plan, workers or available_cores(), size)
     needs = forecast(plan, workers or available_cores())
     short = strains(needs, folder)
     plan = dataclasses.replace(plan, warnings=(*plan.warnings, *short))

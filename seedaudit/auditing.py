@@ -10,6 +10,7 @@ from typing import Any, Protocol
 
 from threadpoolctl import threadpool_limits
 
+from seedaudit.budget import fitted, usual_memory
 from seedaudit.conclusions import conclude_seed
 from seedaudit.errors import Problem, StudyError, printable
 from seedaudit.groupstate import group_state
@@ -87,7 +88,9 @@ def audit(
     if workers < 1:
         raise StudyError(Problem("workers", f"is {workers}", "1 or more"))
     progress = progress or Silence()
-    plan = study if isinstance(study, Plan) else make_plan(study)
+    plan = study
+    if not isinstance(plan, Plan):
+        plan = fitted(make_plan(plan), workers, usual_memory())
     reuse_freed_memory()
     started = time.monotonic()
 

@@ -4,9 +4,14 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import psutil
+
 from seedaudit.errors import Problem, StudyError
 from seedaudit.forecast import forecast
 from seedaudit.plan import Plan
+
+USUAL_SHARE = 0.8
+"""Share of the machine's memory that a run keeps to when nothing is said."""
 
 LEAST_FOLDS = 4
 """Folds below which a jackknife interval says little; only the last resort goes lower."""
@@ -34,6 +39,11 @@ def parse_size(text: str) -> float:
     return size
 
 
+def usual_memory() -> float:
+    """Bytes that a run keeps to when nothing is said; of all memory, so that it does not vary."""
+    return USUAL_SHARE * float(psutil.virtual_memory().total)
+
+
 def fitted(plan: Plan, workers: int, memory: float) -> Plan:
     """The plan as it fits into so many bytes; what was given up stands among its choices.
 
@@ -58,8 +68,9 @@ def fitted(plan: Plan, workers: int, memory: float) -> Plan:
     least = forecast(replace(plan, folds=2, precision="float32"), workers).memory
     raise StudyError(
         Problem(
-            "--memory",
-            f"{memory / 1e9:.1f} GB; this study needs about {least / 1e9:.1f} GB at the least",
+            "memory",
+            f"{memory / 1e9:.1f} GB to keep to; this study needs about {least / 1e9:.1f} GB at the "
+            "least",
             "enough memory for the state of all placements",
             "fewer placements or workers, a smaller mask, or a machine with more memory",
         )

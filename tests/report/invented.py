@@ -211,6 +211,7 @@ def invented_worth(
         "reported_high": (effect + 0.1) * missing,
         "passes_reported": verdicts != "open",
         "share_passing": np.where(verdicts == "holds", 1.0, rng.random(len(claims))) * missing,
+        "first_failure_mm": np.where(verdicts == "holds", np.nan, 2.5),
         "effect_min": effect - 0.25,
         "effect_max": effect + 0.05,
         "verdict": verdicts,

@@ -17,6 +17,7 @@ from matplotlib.colors import to_hex, to_rgb
 from matplotlib.figure import Figure
 from matplotlib.patches import Polygon
 from matplotlib.text import Text
+from matplotlib.transforms import Bbox
 from PIL import Image
 
 from seedaudit.report.charts import MOST_REGIONS, binned_medians, shown_claims, shown_regions
@@ -76,10 +77,14 @@ PAGES = [
 
 @pytest.fixture(scope="module", params=PAGES, ids=str)
 def drawn(request):
-    """A whole figure, its texts, and how wide it should be, mm."""
+    """A whole figure, what stands on it, and how wide it should be, mm."""
     case, width = request.param
     page = figure(invented_seed(**{"worth": True} | CASES[case]), Drawing(width=width))
-    return page, drawn_texts(page), width
+    return page, boxes_of(page), width
+
+
+def boxes_of(page: Figure) -> list[tuple[Text, Bbox]]:
+    return [(text, text.get_window_extent()) for text in drawn_texts(page)]
 
 
 def all_axes(page: Figure) -> list[Axes]:
@@ -95,18 +100,18 @@ def test_it_is_as_wide_as_asked_and_fits_one_page(drawn):
 
 
 def test_no_type_is_smaller_than_7_points(drawn):
-    _, texts, _ = drawn
-    assert len(texts) > 20
-    assert min(text.get_fontsize() for text in texts) >= 7
+    _, boxes, _ = drawn
+    assert len(boxes) > 20
+    assert min(text.get_fontsize() for text, _ in boxes) >= 7
 
 
 def test_no_text_overlaps_another_or_leaves_the_page(drawn):
-    page, texts, _ = drawn
-    boxes = [(t.get_text(), t.get_window_extent().shrunk(0.98, 0.94)) for t in texts]
-    clashes = [(a, b) for (a, ba), (b, bb) in combinations(boxes, 2) if ba.overlaps(bb)]
+    page, boxes, _ = drawn
+    inner = [(text.get_text(), box.shrunk(0.98, 0.94)) for text, box in boxes]
+    clashes = [(a, b) for (a, ba), (b, bb) in combinations(inner, 2) if ba.overlaps(bb)]
     assert not clashes
     width, height = page.bbox.size
-    for text, box in boxes:
+    for text, box in inner:
         assert box.x0 >= 0, text
         assert box.y0 >= 0, text
         assert box.x1 <= width, text
@@ -114,14 +119,12 @@ def test_no_text_overlaps_another_or_leaves_the_page(drawn):
 
 
 def test_no_text_lies_over_the_axes_of_another_part(drawn):
-    page, texts, _ = drawn
+    page, boxes, _ = drawn
     for ax in all_axes(page):
         frame = ax.get_window_extent().shrunk(0.99, 0.99)
+        over = [text for text, box in boxes if box.overlaps(frame)]
         own = set(ax.findobj(Text))
-        over = [
-            t.get_text() for t in texts if t not in own and t.get_window_extent().overlaps(frame)
-        ]
-        assert not over
+        assert [text.get_text() for text in over if text not in own] == []
 
 
 def test_no_axes_overlap(drawn):
@@ -132,13 +135,13 @@ def test_no_axes_overlap(drawn):
 
 
 def test_every_state_stands_as_a_word():
-    page = figure(invented_seed())
+    page = draw_panel(invented_seed(), "regions").figure
     words = {text.get_text() for text in drawn_texts(page)}
     assert set(STATES) <= words
 
 
 def test_markup_in_names_is_shown_as_it_is():
-    page = figure(invented_seed(names=MARKUP))
+    page = draw_panel(invented_seed(names=MARKUP), "regions").figure
     texts = {text.get_text(): text for text in drawn_texts(page)}
     assert set(MARKUP) <= set(texts)
     assert not any(texts[name].get_parse_math() for name in MARKUP)
@@ -426,7 +429,7 @@ def test_the_other_figures_hold_together(name, width):
     seed = searched(30)
     seed = replace(seed, tables=dict(seed.tables) | {"radii": sources(["A", LONG, *MARKUP])})
     page = figure(seed, Drawing(width=width), name=name)
-    test_no_text_overlaps_another_or_leaves_the_page((page, drawn_texts(page), width))
+    test_no_text_overlaps_another_or_leaves_the_page((page, boxes_of(page), width))
     test_no_axes_overlap((page, None, width))
 
 
