@@ -224,7 +224,7 @@ def test_stated_decisions(name, try_it):
 def test_talairach_seed_is_converted(try_it):
     """The MNI point against nilearn-free arithmetic: the inverse of the published 4 x 4 matrix.
 
-    Lancaster et al. 2007 Hum. Brain Mapp. 28:1194, pooled FSL/SPM matrix, from memory.
+    Lancaster et al. 2007 Hum. Brain Mapp. 28:1194, pooled matrix, from memory.
     """
     pooled = np.array([
         [0.9357, 0.0029, -0.0072, -1.0423], [-0.0065, 0.9396, -0.0726, -1.3940],

@@ -51,7 +51,7 @@ def test_files_of_the_folder(folder):
     names = {
         "summary.json", "provenance.json", "dataset_description.json", "methods.md",
         "figure.pdf", "figure.svg", "figure.png", "figure_caption.md", "report.html",
-        "tables", "maps",
+        "motion.pdf", "motion.svg", "motion.png", "motion_caption.md", "tables", "maps",
     }  # fmt: skip
     assert {path.name for path in folder.iterdir()} == names
     for table in (folder / "tables").glob("*.tsv"):

@@ -208,6 +208,17 @@ def _radii(seed: SeedAudit) -> str:
     )
 
 
+def _motion(seed: SeedAudit) -> str:
+    found = seed.summary.get("motion_rank_correlation")
+    rank = "" if found is None else f" (rank correlation {number(found, 2)})"
+    return (
+        "For each participant, the median and the least spatial correlation of the drawn "
+        "placements' maps with the reported placement's, against mean framewise "
+        f"displacement{rank}. A check of who drives the instability, and not a test of the "
+        "hypothesis."
+    )
+
+
 CAPTIONS: dict[str, Callable[[SeedAudit], str]] = {
     "cloud": _cloud,
     "agreement": _agreement,
@@ -218,6 +229,7 @@ CAPTIONS: dict[str, Callable[[SeedAudit], str]] = {
     "landscape": _landscape,
     "front": _front,
     "radii": _radii,
+    "motion": _motion,
 }
 
 
@@ -249,6 +261,7 @@ PANEL_WORDS = {
     "landscape": "slices with the stability of every candidate seed",
     "front": "stability against distance moved",
     "radii": "sources of variation by region",
+    "motion": "similarity of the shifted maps against motion, by participant",
 }
 
 

@@ -16,6 +16,7 @@ from seedaudit.report.captions import alternative_text, caption, lettered
 from seedaudit.report.charts import claims, claims_height, regions, regions_height
 from seedaudit.report.landscape import front, front_height, landscape, landscape_height
 from seedaudit.report.methods import plain
+from seedaudit.report.motion import motion, motion_height, motion_known
 from seedaudit.report.panels import agreement, agreement_height, cloud, cloud_height
 from seedaudit.report.reach import decay, decay_height, rose, rose_height
 from seedaudit.report.several import radii, radii_height, seeds, seeds_height
@@ -59,6 +60,7 @@ PANELS: dict[str, Callable[..., None]] = {
     "front": front,
     "seeds": seeds,
     "radii": radii,
+    "motion": motion,
 }
 """Panels by name; each draws one seed on a sheet."""
 
@@ -66,6 +68,7 @@ FIGURES: dict[str, tuple[tuple[str, ...], ...]] = {
     "figure": (("cloud",), ("agreement",), ("decay", "rose"), ("regions", "claims")),
     "steadier": (("landscape",), ("front",)),
     "radii": (("radii",),),
+    "motion": (("motion",),),
 }
 """Rows of panels by the name of the file."""
 
@@ -109,6 +112,8 @@ class Drawing:
 
 def present(name: str, seed: SeedAudit) -> bool:
     """Whether the result holds what a figure shows."""
+    if name == "motion":
+        return motion_known(seed)
     return name == "figure" or name in seed.tables
 
 
@@ -196,6 +201,7 @@ def _height(panel: str, width: float, seed: SeedAudit, room: float = np.inf) -> 
         "landscape": lambda: landscape_height(width),
         "front": lambda: front_height(width),
         "radii": lambda: radii_height(tables.get("radii")),
+        "motion": lambda: motion_height(width),
     }
     return heights[panel]()
 
