@@ -79,7 +79,6 @@ def read_table(path: Path) -> pd.DataFrame:
         na_values=["n/a"],
         keep_default_na=False,
         dtype={key: str for key in words},
-        float_precision="round_trip",
     )
     if not isinstance(table.index, pd.RangeIndex):  # what pandas makes of rows that are too long
         raise ValueError(f"rows of {path.name} are longer than its first")

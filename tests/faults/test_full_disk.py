@@ -168,6 +168,7 @@ def test_needs_against_the_machine(tmp_path):
 def test_a_short_memory_is_warned_of_and_recorded(folder, no_figures, monkeypatch, capsys):
     class Machine:
         available = 1e6
+        total = 1e12
 
     monkeypatch.setattr("seedaudit.forecast.psutil.virtual_memory", Machine)
     assert main(["check", "study.toml"]) == 0
