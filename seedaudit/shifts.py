@@ -12,6 +12,7 @@ from scipy.special import gammainc, gammaincinv
 from scipy.stats import qmc
 
 from seedaudit.errors import DataError, Problem, StudyError
+from seedaudit.space.lattice import ball_lattice
 
 DRAWS = ("ball", "normal", "shell", "lattice")
 MIN_ACCEPTANCE = 0.01  # below this share of accepted draws the constraint is taken for a mistake
@@ -78,7 +79,7 @@ def draw_shifts(
     lengths = [within] if distances is None else list(distances)
     _check_draw(draw, count, within, random_state, sd, lengths, step)
     if draw == "lattice":
-        points = _lattice(within, step)
+        points = ball_lattice(within, step)[1:]  # without the reported place itself
         return points if accept is None else points[accept(points)]
     if draw == "shell":
         streams = _shells(lengths, count, random_state)
@@ -86,15 +87,6 @@ def draw_shifts(
         spread = sd if draw == "normal" else None
         streams = [(count, _sobol_batches(count, within, random_state, spread))]
     return np.concatenate([_fill(wanted, stream, accept) for wanted, stream in streams])
-
-
-def _lattice(within: float, step: float) -> Shifts:
-    side = np.arange(-int(within / step + _SLACK), int(within / step + _SLACK) + 1) * step
-    points = np.stack(np.meshgrid(side, side, side, indexing="ij"), axis=-1).reshape(-1, 3)
-    distance = np.linalg.norm(points, axis=1)
-    order = np.argsort(np.round(distance, 6), kind="stable")
-    order = order[(distance[order] <= within + _SLACK) & (distance[order] > 0)]
-    return np.asarray(points[order])
 
 
 def _shells(

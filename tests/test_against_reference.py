@@ -9,7 +9,7 @@ import pytest
 
 from seedaudit.auditing import audit, plan_folds
 from seedaudit.inference.glm import orthonormal_design
-from seedaudit.inference.group import ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
 from seedaudit.sweep.moments import merged
@@ -17,6 +17,7 @@ from seedaudit.sweep.participant import participant_blocks
 from seedaudit.sweep.schedule import load_run, sweep
 from tests.reference import classes_stage, maps_stage, reference_audit, rows_of
 from tests.small_study import write_small_study
+from tests.whole_states import group_maps
 
 CUTS = (0.1, 0.2, 0.35, 0.5)
 

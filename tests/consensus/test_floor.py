@@ -8,10 +8,11 @@ from scipy import ndimage
 from sklearn.metrics import f1_score
 
 from seedaudit.consensus.floor import control_similarity, fold_residuals, residual_smoothness
-from seedaudit.inference.group import ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.space.geometry import FWHM_PER_SD
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
+from tests.whole_states import group_maps
 
 ONE = np.ones(1)
 

@@ -7,10 +7,11 @@ import pytest
 
 from seedaudit.consensus.agreement import class_counts
 from seedaudit.inference.glm import orthonormal_design
-from seedaudit.inference.group import ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.inference.placementwise import placement_maps
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
+from tests.whole_states import group_maps
 
 N, SHAPE = 7, (5, 6, 4)
 V = int(np.prod(SHAPE))

@@ -8,9 +8,10 @@ import pytest
 from seedaudit.consensus.ceiling import ceiling, map_sizes
 from seedaudit.consensus.overlap import dice_with_reference
 from seedaudit.consensus.tolerance import decay_fits, most_fragile, tolerance_table
-from seedaudit.inference.group import ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.sweep.moments import merged
 from tests.simulations.world import World, fold_moments, replicates, told
+from tests.whole_states import group_maps
 
 ONE = np.ones(1)
 

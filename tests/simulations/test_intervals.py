@@ -9,9 +9,10 @@ from seedaudit.consensus.agreement import class_counts
 from seedaudit.consensus.chance import gwet_ac1
 from seedaudit.consensus.halves import cross_half_r, fold_sums, half_splits, halves
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
-from seedaudit.inference.group import ThresholdRule, classifier, group_maps
+from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.sweep.moments import merged
 from tests.simulations.world import World, allowed, fold_moments, replicates, told
+from tests.whole_states import group_maps
 
 ONE = np.ones(1)
 
