@@ -18,7 +18,8 @@ CHART = 42.0
 
 def motion_known(seed: SeedAudit) -> bool:
     """Whether the confounds tables told the motion of enough participants."""
-    return int(seed.tables["participants"]["mean_motion"].notna().sum()) >= LEAST_KNOWN
+    people = seed.tables.get("participants")
+    return people is not None and int(people["mean_motion"].notna().sum()) >= LEAST_KNOWN
 
 
 def motion_height(width: float) -> float:

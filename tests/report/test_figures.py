@@ -11,6 +11,7 @@ from pathlib import Path
 
 import matplotlib
 import numpy as np
+import pandas as pd
 import pytest
 from matplotlib.axes import Axes
 from matplotlib.colors import to_hex, to_rgb
@@ -416,9 +417,17 @@ def letters(page: Figure) -> list[str]:
 
 def test_figures_of_other_tables_appear_with_them(tmp_path):
     seed = searched(30)
-    table = sources(["A", "B"])
-    seed = replace(seed, tables=dict(seed.tables) | {"radii": table})
-    save_figures(seed, tmp_path, Drawing(formats=("png",), panels=("rose", "front", "radii")))
+    people = pd.DataFrame(
+        {
+            "mean_motion": [0.1, 0.2, 0.3],
+            "median_spatial_r": [0.9, 0.8, 0.8],
+            "min_spatial_r": [0.7, 0.5, 0.4],
+        }
+    )
+    more = {"radii": sources(["A", "B"]), "participants": people}
+    seed = replace(seed, tables=dict(seed.tables) | more)
+    panels = ("rose", "front", "radii", "motion")
+    save_figures(seed, tmp_path, Drawing(formats=("png",), panels=panels))
     assert {path.stem for path in tmp_path.glob("*.png")} == set(FIGURES)
     assert "One panel" in (tmp_path / "steadier_caption.md").read_text(encoding="utf-8")
 
