@@ -133,7 +133,7 @@ def test_no_file_names_a_place(sound, tmp_path, monkeypatch):
 @pytest.mark.parametrize(
     ("typed", "kept"),
     [
-        ("/home/alice/mask.nii.gz", "mask.nii.gz"),
+        ("/srv/cohort/mask.nii.gz", "mask.nii.gz"),
         ("~/mask.nii.gz", "mask.nii.gz"),
         ("~alice/mask.nii.gz", "mask.nii.gz"),
         ("../alice/mask.nii.gz", "mask.nii.gz"),
