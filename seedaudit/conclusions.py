@@ -26,7 +26,7 @@ from seedaudit.plan import Plan, SeedPlan
 from seedaudit.report.words import verdict
 from seedaudit.results import SeedAudit, map_image, read_only
 from seedaudit.space.spheres import cloud_exclusion
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.moments import Chosen, FoldState
 from seedaudit.sweep.schedule import Swept
 from seedaudit.tabulation import Found, summary, tables
 from seedaudit.timehalves import time_halves
@@ -45,8 +45,8 @@ def conclude_seed(
     seed = plan.seeds[number]
     placements, kept_rows, control_rows = _seen_everywhere(plan, group, number)
     start = sum(len(other.used) for other in plan.seeds[:number])
-    folds = [_of_placements(fold, start + kept_rows) for fold in swept.folds]
-    controls = [_of_placements(fold, start + control_rows) for fold in swept.folds]
+    folds = [Chosen(fold, start + kept_rows) for fold in swept.folds]
+    controls = [Chosen(fold, start + control_rows) for fold in swept.folds]
     means = np.array([record.kept[number].target_means[kept_rows] for record in group.used])
     space = _space(plan, seed)
     reported_z = _reported_maps(group, number, seed.analysis)
@@ -74,7 +74,7 @@ def conclude_seed(
     shifts = placements[["dx", "dy", "dz"]].to_numpy()[seed.used[kept_rows]]
     claims = judge_claims(
         plan, seed, means[:, :, plan.n_regions :], np.linalg.norm(shifts, axis=1), group.design,
-        found, folds, threshold_rule(plan), reported_z,
+        found, folds, threshold_rule(plan), reported_z, workers,
     )  # fmt: skip
     all_found = Found(
         seed, placements, kept_rows, control_rows, found, claims,
@@ -166,7 +166,7 @@ def _seen_everywhere(
 
 
 def _controls(
-    plan: Plan, seed: SeedPlan, folds: Sequence[Moments], rows: NDArray[np.int_]
+    plan: Plan, seed: SeedPlan, folds: Sequence[FoldState], rows: NDArray[np.int_]
 ) -> Controls:
     """The control seeds of those rows, each with the voxels outside its own widened sphere."""
     own = seed.cloud.table.iloc[seed.used[rows]]
@@ -193,13 +193,6 @@ def _time_ceiling(
     keep = _controls(plan, seed, (), control_rows).keep[:, rows]
     labels = region_rows(space.labels[rows], space.index)
     return time_ceiling(first, second, rows, labels, len(space.index), len(keep), keep)
-
-
-def _of_placements(moments: Moments, rows: NDArray[np.int_]) -> Moments:
-    """A view where the rows are consecutive, as they are when no placement was dropped."""
-    if len(rows) and len(rows) == rows[-1] - rows[0] + 1:
-        return moments.placements(slice(int(rows[0]), int(rows[-1]) + 1))
-    return moments.placements(rows)
 
 
 def _maps(

@@ -9,13 +9,13 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from seedaudit.consensus.between_seeds import SeedMaps, between_seeds
-from seedaudit.consensus.halves import MOST_SPLITS, Halves, fold_sums, half_splits, halves
+from seedaudit.consensus.halves import MOST_SPLITS, Halves, half_splits, halves
 from seedaudit.groupstate import GroupState
-from seedaudit.inference.glm import estimate, solve_model
+from seedaudit.inference.glm import estimate_sums, solve_model
 from seedaudit.plan import Plan, kept_placements
 from seedaudit.results import SeedAudit, frozen_table
 from seedaudit.space.lattice import evenly_spread
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import FoldState, merged, total_sums
 from seedaudit.sweep.schedule import Swept
 
 MOST_VOXELS = 8000
@@ -36,7 +36,7 @@ def compare_seeds(
         The results of the seeds, in the order of the plan.
     """
     common = np.logical_and.reduce([seed.analysis for seed in plan.seeds])
-    count = np.sum([fold.count for fold in swept.folds], axis=0)
+    count = np.sum([fold.frame(slice(None)).count for fold in swept.folds], axis=0)
     common &= count == len(group.used)
     if len(seeds) < 2 or common.sum() < 3:
         return None
@@ -57,13 +57,14 @@ def compare_seeds(
 
 
 def _halves(
-    plan: Plan, group: GroupState, folds: Sequence[Moments], sizes: Sequence[int], voxel: int
+    plan: Plan, group: GroupState, folds: Sequence[FoldState], sizes: Sequence[int], voxel: int
 ) -> Halves | None:
     """Half-splits of the folds; None where no two halves can be estimated."""
-    if len(folds) < 2 or folds[0].variance is not None:
+    frames = [fold.frame(slice(voxel, voxel + 1)) for fold in folds]
+    if len(folds) < 2 or frames[0].variance is not None:
         return None
     members = half_splits(len(folds), MOST_SPLITS, plan.study.placements.random_state)
-    xtx = np.array([fold.xtx[:, :, voxel] for fold in folds])
+    xtx = np.array([frame.xtx[:, :, 0] for frame in frames])
     split = halves(xtx, sizes, group.design.contrast, members)
     return split if split.usable[0].any() else None
 
@@ -73,33 +74,22 @@ def _seed_maps(
     group: GroupState,
     number: int,
     seed: SeedAudit,
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     everywhere: NDArray[np.int_],
     rows: NDArray[np.int_],
 ) -> SeedMaps:
     """One seed's maps: classes on all common voxels, what is computed from sums on some."""
     start = sum(len(other.used) for other in plan.seeds[:number])
     kept = start + kept_placements(plan.seeds[number], seed.tables["placements"])
-    total = merged(_of(fold, kept, rows) for fold in folds)
-    model = solve_model(total, group.design.contrast, group.design.least_count)
-    effects = [estimate(total, model, i).effect for i in range(len(kept))]
+    frame = merged(fold.frame(rows) for fold in folds)
+    model = solve_model(frame, group.design.contrast, group.design.least_count)
+    sums = [[fold.sums(int(placement), rows) for fold in folds] for placement in kept]
+    effects = [estimate_sums(total_sums(parts), model).effect for parts in sums]
     volume = np.asarray(seed.maps["class_reported"].dataobj)
     classes = volume[tuple(plan.voxels.ijk[everywhere].T)]
     return SeedMaps(
         plan.seeds[number].at,
         np.array(effects),
         np.nan_to_num(classes).astype(np.int8),
-        np.array([fold_sums(folds, int(placement), rows) for placement in kept]),
-    )
-
-
-def _of(fold: Moments, placements: NDArray[np.int_], rows: NDArray[np.int_]) -> Moments:
-    """The state of some placements at some voxels."""
-    known = fold.variance
-    return Moments(
-        fold.count[rows],
-        fold.xtx[:, :, rows],
-        fold.xtz[:, placements[:, None], rows],
-        fold.zz[placements[:, None], rows],
-        None if known is None else known[placements[:, None], rows],
+        np.array([np.concatenate([part.xtz for part in parts]) for parts in sums]),
     )

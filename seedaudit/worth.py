@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -20,12 +22,12 @@ from seedaudit.consensus.tolerance import (
     tolerance_table,
 )
 from seedaudit.errors import DataError, Problem
-from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.inference.glm import estimate_sums, orthonormal_design, solve_model
 from seedaudit.inference.group import ThresholdRule, critical_values
 from seedaudit.inference.permutation import holm_adjusted, maximum_test
-from seedaudit.plan import Plan, PlannedClaim, SeedPlan
+from seedaudit.plan import Plan, SeedPlan
 from seedaudit.space.geometry import ball_mean_correlation
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import FoldState, merged, total_sums
 
 GRID_STEP = 0.25
 """Distances at which the fitted lines are given, mm."""
@@ -101,9 +103,10 @@ def judge_claims(
     distance: NDArray[np.float64],
     design: GroupDesign,
     found: CloudConsensus,
-    folds: list[Moments],
+    folds: Sequence[FoldState],
     rule: ThresholdRule,
     reported_z: NDArray[np.float32] | None,
+    workers: int = 1,
 ) -> Table:
     """The table of claims about a seed.
 
@@ -117,15 +120,18 @@ def judge_claims(
         Lengths of the shifts, mm.
     design : GroupDesign
     found : CloudConsensus
-    folds : list of Moments
+    folds : sequence of FoldState
         Of the cloud's placements.
     rule : ThresholdRule
         As asked.
     reported_z : (n, A) float32 or None
         As in `settled_rule`.
+    workers : int
+        Threads; the numbers do not depend on how many.
     """
     single = len(design.matrix) <= design.matrix.shape[1]
     rows: list[dict[str, Any]] = []
+    known: dict[tuple[bytes, int], Critical] = {}
     for column, planned in enumerate(seed.claims):
         claim = planned.claim
         contrast = orthonormal_design(plan.design.matrix, claim.contrast)[1]
@@ -140,7 +146,12 @@ def judge_claims(
             reason = "one participant" if single else "a participant lacks the target"
             rows.append({**row, **_untested(own, reason)})
             continue
-        critical = _critical(planned, contrast, design, found, folds, rule, reported_z, plan)
+        key = (contrast.tobytes(), claim.sign)
+        if key not in known:
+            known[key] = _critical(
+                claim.sign, contrast, design, found.voxels, folds, rule, reported_z, plan, workers
+            )
+        critical = known[key]
         result = judge_claim(
             own, distance, design.matrix, contrast, claim.sign, critical.values,
             on_effect=critical.on_effect,
@@ -203,35 +214,36 @@ def _untested(means: NDArray[np.float64], reason: str) -> dict[str, Any]:
 
 
 def _critical(
-    planned: PlannedClaim,
+    sign: int,
     contrast: NDArray[np.float64],
     design: GroupDesign,
-    found: CloudConsensus,
-    folds: list[Moments],
+    voxels: NDArray[np.bool_],
+    folds: Sequence[FoldState],
     asked: ThresholdRule,
     reported_z: NDArray[np.float32] | None,
     plan: Plan,
+    workers: int,
 ) -> Critical:
-    """What the rule asks at each placement, in the maps of the claimed contrast."""
-    sign = planned.claim.sign
-    n_placements = len(found.group.statistics)
+    """What the rule asks at each placement, in the maps of a claimed contrast."""
+    placements = range(folds[0].n_placements)
     if asked.rule == "effect":
         level = np.arctanh(asked.level) if asked.scale == "r" else asked.level
-        return Critical(np.full(n_placements, level), on_effect=True)
+        return Critical(np.full(len(placements), level), on_effect=True)
     rule, _ = settled_rule(
         asked, reported_z, design.matrix, contrast,
         rearrangements=plan.study.threshold.rearrangements,
         random_state=plan.study.placements.random_state,
     )  # fmt: skip
-    statistics, df = found.group.statistics, found.group.df
-    if not np.allclose(contrast, design.contrast):
-        total = merged(fold.voxels(found.voxels) for fold in folds)
-        model = solve_model(total, contrast, design.least_count)
-        statistics = np.array(
-            [estimate(total, model, i).statistic for i in range(n_placements)], np.float32
-        )
-        df = model.df
-    return Critical(critical_values(statistics, df, rule, sign), on_effect=False)
+    rows = np.flatnonzero(voxels)
+    model = solve_model(merged(fold.frame(rows) for fold in folds), contrast, design.least_count)
+
+    def one(placement: int) -> float:
+        sums = total_sums(fold.sums(placement, rows) for fold in folds)
+        statistic = estimate_sums(sums, model).statistic.astype(np.float32)
+        return float(critical_values(statistic[None], model.df, rule, sign)[0])
+
+    with ThreadPoolExecutor(workers) as pool:
+        return Critical(np.array(list(pool.map(one, placements))), on_effect=False)
 
 
 @dataclass(frozen=True)

@@ -2,17 +2,35 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.inference.glm import estimate, solve_model
-from seedaudit.inference.group import Classifier, GroupMaps, common_df
+from seedaudit.inference.glm import Estimate, Model, estimate_sums, solve_model
+from seedaudit.inference.group import Classifier, common_df
 from seedaudit.sweep.moments import Moments
+
+
+@dataclass(frozen=True)
+class WholeMaps:
+    """Effects, statistics and classes (N, V) of N placements; errors (V,) of the first."""
+
+    effects: NDArray[np.float32]
+    statistics: NDArray[np.float32]
+    classes: NDArray[np.int8]
+    standard_error: NDArray[np.float64]
+    df: NDArray[np.float64]
+
+
+def estimate(moments: Moments, model: Model, placement: int) -> Estimate:
+    """Estimate the contrast for one placement at every voxel."""
+    return estimate_sums(moments.sums(placement, slice(None)), model)
 
 
 def group_maps(
     moments: Moments, contrast: NDArray[np.float64], needed: int, classes_of: Classifier
-) -> GroupMaps:
+) -> WholeMaps:
     """Estimate and classify every placement.
 
     Parameters
@@ -38,4 +56,4 @@ def group_maps(
         classes[i] = classes_of(found.statistic, found.effect, df)
         if i == 0:
             standard_error = found.standard_error
-    return GroupMaps(effects, statistics, classes, standard_error, model.df)
+    return WholeMaps(effects, statistics, classes, standard_error, model.df)

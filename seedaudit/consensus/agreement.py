@@ -135,13 +135,13 @@ def contested_map(counts: Counts, safe: float = 0.95) -> NDArray[np.bool_]:
     return np.asarray(between.any(axis=1))
 
 
-def conjunction(statistics: NDArray[np.floating[Any]]) -> FloatArray:
+def conjunction(lowest: FloatArray, highest: FloatArray) -> FloatArray:
     """Smallest |t| over placements with its sign where the sign is constant, else 0.
 
     Parameters
     ----------
-    statistics : (N, V) array
-        t or standard normal scores; NaN at one placement gives NaN.
+    lowest, highest : (V,) arrays
+        Smallest and largest t or standard normal score over the placements; NaN stays NaN.
 
     Returns
     -------
@@ -152,8 +152,6 @@ def conjunction(statistics: NDArray[np.floating[Any]]) -> FloatArray:
     -----
     Minimum statistic, conjunction null: Nichols T. et al. (2005) NeuroImage 25:653-660.
     """
-    lowest = statistics.min(axis=0).astype(np.float64)
-    highest = statistics.max(axis=0).astype(np.float64)
     return np.asarray(np.maximum(lowest, 0.0) + np.minimum(highest, 0.0))
 
 

@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.consensus.halves import Halves, cross_half_r
+from seedaudit.consensus.halves import FoldMaps, Halves, cross_half_r
 from seedaudit.consensus.overlap import dice_with_reference, spatial_similarity
 from seedaudit.consensus.resampling import delete_fold_interval
 
@@ -165,7 +165,8 @@ def _verdict(low: float, above: float, limit: float) -> bool | None:
 def _cross(first: FloatArray, second: FloatArray, split: Halves) -> FloatArray:
     """Similarity in independent halves, (1 + G,)."""
     everywhere = np.array([[0, first.shape[1]]])
-    return cross_half_r(first, second, everywhere, split)[:, 0]
+    maps = [FoldMaps.of(sums, everywhere) for sums in (first, second)]
+    return cross_half_r(maps[0], maps[1], split)[:, 0]
 
 
 def _joint(a: FloatArray, b: FloatArray) -> FloatArray:

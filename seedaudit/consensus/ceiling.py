@@ -14,7 +14,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from itertools import product
+from itertools import compress, product
 from typing import Any
 
 import numpy as np
@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 from seedaudit.consensus.chance import ac1_from_shares
 from seedaudit.consensus.halves import (
     MOST_SPLITS,
+    FoldMaps,
     Halves,
     cross_half_r,
     fold_sums,
@@ -33,7 +34,7 @@ from seedaudit.consensus.halves import (
 from seedaudit.consensus.overlap import dice
 from seedaudit.consensus.resampling import delete_fold_interval
 from seedaudit.inference.glm import Estimate, uniform_estimate
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import Chosen, FoldState, Sums, total_sums
 
 FloatArray = NDArray[np.float64]
 Classes = NDArray[np.int8]
@@ -78,7 +79,7 @@ class Ceiling:
 
 
 def ceiling(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     sizes: Sequence[int],
     contrast: FloatArray,
     voxels: NDArray[np.bool_],
@@ -86,7 +87,7 @@ def ceiling(
     regions: NDArray[np.integer[Any]],
     n_regions: int,
     *,
-    controls: Sequence[Moments] = (),
+    controls: Sequence[FoldState] = (),
     control_keep: NDArray[np.bool_] | None = None,
     random_state: int = 0,
     workers: int = 1,
@@ -95,7 +96,7 @@ def ceiling(
 
     Parameters
     ----------
-    folds : sequence of Moments
+    folds : sequence of FoldState
         Of the placements of a cloud, the reported one first.
     sizes : sequence of int
         Participants in each fold.
@@ -109,7 +110,7 @@ def ceiling(
         Position of the region of each of these voxels, -1 for none.
     n_regions : int
         K
-    controls : sequence of Moments, optional
+    controls : sequence of FoldState, optional
         The same folds for the control seeds.
     control_keep : (C, A) bool
         Voxels that a control seed is judged on: not its own sphere.
@@ -126,10 +127,14 @@ def ceiling(
     """
     kept = [g for g, size in enumerate(sizes) if size]
     folds, sizes = [folds[g] for g in kept], [sizes[g] for g in kept]
-    if len(folds) < 2 or not voxels.any() or folds[0].variance is not None:
+    controls = [controls[g] for g in kept] if controls else ()
+    if len(folds) < 2 or not voxels.any():
+        return None
+    frames = [fold.frame(slice(voxels.argmax(), voxels.argmax() + 1)) for fold in folds]
+    if frames[0].variance is not None:
         return None
     members = half_splits(len(folds), MOST_SPLITS, random_state)
-    xtx = np.array([fold.xtx[:, :, voxels.argmax()] for fold in folds])
+    xtx = np.array([frame.xtx[:, :, 0] for frame in frames])
     split = halves(xtx, sizes, contrast, members)
     some = np.flatnonzero(split.usable[0])
     if not len(some):
@@ -139,16 +144,16 @@ def ceiling(
     picked = some[_spread(len(some), CLASS_SPLITS)]
     chosen = 1 + _spread(tails.shape[1] - 1, CLASS_PLACEMENTS)
     by_class = class_similarity(
-        folds, sizes, contrast, np.concatenate([[0], chosen]), voxels, tails, regions, n_regions,
-        members[picked], workers,
+        folds, sizes, xtx, contrast, np.concatenate([[0], chosen]), rows, tails, regions,
+        n_regions, members[picked], workers,
     )  # fmt: skip
     floor = _controls(folds, controls, rows, control_keep, split)
     return _assembled(r, by_class, floor, sizes, (len(some), len(picked), len(chosen)))
 
 
 def time_ceiling(
-    first: Moments,
-    second: Moments,
+    first: FoldState,
+    second: FoldState,
     rows: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
@@ -161,7 +166,7 @@ def time_ceiling(
 
     Parameters
     ----------
-    first, second : Moments
+    first, second : FoldState
         Of the two halves, for the placements of a cloud, the reported one first, and after them
         the control seeds.
     rows : (A,) int
@@ -179,30 +184,28 @@ def time_ceiling(
     folds = (first, second)
     r = _spatial(folds, rows, regions, n_regions, split)
     n_cloud = len(r) - n_controls
-    controls = [fold.placements(slice(n_cloud, None)) for fold in folds]
+    controls = [Chosen(fold, np.arange(n_cloud, len(r))) for fold in folds]
     floor = _controls(folds, controls, rows, control_keep, split)
     return _assembled(r[:n_cloud], {}, floor, [1, 1], (1, 0, 0))
 
 
 def _controls(
-    folds: Sequence[Moments],
-    controls: Sequence[Moments],
+    folds: Sequence[FoldState],
+    controls: Sequence[FoldState],
     rows: NDArray[np.integer[Any]],
     keep: NDArray[np.bool_] | None,
     split: Halves,
 ) -> FloatArray:
     """Cross-half spatial r of the control seeds, (C,)."""
-    return np.array(
-        [
-            cross_half_r(
-                fold_sums(folds, 0, rows[inside]),
-                fold_sums(controls, c, rows[inside]),
-                np.array([[0, np.count_nonzero(inside)]]),
-                split,
-            )[0, 0]
-            for c, inside in enumerate([] if keep is None else keep)
-        ]
-    )
+    found = []
+    for c, inside in enumerate([] if keep is None else keep):
+        bounds = np.array([[0, np.count_nonzero(inside)]])
+        reported, control = (
+            FoldMaps.of(fold_sums(states, i, rows[inside]), bounds)
+            for states, i in ((folds, 0), (controls, c))
+        )
+        found.append(cross_half_r(reported, control, split)[0, 0])
+    return np.array(found)
 
 
 def _assembled(
@@ -229,18 +232,13 @@ def _assembled(
     )  # fmt: skip
 
 
-def map_sizes(classes: Classes) -> NDArray[np.int_]:
-    """Voxels in class + and in class - of each map, (N, 2), from classes (N, V)."""
-    return np.stack([np.count_nonzero(classes == sign, axis=1) for sign in (1, -1)], axis=1)
-
-
 def _spread(total: int, most: int) -> NDArray[np.int_]:
     """Up to `most` positions evenly spread over `total`."""
     return np.unique(np.linspace(0, total - 1, min(most, total)).round().astype(int))
 
 
 def _spatial(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     rows: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
@@ -251,21 +249,26 @@ def _spatial(
     order = np.argsort(regions, kind="stable")
     edges = np.searchsorted(regions[order], np.arange(n_regions + 1))
     bounds = np.vstack([[0, len(order)], np.stack([edges[:-1], edges[1:]], axis=1)])
-    reported = fold_sums(folds, 0, rows[order])
 
-    def r_of(placement: int) -> FloatArray:
-        return cross_half_r(reported, fold_sums(folds, placement, rows[order]), bounds, split)
+    def maps_of(placement: int) -> FoldMaps:
+        return FoldMaps.of(fold_sums(folds, placement, rows[order]), bounds)
 
+    reported = maps_of(0)
     with ThreadPoolExecutor(workers) as pool:
-        return np.array(list(pool.map(r_of, range(folds[0].zz.shape[0]))))
+        found = pool.map(
+            lambda placement: cross_half_r(reported, maps_of(placement), split),
+            range(folds[0].n_placements),
+        )
+        return np.array(list(found))
 
 
 def class_similarity(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     sizes: Sequence[int],
+    xtx: FloatArray,
     contrast: FloatArray,
     placements: NDArray[np.integer[Any]],
-    voxels: NDArray[np.bool_],
+    rows: NDArray[np.integer[Any]],
     tails: NDArray[np.integer[Any]],
     regions: NDArray[np.integer[Any]],
     n_regions: int,
@@ -276,8 +279,12 @@ def class_similarity(
 
     Parameters
     ----------
+    xtx : (G, p, p)
+        X'X of each fold.
     placements : (M,) int
         Placements to compare with the reported one; the first of them is the reported one itself.
+    rows : (A,) int
+        Voxels that every participant has.
     members : (S, G) bool
         Folds of the first halves.
     workers : int
@@ -293,9 +300,8 @@ def class_similarity(
     found = {name: np.full(shape, np.nan) for name in MEASURES[1:]}
 
     def classes(placement: int) -> list[HalfClasses]:
-        rows = slice(placement, placement + 1)
-        parts = [fold.placements(rows).voxels(voxels) for fold in folds]
-        return [_half_classes(parts, sizes, contrast, m, tails[:, placement]) for m in members]
+        parts = [fold.sums(placement, rows) for fold in folds]
+        return [_half_classes(parts, xtx, sizes, contrast, m, tails[:, placement]) for m in members]
 
     reported = classes(int(placements[0]))
 
@@ -315,7 +321,8 @@ def class_similarity(
 
 
 def _half_classes(
-    parts: Sequence[Moments],
+    parts: Sequence[Sums],
+    xtx: FloatArray,
     sizes: Sequence[int],
     contrast: FloatArray,
     inside: NDArray[np.bool_],
@@ -327,14 +334,14 @@ def _half_classes(
     """
     made: HalfClasses = {}
     for half, chosen in enumerate((inside, ~inside)):
-        total = merged(part for part, taken in zip(parts, chosen, strict=True) if taken)
+        total, frame = total_sums(compress(parts, chosen)), xtx[chosen].sum(axis=0)
         n = int(np.asarray(sizes)[chosen].sum())
         # where the fold is in the other half, only the sizes change
         same = np.flatnonzero(np.concatenate([[True], ~chosen]))
-        everyone = _classes(uniform_estimate(total, n, contrast), tails[same])
+        everyone = _classes(uniform_estimate(frame, total, n, contrast), tails[same])
         made |= {(half, int(variant)): c for variant, c in zip(same, everyone, strict=True)}
         for g in np.flatnonzero(chosen).tolist():
-            rest = uniform_estimate(total - parts[g], n - sizes[g], contrast)
+            rest = uniform_estimate(frame - xtx[g], total - parts[g], n - sizes[g], contrast)
             made[half, g + 1] = _classes(rest, tails[g + 1 : g + 2])[0]
     return made
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -19,25 +20,24 @@ from seedaudit.consensus.agreement import (
     placement_to_sampling,
     safe_map,
 )
-from seedaudit.consensus.ceiling import Ceiling, ceiling, map_sizes
+from seedaudit.consensus.ceiling import Ceiling, ceiling
 from seedaudit.consensus.chance import fleiss_kappa, gwet_ac1
 from seedaudit.consensus.components import placement_share
 from seedaudit.consensus.floor import control_similarity, fold_residuals, residual_smoothness
 from seedaudit.consensus.lowrank import LowRank, low_rank
 from seedaudit.consensus.overlap import (
+    Sweep,
     correlation_pairs,
-    density_sweep,
     dice_pairs,
     dice_with_reference,
     spatial_similarity,
-    value_sweep,
 )
 from seedaudit.consensus.regional import region_rows, region_table, regional_stability
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
-from seedaudit.inference.glm import solve_model
-from seedaudit.inference.group import Classifier, GroupMaps, ThresholdRule, classifier
-from seedaudit.inference.placementwise import WithoutFolds, placement_maps
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.inference.glm import Estimate, solve_model
+from seedaudit.inference.group import GroupMaps, ThresholdRule, classifier
+from seedaudit.inference.placementwise import DegreesOfFreedom, WithoutFolds, placement_maps
+from seedaudit.sweep.moments import FoldState, merged
 
 DENSITIES = np.arange(1, 51) / 100
 VALUE_CUTS = np.arange(1, 21) / 20
@@ -85,11 +85,11 @@ class Space:
 
 @dataclass(frozen=True)
 class Controls:
-    """Control seeds: `folds` of their moments, and the voxels `keep` (C, V) that each is compared
+    """Control seeds: `folds` of their state, and the voxels `keep` (C, V) that each is compared
     on, which its own widened sphere is no part of.
     """
 
-    folds: Sequence[Moments]
+    folds: Sequence[FoldState]
     keep: NDArray[np.bool_]
 
 
@@ -110,8 +110,6 @@ class CloudConsensus:
         Fleiss' kappa.
     df : float
         Residual degrees of freedom (the smallest, where voxels differ); infinite for scores.
-    group : GroupMaps
-        What all of this was drawn from.
     ceiling : Ceiling or None
         None where no two halves of the participants can be compared.
     controls : dict of columns
@@ -130,14 +128,13 @@ class CloudConsensus:
     kappa: float
     df: float
     placement_maps: LowRank
-    group: GroupMaps
     ceiling: Ceiling | None
     controls: Table
     fwhm: float
 
 
 def conclude(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     fold_sizes: Sequence[int],
     design: GroupDesign,
     space: Space,
@@ -153,7 +150,7 @@ def conclude(
 
     Parameters
     ----------
-    folds : sequence of Moments
+    folds : sequence of FoldState
         Of the cloud's placements, the reported one first.
     fold_sizes : sequence of int
         Participants in each fold.
@@ -171,14 +168,15 @@ def conclude(
         Threads; the numbers do not depend on how many.
     """
     # what all placements share: counts and X'X
-    frame = merged(fold.placements(slice(0, 0)) for fold in folds)
+    frame = merged(fold.frame(slice(None)) for fold in folds)
     estimable = np.isfinite(solve_model(frame, design.contrast, design.least_count).spread)
     voxels = space.analysis & estimable
     complete = voxels & (frame.count == len(design.matrix))
     classes_of = classifier(rule, space.ijk[voxels], space.shape)
-    maps, without = placement_maps(
+    densities = _DensityLooks()
+    maps, without, looks = placement_maps(
         folds, fold_sizes, voxels, design.contrast, design.least_count, classes_of,
-        complete[voxels], workers=workers,
+        complete[voxels], look=densities, workers=workers,
     )  # fmt: skip
     counts = class_counts(maps.classes[1:])
     sizes = [size for size in fold_sizes if size]
@@ -187,7 +185,7 @@ def conclude(
         fold_sizes,
         design.contrast,
         complete,
-        np.concatenate([map_sizes(maps.classes[:, complete[voxels]])[None], without.sizes]),
+        without.sizes,
         region_rows(space.labels[complete], space.index),
         len(space.index),
         controls=controls.folds,
@@ -195,26 +193,31 @@ def conclude(
         random_state=random_state,
         workers=workers,
     )
-    stability = np.array([gwet_ac1(left) for left in (counts, *without.counts)])
+    left_out = range(len(without.tails))
+    stability = np.array([gwet_ac1(counts), *(gwet_ac1(without.counts(g)) for g in left_out)])
     low, high = delete_fold_interval(stability[0], stability[1:], sizes)
     regions = _regions(
         maps, counts, without, sizes, space.labels[voxels], space.index, design, region_means, top,
         safe, random_state,
+    )  # fmt: skip
+    floor = control_similarity(
+        controls.folds, voxels, design.contrast, design.least_count, maps,
+        controls.keep[:, voxels], classes_of, workers=workers,
     )  # fmt: skip
     return CloudConsensus(
         voxels,
         _maps(maps, counts, safe),
         _similarity(maps),
         _pairs(maps),
-        _thresholds(maps),
+        _thresholds(maps, densities.sweep.table(looks[1:]), workers),
         regions,
         (float(stability[0]), float(low), float(high)),
         float(fleiss_kappa(counts)),
         float(np.nanmin(maps.df)) if voxels.any() else float("nan"),
-        low_rank(maps.effects, tolerance=MAP_TOLERANCE, most_bytes=MAP_BYTES),
-        maps,
+        # the last use of the effects, whose memory it takes
+        low_rank(maps.effects, tolerance=MAP_TOLERANCE, most_bytes=MAP_BYTES, overwrite=True),
         top,
-        _controls(controls, design, maps, voxels, classes_of),
+        floor,
         _smoothness(folds, fold_sizes, design, space, complete),
     )
 
@@ -232,9 +235,10 @@ def _regions(
     safe: float,
     random_state: int,
 ) -> Table:
-    stability = np.array(
-        [regional_stability(labels, index, left) for left in (counts, *without.counts)]
-    )
+    left_out = [
+        regional_stability(labels, index, without.counts(g)) for g in range(len(without.tails))
+    ]
+    stability = np.array([regional_stability(labels, index, counts), *left_out])
     effects = region_effects(maps.effects, labels, index)
     interval = bootstrap_interval(
         design.matrix, region_means[:, 0], design.contrast, design.strata,
@@ -249,20 +253,8 @@ def _regions(
     )  # fmt: skip
 
 
-def _controls(
-    controls: Controls,
-    design: GroupDesign,
-    maps: GroupMaps,
-    voxels: NDArray[np.bool_],
-    classes_of: Classifier,
-) -> Table:
-    moments = merged(fold.voxels(voxels) for fold in controls.folds)
-    keep = controls.keep[:, voxels]
-    return control_similarity(moments, design.contrast, design.least_count, maps, keep, classes_of)
-
-
 def _smoothness(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     fold_sizes: Sequence[int],
     design: GroupDesign,
     space: Space,
@@ -279,12 +271,13 @@ def region_effects(
     effects: NDArray[np.float32], labels: NDArray[np.int32], index: NDArray[np.int_]
 ) -> NDArray[np.float64]:
     """Mean group effect (N, K) of the voxels of each region; NaN for a region without any."""
-    result = np.full((len(effects), len(index)), np.nan)
-    for k, label in enumerate(index):
-        members = np.flatnonzero(labels == label)
-        if len(members):
-            result[:, k] = effects[:, members].mean(axis=1, dtype=np.float64)
-    return result
+    rows = region_rows(labels, index)
+    inside = np.flatnonzero(rows >= 0)
+    n_voxels = np.bincount(rows[inside], minlength=len(index)).astype(np.float64)
+    n_voxels[n_voxels == 0] = np.nan
+    # row by row: no copy of all maps, however large a region is
+    sums = [np.bincount(rows[inside], row[inside], minlength=len(index)) for row in effects]
+    return np.array(sums) / n_voxels
 
 
 def _maps(maps: GroupMaps, counts: NDArray[np.int32], safe: float) -> Table:
@@ -297,13 +290,13 @@ def _maps(maps: GroupMaps, counts: NDArray[np.int32], safe: float) -> Table:
         "modal_share": modal_class(counts)[1],
         "safe": safe_map(counts, safe),
         "contested": contested_map(counts, safe),
-        "conjunction": conjunction(maps.statistics),
-        "effect_reported": maps.effects[0],
+        "conjunction": conjunction(maps.lowest, maps.highest),
+        "effect_reported": maps.effects[0].copy(),
         "effect_mean": spread.mean,
         "effect_sd": spread.sd,
         "effect_range": spread.maximum - spread.minimum,
         "placement_to_sampling": placement_to_sampling(spread.sd, maps.standard_error),
-        "t_reported": maps.statistics[0],
+        "t_reported": maps.statistic,
         "class_reported": maps.classes[0],
     }
 
@@ -335,13 +328,24 @@ def _pairs(maps: GroupMaps) -> Table:
     }
 
 
-def _thresholds(maps: GroupMaps) -> Table:
-    sweeps = {
-        "density": density_sweep(maps.statistics[0], maps.statistics[1:], DENSITIES),
-        "effect": value_sweep(maps.effects[0], maps.effects[1:], VALUE_CUTS),
-    }
-    columns = list(sweeps["density"])
+class _DensityLooks:
+    """Asked of every placement while its statistic is at hand, of the reported one first."""
+
+    sweep: Sweep
+
+    def __call__(self, found: Estimate, df: DegreesOfFreedom) -> NDArray[np.int64]:
+        statistic = found.statistic.astype(np.float32)
+        if not hasattr(self, "sweep"):
+            self.sweep = Sweep.density(statistic, DENSITIES)
+        return self.sweep.look(statistic)
+
+
+def _thresholds(maps: GroupMaps, by_density: Table, workers: int) -> Table:
+    by_effect = Sweep.value(maps.effects[0], VALUE_CUTS)
+    with ThreadPoolExecutor(workers) as pool:
+        looks = list(pool.map(by_effect.look, maps.effects[1:]))
+    sweeps = {"density": by_density, "effect": by_effect.table(looks)}
     return {
         "rule": np.repeat(list(sweeps), [len(sweep["cut"]) for sweep in sweeps.values()]),
-        **{name: np.concatenate([sweep[name] for sweep in sweeps.values()]) for name in columns},
+        **{name: np.concatenate([sweep[name] for sweep in sweeps.values()]) for name in by_density},
     }

@@ -3,34 +3,40 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from seedaudit.consensus.overlap import dice_with_reference, spatial_similarity
-from seedaudit.inference.glm import estimate, solve_model
+from seedaudit.inference.glm import estimate_sums, solve_model
 from seedaudit.inference.group import Classifier, GroupMaps
 from seedaudit.space.geometry import lag_correlation, smoothness
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import FoldState, merged, total_sums
 
 FloatArray = NDArray[np.float64]
 
 
 def control_similarity(
-    controls: Moments,
+    controls: Sequence[FoldState],
+    voxels: NDArray[np.bool_],
     contrast: FloatArray,
     needed: int,
     reported: GroupMaps,
     keep: NDArray[np.bool_],
     classes_of: Classifier,
+    *,
+    workers: int = 1,
 ) -> dict[str, FloatArray]:
     """Similarity of the maps of unrelated seeds to the reported map.
 
     Parameters
     ----------
-    controls : Moments
-        Of C control seeds, on the analysis voxels of the cloud.
+    controls : sequence of FoldState
+        Of C control seeds.
+    voxels : (V,) bool
+        The A analysis voxels of the cloud.
     contrast : (p,)
     needed : int
         Participants a voxel needs.
@@ -40,31 +46,33 @@ def control_similarity(
         Voxels that each control is compared on: not its own widened sphere, as the voxels of a
         cloud's spheres are no analysis voxels of the cloud.
     classes_of : callable
+    workers : int
+        Threads; the numbers do not depend on how many.
 
     Returns
     -------
     dict of (C,) arrays
         dice_positive, dice_negative, spatial_r, n_positive, n_negative.
     """
-    model = solve_model(controls, contrast, needed)
-    columns: dict[str, list[float]] = {
-        name: []
-        for name in ("n_positive", "n_negative", "dice_positive", "dice_negative", "spatial_r")
-    }
-    for c, inside in enumerate(keep):
-        found = estimate(controls, model, c)
+    rows = np.flatnonzero(voxels)
+    model = solve_model(merged(fold.frame(rows) for fold in controls), contrast, needed)
+
+    def one(c: int) -> list[float]:
+        inside = keep[c]
+        found = estimate_sums(total_sums(fold.sums(c, rows) for fold in controls), model)
         statistic = np.where(inside, found.statistic, np.nan)
         classes = classes_of(statistic, found.effect, model.df)[inside]
         overlap = dice_with_reference(reported.classes[0, inside], classes[None])
         likeness = spatial_similarity(reported.effects[0, inside], found.effect[None, inside])
-        for column, tail in enumerate(("positive", "negative")):
-            columns[f"n_{tail}"].append(overlap.sizes[0, column])
-            columns[f"dice_{tail}"].append(overlap.dice[0, column])
-        columns["spatial_r"].append(likeness.r[0])
-    return {name: np.array(values, dtype=np.float64) for name, values in columns.items()}
+        return [*overlap.sizes[0], *overlap.dice[0], likeness.r[0]]
+
+    with ThreadPoolExecutor(workers) as pool:
+        values = np.array(list(pool.map(one, range(len(keep)))), dtype=np.float64).reshape(-1, 5)
+    names = ("n_positive", "n_negative", "dice_positive", "dice_negative", "spatial_r")
+    return dict(zip(names, values.T, strict=True))
 
 
-def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.bool_]) -> FloatArray:
+def fold_residuals(folds: Sequence[FoldState], voxels: NDArray[np.bool_]) -> FloatArray:
     """Residuals of the group model at the reported placement, summed within folds.
 
     The part X'(z - X b) of each fold, b being the estimate of all folds, is a sum of participants'
@@ -72,7 +80,7 @@ def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.bool_]) -> Float
 
     Parameters
     ----------
-    folds : sequence of G Moments
+    folds : sequence of G FoldState
     voxels : (V,) bool
         A voxels that every participant has.
 
@@ -80,10 +88,11 @@ def fold_residuals(folds: Sequence[Moments], voxels: NDArray[np.bool_]) -> Float
     -------
     (G * p, A) array
     """
-    parts = [fold.placements(slice(0, 1)).voxels(voxels) for fold in folds]
-    total = merged(parts)
-    coefficients = np.linalg.solve(total.xtx[:, :, 0], total.xtz[:, 0])
-    return np.concatenate([part.xtz[:, 0] - part.xtx[:, :, 0] @ coefficients for part in parts])
+    rows = np.flatnonzero(voxels)
+    xtx = np.array([fold.frame(rows[:1]).xtx[:, :, 0] for fold in folds])
+    xtz = np.array([fold.sums(0, rows).xtz for fold in folds])
+    coefficients = np.linalg.solve(xtx.sum(axis=0), xtz.sum(axis=0))
+    return np.concatenate(xtz - xtx @ coefficients)
 
 
 def residual_smoothness(

@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.moments import FoldState
 
 FloatArray = NDArray[np.float64]
 
@@ -108,42 +108,78 @@ def halves(
     return Halves(members, usable, weights * usable[None, ..., None])
 
 
+@dataclass(frozen=True)
+class FoldMaps:
+    """The x'z of every fold at one placement, and what correlations need to know of them.
+
+    Parameters
+    ----------
+    maps : (G * p, V)
+    bounds : (B, 2) int
+        First and last + 1 voxel of each set of voxels that is looked at.
+    totals : (B, G * p)
+        Sums over the voxels of each set.
+    covariance : (B, G * p, G * p)
+        Centred products within each set.
+    """
+
+    maps: FloatArray
+    bounds: NDArray[np.integer[Any]]
+    totals: FloatArray
+    covariance: FloatArray
+
+    @classmethod
+    def of(cls, maps: FloatArray, bounds: NDArray[np.integer[Any]]) -> FoldMaps:
+        """From the maps, such as those of `fold_sums`."""
+        totals = np.array([maps[:, start:stop].sum(axis=1) for start, stop in bounds])
+        return cls(maps, bounds, totals, _centred_products(maps, maps, bounds, totals, totals))
+
+
+def _centred_products(
+    x: FloatArray,
+    y: FloatArray,
+    bounds: NDArray[np.integer[Any]],
+    x_totals: FloatArray,
+    y_totals: FloatArray,
+) -> FloatArray:
+    """Of all rows of x with all rows of y, within each set of voxels, (B, rows of x, rows of y)."""
+    products = np.array([x[:, start:stop] @ y[:, start:stop].T for start, stop in bounds])
+    n = np.maximum(bounds[:, 1] - bounds[:, 0], 1)
+    return np.asarray(products - np.einsum("bi,bj->bij", x_totals / n[:, None], y_totals))
+
+
 def fold_sums(
-    folds: Sequence[Moments], placement: int, voxels: NDArray[np.integer[Any]]
+    folds: Sequence[FoldState], placement: int, voxels: NDArray[np.integer[Any]]
 ) -> FloatArray:
     """The x'z of every fold at one placement, (G * p, V) in the order of `voxels`."""
-    return np.concatenate([fold.xtz[:, placement][:, voxels] for fold in folds], dtype=np.float64)
+    return np.concatenate([fold.sums(placement, voxels).xtz for fold in folds])
 
 
-def cross_half_r(
-    reported: FloatArray, shifted: FloatArray, bounds: NDArray[np.integer[Any]], split: Halves
-) -> FloatArray:
+def cross_half_r(reported: FoldMaps, shifted: FoldMaps, split: Halves) -> FloatArray:
     """Spatial correlation of the reported map in one half with a shifted map in the other.
 
     Parameters
     ----------
-    reported, shifted : (G * p, V)
-        From `fold_sums`.
-    bounds : (B, 2) int
-        First and last + 1 voxel of each set of voxels that is looked at.
+    reported, shifted : FoldMaps
+        With the same sets of voxels.
     split : Halves
 
     Returns
     -------
     (1 + G, B)
         Mean over splits, and over which half holds the reported map; NaN without a usable split
-        or variation.
+        or variation, and for sets of fewer than three voxels.
     """
-    first, second = split.weights.reshape(2, -1, reported.shape[0])
+    first, second = split.weights.reshape(2, -1, reported.maps.shape[0])
+    bounds = reported.bounds
+    crossed = _centred_products(
+        reported.maps, shifted.maps, bounds, reported.totals, shifted.totals
+    )
     result = np.full((split.usable.size, len(bounds)), np.nan)
-    for column, (start, stop) in enumerate(bounds):
-        if stop - start < 3:
-            continue
-        x, y = reported[:, start:stop], shifted[:, start:stop]
-        x = x - x.mean(axis=1, keepdims=True)
-        y = y - y.mean(axis=1, keepdims=True)
+    for column in np.flatnonzero(bounds[:, 1] - bounds[:, 0] >= 3):
         # rows of maps: the first and the second half's, of the reported and the shifted seed
-        cross, own_x, own_y = x @ y.T, x @ x.T, y @ y.T
+        cross = crossed[column]
+        own_x, own_y = reported.covariance[column], shifted.covariance[column]
         r = [
             _quotient(_form(a, cross, b), _form(a, own_x, a) * _form(b, own_y, b))
             for a, b in ((first, second), (second, first))

@@ -59,7 +59,11 @@ class LowRank:
 
 
 def low_rank(
-    maps: NDArray[np.floating[Any]], *, tolerance: float, most_bytes: float = np.inf
+    maps: NDArray[np.floating[Any]],
+    *,
+    tolerance: float,
+    most_bytes: float = np.inf,
+    overwrite: bool = False,
 ) -> LowRank:
     """Add components until every map is met within the tolerance, or the space is used up.
 
@@ -71,6 +75,8 @@ def low_rank(
         Largest difference allowed, in the unit of the maps.
     most_bytes : float
         Largest sum of the packed sizes.
+    overwrite : bool
+        Work in the memory of the maps, which are lost.
 
     Returns
     -------
@@ -87,7 +93,7 @@ def low_rank(
     mean_step = _largest(mean) / LARGEST_CODE or 1.0
     codes = [_rounded(mean, mean_step)]
     offset = codes[0] * mean_step
-    left = maps - offset.astype(np.float32)
+    left = np.subtract(maps, offset.astype(np.float32), out=maps if overwrite else None)
     lengths, vectors = _principal(left)
     steps, weights = [mean_step], [np.zeros(0)]
     size, errors = len(packed(codes[0])), [_largest(left)]

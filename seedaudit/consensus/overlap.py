@@ -6,7 +6,8 @@ spatial similarity, so that all of them describe the same voxels.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -175,50 +176,122 @@ def correlation_pairs(effects: Maps) -> FloatArray:
     return np.clip(products / scale / scale[:, None], -1.0, 1.0)
 
 
-def density_sweep(reference: Maps, statistics: Maps, shares: ArrayLike) -> dict[str, FloatArray]:
-    """Mean Dice with the reference when every map keeps its top share of voxels by |t|.
+@dataclass(frozen=True)
+class Sweep:
+    """Dice with one reference map at many cuts; placements are looked at one by one.
+
+    A voxel passes the first b cuts in `order` (loosest first), and no other. With the number of
+    passed cuts as a bin per sign, one joint histogram with the reference holds the sizes and
+    overlaps at every cut.
 
     Parameters
     ----------
-    reference : (V,) array
-        t of the reported placement; NaN marks a voxel without a test.
-    statistics : (N, V) array
-        t of the placements.
-    shares : (C,) array
-        Shares of the tested voxels, 0 to 1.
-
-    Returns
-    -------
-    dict of (C,) arrays
-        See `value_sweep`; the cut is the share.
+    cuts : (C,)
+        As they are named in the table.
+    order : (C,) int
+    values_at : callable
+        From the absolute values of a map to the absolute value of every cut.
+    reference : (V,) int
+        Bins of the reference map.
     """
-    shares = np.asarray(shares, dtype=np.float64)
-    order = np.argsort(-shares)
-    return _sweep(reference, statistics, shares, order, lambda size: density_cuts(size, shares))
+
+    cuts: FloatArray
+    order: NDArray[np.intp]
+    values_at: Callable[[FloatArray], FloatArray]
+    reference: NDArray[np.int64]
+
+    @classmethod
+    def density(cls, reference: Maps, shares: ArrayLike) -> Sweep:
+        """Every map keeps its top share of voxels by |t|.
+
+        Parameters
+        ----------
+        reference : (V,) array
+            t of the reported placement; NaN marks a voxel without a test.
+        shares : (C,) array
+            Shares of the tested voxels, 0 to 1.
+        """
+        shares = np.asarray(shares, dtype=np.float64)
+        order = np.argsort(-shares)
+
+        def values_at(size: FloatArray) -> FloatArray:
+            return density_cuts(size, shares)
+
+        return cls(shares, order, values_at, _bins(reference, order, values_at))
+
+    @classmethod
+    def value(cls, reference: Maps, cuts: ArrayLike) -> Sweep:
+        """Every map keeps the voxels of at least one absolute value.
+
+        Parameters
+        ----------
+        reference : (V,) array
+            Effect of the reported placement; NaN marks a missing voxel.
+        cuts : (C,) array
+            Absolute values, 0 or more, on the scale of the effects.
+        """
+        cuts = np.asarray(cuts, dtype=np.float64)
+        order = np.argsort(cuts)
+        return cls(cuts, order, lambda size: cuts, _bins(reference, order, lambda size: cuts))
+
+    def look(self, values: Maps) -> NDArray[np.int64]:
+        """Sizes of one placement's map (V,), of the reference and of what both share.
+
+        Returns
+        -------
+        (3, 2, C) array
+            What both share, the reference, the map; tails + and -; cuts in `order`.
+        """
+        n_cuts = self.cuts.size
+        width = 2 * n_cuts + 1
+        bins = _bins(values, self.order, self.values_at)
+        joint = np.bincount(self.reference * width + bins, minlength=width**2)
+        found = np.empty((3, 2, n_cuts), dtype=np.int64)
+        square = joint.reshape(width, width)
+        for tail, side in enumerate((square, square[::-1, ::-1])):
+            # passing[a, b]: voxels past at least a + 1 cuts in the reference and b + 1 here.
+            passing = side[:, n_cuts + 1 :][::-1, ::-1].cumsum(axis=0).cumsum(axis=1)[::-1, ::-1]
+            found[0, tail] = passing[n_cuts + 1 :].diagonal()
+            found[1, tail] = side[n_cuts + 1 :].sum(axis=1)[::-1].cumsum()[::-1]
+            found[2, tail] = passing[0]
+        return found
+
+    def table(self, looks: Sequence[NDArray[np.int64]]) -> dict[str, FloatArray]:
+        """Means over placements from what `look` gave for each.
+
+        Returns
+        -------
+        dict of (C,) arrays
+            ``cut``; ``dice_positive_mean`` and ``dice_negative_mean`` over the placements where
+            Dice is defined (NaN where it never is); ``dice_positive_undefined`` and
+            ``dice_negative_undefined``, the number of placements left out; ``n_positive`` and
+            ``n_negative``, the mean map sizes of the placements.
+        """
+        both, first, second = np.stack(looks, axis=1)
+        overlap = dice(both, first, second)
+        undefined = np.isnan(overlap).sum(axis=0)
+        defined = len(looks) - undefined
+        mean = np.divide(
+            np.nansum(overlap, axis=0), defined,
+            out=np.full(defined.shape, np.nan), where=defined > 0,
+        )  # fmt: skip
+        table = {"cut": self.cuts}
+        back = np.argsort(self.order)
+        for tail, name in enumerate(("positive", "negative")):
+            table[f"dice_{name}_mean"] = mean[tail, back]
+            table[f"dice_{name}_undefined"] = undefined[tail, back].astype(np.float64)
+            table[f"n_{name}"] = second[:, tail].mean(axis=0)[back]
+        return table
 
 
-def value_sweep(reference: Maps, effects: Maps, cuts: ArrayLike) -> dict[str, FloatArray]:
-    """Mean Dice with the reference when every map keeps the voxels of at least one absolute value.
-
-    Parameters
-    ----------
-    reference : (V,) array
-        Effect of the reported placement; NaN marks a missing voxel.
-    effects : (N, V) array
-        Effects of the placements.
-    cuts : (C,) array
-        Absolute values, 0 or more, on the scale of the effects.
-
-    Returns
-    -------
-    dict of (C,) arrays
-        ``cut``; ``dice_positive_mean`` and ``dice_negative_mean`` over the placements where Dice
-        is defined (NaN where it never is); ``dice_positive_undefined`` and
-        ``dice_negative_undefined``, the number of placements left out; ``n_positive`` and
-        ``n_negative``, the mean map sizes of the placements.
-    """
-    cuts = np.asarray(cuts, dtype=np.float64)
-    return _sweep(reference, effects, cuts, np.argsort(cuts), lambda size: cuts)
+def _bins(
+    values: Maps, order: NDArray[np.intp], values_at: Callable[[FloatArray], FloatArray]
+) -> NDArray[np.int64]:
+    """Number of passed cuts, with the sign of the value, counted from the number of cuts."""
+    size = np.abs(values.astype(np.float64))
+    passed = np.searchsorted(values_at(size)[order], size, side="right")
+    signs = np.where(np.isnan(values), 0, np.sign(values)).astype(np.int64)
+    return passed * signs + len(order)
 
 
 def _common_voxels(maps: Maps) -> NDArray[np.bool_]:
@@ -227,52 +300,3 @@ def _common_voxels(maps: Maps) -> NDArray[np.bool_]:
     for row in maps:
         common &= ~np.isnan(row)
     return common
-
-
-def _sweep(
-    reference: Maps,
-    maps: Maps,
-    cuts: FloatArray,
-    order: NDArray[np.intp],
-    values_at: Callable[[FloatArray], FloatArray],
-) -> dict[str, FloatArray]:
-    """All cuts at once: a voxel passes the first b cuts in `order` (loosest first), and no other.
-
-    `values_at` gives the absolute value of every cut from the absolute values of a map. With the
-    number of passed cuts as a bin per sign, one joint histogram with the reference holds the
-    sizes and overlaps at every cut.
-    """
-
-    def bins(values: Maps) -> NDArray[np.int64]:
-        size = np.abs(values.astype(np.float64))
-        passed = np.searchsorted(values_at(size)[order], size, side="right")
-        signs = np.where(np.isnan(values), 0, np.sign(values)).astype(np.int64)
-        return passed * signs + n_cuts
-
-    n_cuts = cuts.size
-    width = 2 * n_cuts + 1
-    # Axes: placement, tail (+, -), cut in `order`.
-    both, first, second = np.zeros((3, len(maps), 2, n_cuts))
-    rows = bins(reference) * width
-    for n, row in enumerate(maps):
-        joint = np.bincount(rows + bins(row), minlength=width**2).reshape(width, width)
-        for tail, square in enumerate((joint, joint[::-1, ::-1])):
-            # passing[a, b]: voxels past at least a + 1 cuts in the reference and b + 1 here.
-            passing = square[:, n_cuts + 1 :][::-1, ::-1].cumsum(axis=0).cumsum(axis=1)[::-1, ::-1]
-            both[n, tail] = passing[n_cuts + 1 :].diagonal()
-            second[n, tail] = passing[0]
-            sizes = square[n_cuts + 1 :].sum(axis=1)
-            first[n, tail] = sizes[::-1].cumsum()[::-1]
-    overlap = dice(both, first, second)
-    undefined = np.isnan(overlap).sum(axis=0)
-    defined = len(maps) - undefined
-    mean = np.divide(
-        np.nansum(overlap, axis=0), defined, out=np.full(defined.shape, np.nan), where=defined > 0
-    )
-    table = {"cut": cuts}
-    back = np.argsort(order)
-    for tail, name in enumerate(("positive", "negative")):
-        table[f"dice_{name}_mean"] = mean[tail, back]
-        table[f"dice_{name}_undefined"] = undefined[tail, back].astype(np.float64)
-        table[f"n_{name}"] = second[:, tail].mean(axis=0)[back]
-    return table

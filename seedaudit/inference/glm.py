@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.moments import Moments, Sums
 
 SINGULAR = 1e-10
 """Reciprocal condition number of X'X at which a voxel's model cannot be estimated."""
@@ -107,33 +106,13 @@ def _inverse(xtx: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.broadcast_to(np.moveaxis(result, 0, -1), xtx.shape)
 
 
-def estimate(moments: Moments, model: Model, placement: int) -> Estimate:
-    """Estimate the contrast for one placement at every voxel.
-
-    The residual sum of squares is z'z - (X'z)'(X'X)^-1(X'z).
-    """
-    known = None if moments.variance is None else moments.variance[placement]
-    return estimate_sums(moments.xtz[:, placement], moments.zz[placement], known, model)
-
-
-def estimate_sums(
-    xtz: NDArray[np.floating[Any]],
-    zz: NDArray[np.floating[Any]],
-    known: NDArray[np.floating[Any]] | None,
-    model: Model,
-) -> Estimate:
+def estimate_sums(sums: Sums, model: Model) -> Estimate:
     """Estimate the contrast from the sums of one placement.
 
-    Parameters
-    ----------
-    xtz : (p, V)
-        X'z
-    zz : (V,)
-        z'z
-    known : (V,) or None
-        Sampling variance of z, where it is known (one participant: the effect is z itself).
-    model : Model
+    The residual sum of squares is z'z - (X'z)'(X'X)^-1(X'z). Where the sampling variance of z is
+    known (one participant) the effect is z itself.
     """
+    xtz = sums.xtz
     same = model.inverse.strides[-1] == 0
     inverse, weights = model.inverse, model.weights
     if same:
@@ -143,23 +122,27 @@ def estimate_sums(
     else:
         effect = np.einsum("iv,iv->v", weights, xtz)
         explained = np.einsum("iv,ijv,jv->v", xtz, inverse, xtz)
-    if known is None:
-        variance = np.maximum(zz - explained, 0) / model.df * model.spread
+    if sums.known is None:
+        variance = np.maximum(sums.zz - explained, 0) / model.df * model.spread
     else:
-        variance = known * weights[0] ** 2
+        variance = sums.known * weights[0] ** 2
     standard_error = np.sqrt(variance)
     statistic = np.full_like(effect, np.nan)
     np.divide(effect, standard_error, out=statistic, where=standard_error > 0)
     return Estimate(effect, standard_error, statistic)
 
 
-def uniform_estimate(moments: Moments, n: int, contrast: NDArray[np.float64]) -> Estimate | None:
-    """Estimate the contrast of the first placement where every participant has every voxel.
+def uniform_estimate(
+    xtx: NDArray[np.float64], sums: Sums, n: int, contrast: NDArray[np.float64]
+) -> Estimate | None:
+    """Estimate the contrast of one placement where every participant has every voxel.
 
     Parameters
     ----------
-    moments : Moments
-        Of n participants; X'X is the same at every voxel.
+    xtx : (p, p)
+        X'X of n participants, the same at every voxel.
+    sums : Sums
+        Of the same participants.
     n : int
     contrast : (p,)
 
@@ -168,7 +151,7 @@ def uniform_estimate(moments: Moments, n: int, contrast: NDArray[np.float64]) ->
     Estimate or None
         None where no residual degree of freedom is left or the design is singular.
     """
-    xtx, xtz = moments.xtx[:, :, 0], moments.xtz[:, 0]
+    xtz = sums.xtz
     p = len(contrast)
     if n <= p or 1 / np.linalg.cond(xtx) <= SINGULAR:
         return None
@@ -176,7 +159,7 @@ def uniform_estimate(moments: Moments, n: int, contrast: NDArray[np.float64]) ->
     weights = inverse @ contrast
     effect = weights @ xtz
     explained = np.einsum("iv,iv->v", xtz, inverse @ xtz)
-    residual = np.maximum(moments.zz[0] - explained, 0)
+    residual = np.maximum(sums.zz - explained, 0)
     standard_error = np.sqrt(residual / (n - p) * (weights @ contrast))
     statistic = np.full_like(effect, np.nan)
     np.divide(effect, standard_error, out=statistic, where=standard_error > 0)

@@ -53,14 +53,24 @@ class ThresholdRule:
 class GroupMaps:
     """Maps of N placements on the analysis voxels V of a cloud; row 0 is the reported placement.
 
-    `effects` and `statistics` are (N, V) float32, `classes` (N, V) int8, `standard_error` (V,)
-    that of the reported placement, `df` (V,) infinite for a standard normal statistic.
+    Parameters
+    ----------
+    effects : (N, V) float32
+    classes : (N, V) int8
+    statistic, standard_error : (V,)
+        Of the reported placement.
+    lowest, highest : (V,)
+        Smallest and largest statistic of any placement; NaN where one of them has none.
+    df : (V,)
+        Infinite for a standard normal statistic.
     """
 
     effects: NDArray[np.float32]
-    statistics: NDArray[np.float32]
     classes: NDArray[np.int8]
+    statistic: NDArray[np.float64]
     standard_error: NDArray[np.float64]
+    lowest: NDArray[np.float64]
+    highest: NDArray[np.float64]
     df: NDArray[np.float64]
 
 

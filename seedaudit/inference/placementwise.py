@@ -1,21 +1,27 @@
 """Group maps placement by placement, with each fold of participants left out in turn.
 
 A placement's sums of all folds are read once and stay in cache while everything that depends on
-them is computed; no merged state and no difference of states is ever formed whole.
+them is computed; no merged state, no difference of states and no field of all statistics is ever
+formed whole.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from seedaudit.inference.glm import estimate_sums, solve_model
+from seedaudit.inference.glm import Estimate, Model, estimate_sums, solve_model
 from seedaudit.inference.group import Classifier, GroupMaps, common_df
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.moments import FoldState, Moments, merged, total_sums
+
+Seen = TypeVar("Seen")
+DegreesOfFreedom = float | NDArray[np.float64]
+SIGNS = (1, -1)
 
 
 @dataclass(frozen=True)
@@ -24,18 +30,35 @@ class WithoutFolds:
 
     Parameters
     ----------
-    counts : (G, A, 3) int32
-        Drawn placements in class +, 0 and - at every voxel.
-    sizes : (G, N, 2) int
-        Voxels of each placement in class + and in class -, among those that are sized.
+    tails : (G, 2, A) uint16
+        Drawn placements in class + and in class - at every voxel.
+    n_drawn : int
+    sizes : (1 + G, N, 2) int
+        Voxels of each placement in class + and in class -, among those that are sized; with
+        everybody, and without each fold.
     """
 
-    counts: NDArray[np.int32]
+    tails: NDArray[np.uint16]
+    n_drawn: int
     sizes: NDArray[np.int_]
+
+    def counts(self, fold: int) -> NDArray[np.int32]:
+        """Drawn placements in class +, 0 and - without that fold, (A, 3)."""
+        positive, negative = self.tails[fold].astype(np.int32)
+        return np.stack([positive, self.n_drawn - positive - negative, negative], axis=1)
+
+
+@dataclass
+class _Seen:
+    """What one thread has gathered over its placements."""
+
+    tails: NDArray[np.uint16]
+    lowest: NDArray[np.float64]
+    highest: NDArray[np.float64]
 
 
 def placement_maps(
-    folds: Sequence[Moments],
+    folds: Sequence[FoldState],
     fold_sizes: Sequence[int],
     voxels: NDArray[np.bool_],
     contrast: NDArray[np.float64],
@@ -43,13 +66,14 @@ def placement_maps(
     classes_of: Classifier,
     sized: NDArray[np.bool_],
     *,
+    look: Callable[[Estimate, DegreesOfFreedom], Seen] | None = None,
     workers: int = 1,
-) -> tuple[GroupMaps, WithoutFolds]:
+) -> tuple[GroupMaps, WithoutFolds, list[Seen]]:
     """Estimate and classify every placement, in full and without each fold.
 
     Parameters
     ----------
-    folds : sequence of Moments
+    folds : sequence of FoldState
         Of N placements, the reported one first; folds without participants say nothing.
     fold_sizes : sequence of int
         Participants in each fold.
@@ -62,97 +86,83 @@ def placement_maps(
         (statistic, effect, df) -> classes.
     sized : (A,) bool
         Voxels that count for the sizes of maps.
+    look : callable, optional
+        (estimate, df) -> anything small, asked of every placement while its maps are at hand; of
+        the reported placement first.
     workers : int
         Threads; the numbers do not depend on it.
 
     Returns
     -------
-    GroupMaps, WithoutFolds
+    GroupMaps, WithoutFolds, and what `look` gave in the order of the placements
     """
+    rows = np.flatnonzero(voxels)
     used = [(fold, size) for fold, size in zip(folds, fold_sizes, strict=True) if size]
     parts = [fold for fold, _ in used]
-    frame = [_frame(fold, voxels) for fold in parts]
-    total = _sum(frame)
-    model = solve_model(total, contrast, needed)
-    others = []
-    if len(parts) > 1:
-        others = [
-            solve_model(total - own, contrast, needed - size)
-            for own, (_, size) in zip(frame, used, strict=True)
-        ]
+    model, others = _models(parts, [size for _, size in used], rows, contrast, needed)
     df, other_dfs = common_df(model.df), [common_df(other.df) for other in others]
-    n, a = parts[0].zz.shape[0], int(voxels.sum())
-    effects, statistics = np.empty((2, n, a), np.float32)
-    classes = np.empty((n, a), np.int8)
-    sizes = np.zeros((len(others), n, 2), int)
-    errors = np.empty(a)
+    n, a, g = parts[0].n_placements, len(rows), len(others)
+    effects, classes = np.empty((n, a), np.float32), np.empty((n, a), np.int8)
+    sizes = np.zeros((1 + g, n, 2), int)
+    statistic, errors = np.empty((2, a))
+    seen: list[Any] = [None] * n
 
-    def work(placements: range) -> NDArray[np.int32]:
-        counts = np.zeros((len(others), a, 3), np.int32)
-        for i in placements:
-            sums = [_sums(fold, i, voxels) for fold in parts]
-            whole = _total(sums)
-            found = estimate_sums(*whole, model)
-            effects[i], statistics[i] = found.effect, found.statistic
-            classes[i] = classes_of(found.statistic, found.effect, df)
-            if i == 0:
-                errors[:] = found.standard_error
-            for g, (rest, rest_df) in enumerate(zip(others, other_dfs, strict=True)):
-                left = estimate_sums(*_difference(whole, sums[g]), rest)
-                made = classes_of(left.statistic, left.effect, rest_df)
-                sizes[g, i] = [np.count_nonzero(made[sized] == sign) for sign in (1, -1)]
+    def one(i: int, into: _Seen) -> None:
+        sums = [fold.sums(i, rows) for fold in parts]
+        whole = total_sums(sums)
+        found = estimate_sums(whole, model)
+        made = classes_of(found.statistic, found.effect, df)
+        effects[i], classes[i] = found.effect, made
+        np.minimum(into.lowest, found.statistic, out=into.lowest)
+        np.maximum(into.highest, found.statistic, out=into.highest)
+        for column, sign in enumerate(SIGNS):
+            sizes[0, i, column] = np.count_nonzero((made == sign) & sized)
+        if i == 0:
+            statistic[:], errors[:] = found.statistic, found.standard_error
+        if look is not None:
+            seen[i] = look(found, df)
+        for fold, (rest, rest_df) in enumerate(zip(others, other_dfs, strict=True)):
+            left = estimate_sums(whole - sums[fold], rest)
+            made = classes_of(left.statistic, left.effect, rest_df)
+            for column, sign in enumerate(SIGNS):
+                here = made == sign
+                sizes[1 + fold, i, column] = np.count_nonzero(here & sized)
                 if i:
-                    for column, sign in enumerate((1, 0, -1)):
-                        counts[g, :, column] += made == sign
-        return counts
+                    into.tails[fold, column] += here
 
-    shares = [range(start, n, workers) for start in range(min(workers, n))]
-    with ThreadPoolExecutor(len(shares)) as pool:
-        counted = list(pool.map(work, shares))
-    maps = GroupMaps(effects, statistics, classes, errors, model.df)
-    return maps, WithoutFolds(np.sum(counted, axis=0, dtype=np.int32), sizes)
+    def work(placements: range) -> _Seen:
+        into = _Seen(np.zeros((g, 2, a), np.uint16), np.full(a, np.inf), np.full(a, -np.inf))
+        for i in placements:
+            one(i, into)
+        return into
 
-
-Sums = tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64] | None]
-
-
-def _frame(fold: Moments, voxels: NDArray[np.bool_]) -> Moments:
-    """What a fold's placements share: counts and X'X at the voxels."""
-    none = fold.xtz[:, :0]
-    return Moments(fold.count, fold.xtx, none, fold.zz[:0], _none_of(fold)).voxels(voxels)
-
-
-def _none_of(fold: Moments) -> NDArray[np.float64] | None:
-    return None if fold.variance is None else fold.variance[:0]
+    first = work(range(1))
+    shares = [range(1 + start, n, workers) for start in range(min(workers, n - 1))]
+    with ThreadPoolExecutor(max(1, len(shares))) as pool:
+        for share in pool.map(work, shares):
+            first.tails += share.tails
+            np.minimum(first.lowest, share.lowest, out=first.lowest)
+            np.maximum(first.highest, share.highest, out=first.highest)
+    maps = GroupMaps(
+        effects, classes, statistic, errors, first.lowest, first.highest, model.df
+    )  # fmt: skip
+    return maps, WithoutFolds(first.tails, n - 1, sizes), seen
 
 
-def _sum(frames: Sequence[Moments]) -> Moments:
-    total = frames[0] - frames[0]
-    for frame in frames:
-        total += frame
-    return total
-
-
-def _sums(fold: Moments, i: int, voxels: NDArray[np.bool_]) -> Sums:
-    """X'z (p, A), z'z (A,) and known variance (A,) of one placement in one fold, in float64."""
-    known = None if fold.variance is None else fold.variance[i][voxels].astype(np.float64)
-    xtz = fold.xtz[:, i][:, voxels].astype(np.float64, copy=False)
-    return xtz, fold.zz[i][voxels].astype(np.float64, copy=False), known
-
-
-def _total(sums: Sequence[Sums]) -> Sums:
-    """Sum over folds, in their order."""
-    xtz, zz, known = (None if part is None else part.copy() for part in sums[0])
-    assert xtz is not None
-    assert zz is not None
-    for part in sums[1:]:
-        xtz += part[0]
-        zz += part[1]
-        if known is not None and part[2] is not None:
-            known += part[2]
-    return xtz, zz, known
-
-
-def _difference(whole: Sums, part: Sums) -> Sums:
-    known = None if whole[2] is None or part[2] is None else whole[2] - part[2]
-    return whole[0] - part[0], whole[1] - part[1], known
+def _models(
+    parts: Sequence[FoldState],
+    sizes: Sequence[int],
+    rows: NDArray[np.int_],
+    contrast: NDArray[np.float64],
+    needed: int,
+) -> tuple[Model, list[Model]]:
+    """The model of everybody, and without each fold where there is more than one."""
+    frames: list[Moments] = [part.frame(rows) for part in parts]
+    total = merged(frames)
+    model = solve_model(total, contrast, needed)
+    if len(parts) < 2:
+        return model, []
+    return model, [
+        solve_model(total - own, contrast, needed - size)
+        for own, size in zip(frames, sizes, strict=True)
+    ]

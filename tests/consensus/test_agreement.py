@@ -68,9 +68,9 @@ def test_minimum_statistic_example():
     # Rule of Nichols et al. (2005) NeuroImage 25:653-660: the minimum against the ordinary
     # threshold, equal to the largest p against the level. Values by scipy.
     t = np.array([[2, 3.1, 1.5], [4.2, 3.6, 3.9], [2.5, -0.4, 3], [1.8, 1.75, 1.73], [1.7, 5, 5]]).T
-    found = agreement.conjunction(t)
+    found = agreement.conjunction(t.min(axis=0), t.max(axis=0))
     np.testing.assert_allclose(found, [1.5, 3.6, 0.0, 1.73, 1.7])
-    np.testing.assert_allclose(agreement.conjunction(-t), -found)
+    np.testing.assert_allclose(agreement.conjunction(-t.max(axis=0), -t.min(axis=0)), -found)
     largest_p = stats.t.sf(t, 20).max(axis=0)
     np.testing.assert_allclose(
         largest_p[[0, 1, 3, 4]], [0.074618, 0.000894, 0.049517, 0.052316], atol=1e-6
@@ -82,7 +82,9 @@ def test_minimum_statistic_example():
 
 def test_conjunction_of_zero_and_missing():
     t = np.array([[0.0, np.nan, -2.0, 1.0], [3.0, 2.0, -1.0, -1.0]], dtype=np.float32)
-    np.testing.assert_array_equal(agreement.conjunction(t), [0.0, np.nan, -1.0, 0.0])
+    np.testing.assert_array_equal(
+        agreement.conjunction(t.min(axis=0), t.max(axis=0)), [0.0, np.nan, -1.0, 0.0]
+    )
 
 
 def test_spread_matches_numpy():
@@ -103,7 +105,7 @@ def test_spread_makes_no_double_precision_copy():
     effects = np.ones((64, 20_000), dtype=np.float32)
     tracemalloc.start()
     agreement.effect_spread(effects)
-    agreement.conjunction(effects)
+    agreement.conjunction(effects.min(axis=0), effects.max(axis=0))
     peak = tracemalloc.get_traced_memory()[1]
     tracemalloc.stop()
     assert peak < effects.nbytes / 2

@@ -8,9 +8,9 @@ import numpy as np
 import pytest
 from sklearn.metrics import f1_score
 
-from seedaudit.consensus.ceiling import ceiling, class_similarity, map_sizes
+from seedaudit.consensus.ceiling import ceiling, class_similarity
 from seedaudit.consensus.chance import gwet_ac1
-from seedaudit.consensus.halves import cross_half_r, fold_sums, half_splits, halves
+from seedaudit.consensus.halves import FoldMaps, cross_half_r, fold_sums, half_splits, halves
 from seedaudit.inference.glm import uniform_estimate
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
@@ -89,7 +89,7 @@ def test_spatial_r_against_maps_of_halves(study):
     voxels = np.arange(V)
     for i in range(N):
         found = cross_half_r(
-            fold_sums(moments, 0, voxels), fold_sums(moments, i, voxels), BOUNDS, split
+            *(FoldMaps.of(fold_sums(moments, k, voxels), BOUNDS) for k in (0, i)), split
         )
         assert found.shape == (1 + FOLDS, len(BOUNDS))
         assert np.isnan(found[:, 2]).all()  # two voxels
@@ -108,12 +108,13 @@ def test_spatial_r_against_maps_of_halves(study):
 def test_estimate_of_a_half_is_least_squares(study):
     z, design, contrast, rows, moments = study
     members = np.concatenate([rows[0], rows[2]])
-    total = merged([moments[0], moments[2]]).placements(slice(3, 4))
-    found = uniform_estimate(total, len(members), contrast)
+    total = merged([moments[0], moments[2]])
+    xtx, sums = total.xtx[:, :, 0], total.sums(3, slice(None))
+    found = uniform_estimate(xtx, sums, len(members), contrast)
     effect, t = fit(z, design, contrast, members)
     np.testing.assert_allclose(found.effect, effect[3], atol=1e-6)
     np.testing.assert_allclose(found.statistic, t[3], rtol=1e-5, atol=1e-6)
-    assert uniform_estimate(total, design.shape[1], contrast) is None
+    assert uniform_estimate(xtx, sums, design.shape[1], contrast) is None
 
 
 def naive_classes(t, tails):
@@ -135,7 +136,16 @@ def test_classes_of_halves_have_the_sizes_of_the_whole(study):
     members = half_splits(FOLDS, 10)[:2]
     placements = np.array([0, 2, 4])
     found = class_similarity(
-        moments, sizes, contrast, placements, np.ones(V, bool), tails, regions, 2, members
+        moments,
+        sizes,
+        np.array([fold.xtx[:, :, 0] for fold in moments]),
+        contrast,
+        placements,
+        np.arange(V),
+        tails,
+        regions,
+        2,
+        members,
     )
     for d, left_out in enumerate([None, *range(FOLDS)]):
         pairs = [
@@ -222,11 +232,6 @@ def test_it_says_when_there_are_no_halves():
     assert found is not None
     # only {2, 1 person} against {1, 1}: two participants or more in each half
     assert found.n_splits == 3
-
-
-def test_map_sizes():
-    classes = np.array([[1, 1, 0, -1], [0, 0, 0, 0]], np.int8)
-    assert map_sizes(classes).tolist() == [[2, 1], [0, 0]]
 
 
 def test_relative_stability_is_free_of_sampling_noise():

@@ -11,7 +11,7 @@ from seedaudit.consensus.floor import control_similarity, fold_residuals, residu
 from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.space.geometry import FWHM_PER_SD
 from seedaudit.sweep.correlate import ZBlock
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import Chosen, Moments, merged
 from tests.whole_states import group_maps
 
 ONE = np.ones(1)
@@ -37,11 +37,14 @@ def test_controls_are_compared_outside_their_own_sphere():
     z = truth + 0.8 * rng.standard_normal((10, 3, 80))
     ijk = np.stack([np.arange(80), np.zeros(80), np.zeros(80)], axis=1).astype(np.int32)
     classes_of = classifier(ThresholdRule("p", 0.05), ijk, (80, 1, 1))
-    total = merged(moments_of(z, np.ones((10, 1))))
-    reported = group_maps(total.placements(slice(0, 1)), ONE, 10, classes_of)
+    folds = moments_of(z, np.ones((10, 1)))
+    reported = group_maps(merged(folds).placements(slice(0, 1)), ONE, 10, classes_of)
     keep = np.ones((2, 80), bool)
     keep[:, :8] = False
-    found = control_similarity(total.placements(slice(1, 3)), ONE, 10, reported, keep, classes_of)
+    controls = [Chosen(fold, np.array([1, 2])) for fold in folds]
+    found = control_similarity(
+        controls, np.ones(80, bool), ONE, 10, reported, keep, classes_of, workers=2
+    )
     mean = z.mean(axis=0)
     t = mean / (z.std(axis=0, ddof=1) / np.sqrt(10))
     classes = np.where(np.abs(t) >= 2.2621571627, np.sign(t), 0)[:, 8:]  # t table, df 9

@@ -174,7 +174,8 @@ def test_density_sweep_matches_naive(decimals, gaps):
 
         return passes
 
-    table = overlap.density_sweep(maps[0], maps[1:], shares)
+    sweep = overlap.Sweep.density(maps[0], shares)
+    table = sweep.table([sweep.look(row) for row in maps[1:]])
     check_sweep(table, shares, [naive_sweep(maps[0], maps[1:], keep(s)) for s in shares])
 
 
@@ -184,7 +185,8 @@ def test_value_sweep_matches_naive(decimals):
     maps[2, :30] = np.nan
     maps[0, 20:50] = np.nan
     cuts = np.array([0.5, 0.0, 1.2, 0.3, 2.4, 99.0])
-    table = overlap.value_sweep(maps[0], maps[1:], cuts)
+    sweep = overlap.Sweep.value(maps[0], cuts)
+    table = sweep.table([sweep.look(row) for row in maps[1:]])
     naive = [naive_sweep(maps[0], maps[1:], lambda v, c=c: np.abs(v) >= c) for c in cuts]
     check_sweep(table, cuts, naive)
     assert np.isnan(table["dice_positive_mean"][-1])
@@ -198,7 +200,8 @@ def test_dice_of_correlated_maps_at_a_fixed_size():
     joint = stats.multivariate_normal(cov=[[1, 0.9], [0.9, 1]]).cdf([-cut, -cut])
     rng = np.random.default_rng(12)
     x, noise = rng.standard_normal((2, 100_000))
-    table = overlap.density_sweep(x, (0.9 * x + np.sqrt(0.19) * noise)[None], [0.2])
+    sweep = overlap.Sweep.density(x, [0.2])
+    table = sweep.table([sweep.look(0.9 * x + np.sqrt(0.19) * noise)])
     assert joint / 0.1 == pytest.approx(0.69, abs=0.005)
     for tail in ("positive", "negative"):
         assert table[f"dice_{tail}_mean"][0] == pytest.approx(joint / 0.1, abs=0.012)

@@ -9,9 +9,10 @@ import pytest
 import statsmodels.api as sm
 from scipy import stats
 
-from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.inference.glm import orthonormal_design, solve_model
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
+from tests.whole_states import estimate
 
 
 def stream(x, y, contrast, valid=None, needed=None):

@@ -49,22 +49,37 @@ def test_equals_whole_states(workers, missing, rule):
     ijk = np.argwhere(np.ones(SHAPE)).astype(np.int32)[voxels]
     classes_of = classifier(ThresholdRule(*rule), ijk, SHAPE)
     needed = 8 if missing else 12
-    maps, without = placement_maps(
-        folds, sizes, voxels, contrast, needed, classes_of, sized, workers=workers
+    maps, without, seen = placement_maps(
+        folds,
+        sizes,
+        voxels,
+        contrast,
+        needed,
+        classes_of,
+        sized,
+        look=lambda found, df: found.statistic,
+        workers=workers,
     )
     total = merged(folds).voxels(voxels)
     expected = group_maps(total, contrast, needed, classes_of)
     np.testing.assert_allclose(maps.effects, expected.effects, rtol=1e-6)
-    np.testing.assert_allclose(maps.statistics, expected.statistics, rtol=1e-5)
+    np.testing.assert_allclose(np.array(seen), expected.statistics, rtol=1e-5)
+    np.testing.assert_array_equal(maps.statistic, seen[0])
+    np.testing.assert_array_equal(maps.lowest, np.min(seen, axis=0))
+    np.testing.assert_array_equal(maps.highest, np.max(seen, axis=0))
     np.testing.assert_array_equal(maps.classes, expected.classes)
     np.testing.assert_allclose(maps.standard_error, expected.standard_error, rtol=1e-9)
+    for column, sign in enumerate((1, -1)):
+        np.testing.assert_array_equal(
+            without.sizes[0, :, column], (maps.classes[:, sized] == sign).sum(axis=1)
+        )
     used = [(fold, size) for fold, size in zip(folds, sizes, strict=True) if size]
     for g, (fold, size) in enumerate(used):
         rest = group_maps(total - fold.voxels(voxels), contrast, needed - size, classes_of)
-        np.testing.assert_array_equal(without.counts[g], class_counts(rest.classes[1:]))
+        np.testing.assert_array_equal(without.counts(g), class_counts(rest.classes[1:]))
         for column, sign in enumerate((1, -1)):
             np.testing.assert_array_equal(
-                without.sizes[g, :, column], (rest.classes[:, sized] == sign).sum(axis=1)
+                without.sizes[1 + g, :, column], (rest.classes[:, sized] == sign).sum(axis=1)
             )
 
 
@@ -73,6 +88,7 @@ def test_one_fold_has_nothing_to_leave_out():
     every = np.ones(V, bool)
     ijk = np.argwhere(np.ones(SHAPE)).astype(np.int32)
     classes_of = classifier(ThresholdRule("p", 0.05), ijk, SHAPE)
-    _, without = placement_maps(folds, [6], every, contrast, 6, classes_of, every)
-    assert without.counts.shape == (0, V, 3)
-    assert without.sizes.shape == (0, N, 2)
+    maps, without, _ = placement_maps(folds, [6], every, contrast, 6, classes_of, every)
+    assert len(without.tails) == 0
+    expected = [[(row == sign).sum() for sign in (1, -1)] for row in maps.classes]
+    np.testing.assert_array_equal(without.sizes, [expected])

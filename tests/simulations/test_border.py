@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from seedaudit.consensus.ceiling import ceiling, map_sizes
+from seedaudit.consensus.ceiling import ceiling
 from seedaudit.consensus.overlap import dice_with_reference
 from seedaudit.consensus.tolerance import decay_fits, most_fragile, tolerance_table
 from seedaudit.inference.group import ThresholdRule, classifier
@@ -24,8 +24,10 @@ def examine(world: World, rule: ThresholdRule, rng: np.random.Generator):
     classes_of = classifier(rule, ijk, (world.voxels, 1, 1))
     total = merged(folds)
     maps = group_maps(total, ONE, 2, classes_of)
-    tails = [map_sizes(maps.classes)] + [
-        map_sizes(group_maps(total - fold, ONE, 2, classes_of).classes) for fold in folds
+    without = [group_maps(total - fold, ONE, 2, classes_of) for fold in folds]
+    tails = [
+        np.stack([(part.classes == sign).sum(axis=1) for sign in (1, -1)], axis=1)
+        for part in (maps, *without)
     ]
     top = ceiling(
         folds, sizes, ONE, np.ones(world.voxels, bool), np.array(tails), voxels * 3 // world.voxels,

@@ -7,7 +7,7 @@ import pytest
 
 from seedaudit.consensus.agreement import class_counts
 from seedaudit.consensus.chance import gwet_ac1
-from seedaudit.consensus.halves import cross_half_r, fold_sums, half_splits, halves
+from seedaudit.consensus.halves import FoldMaps, cross_half_r, fold_sums, half_splits, halves
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
 from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.sweep.moments import merged
@@ -60,9 +60,9 @@ def test_stability_and_ceiling_relative_stability():
             for part in (total, *(total - fold for fold in folds))
         ]
         split = halves(np.array([f.xtx[:, :, 0] for f in folds]), sizes, ONE, members)
-        sums = [fold_sums(folds, i, voxels) for i in range(world.count + 1)]
         bounds = np.array([[0, world.voxels]])
-        r = np.array([cross_half_r(sums[0], shifted, bounds, split)[:, 0] for shifted in sums])
+        maps = [FoldMaps.of(fold_sums(folds, i, voxels), bounds) for i in range(world.count + 1)]
+        r = np.array([cross_half_r(maps[0], shifted, split)[:, 0] for shifted in maps])
         for name, values in (
             ("stability", np.array(scores)),
             ("ceiling", r[0]),

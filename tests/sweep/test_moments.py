@@ -9,9 +9,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from seedaudit.inference.glm import estimate, orthonormal_design, solve_model
+from seedaudit.inference.glm import orthonormal_design, solve_model
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
+from tests.whole_states import estimate
 
 N, V = 3, 11
 
@@ -33,17 +34,25 @@ def study(rng, n=12, p=2):
 
 @settings(max_examples=30, deadline=None)
 @given(cuts=st.sets(st.integers(1, 11), max_size=6), seed=st.integers(0, 100))
-def test_any_grouping_gives_the_same_state(cuts, seed):
-    x, z = study(np.random.default_rng(seed))
+def test_any_grouping_and_order_give_the_same_digits(cuts, seed):
+    rng = np.random.default_rng(seed)
+    x, z = study(rng)
+    x, _ = orthonormal_design(x, np.ones(2))
+    order = rng.permutation(12)
     whole = moments_of(x, z, range(12))
     bounds = [0, *sorted(cuts), 12]
-    parts = [moments_of(x, z, range(a, b)) for a, b in pairwise(bounds)]
-    again = merged(parts)
-    np.testing.assert_allclose(again.zz, whole.zz, rtol=1e-13)
-    np.testing.assert_allclose(again.xtz, whole.xtz, atol=1e-12)
-    np.testing.assert_array_equal(again.count, whole.count)
-    left = whole - parts[0]
-    np.testing.assert_allclose(left.zz, merged(parts[1:]).zz if len(parts) > 1 else 0, atol=1e-12)
+    parts = [moments_of(x, z, order[a:b]) for a, b in pairwise(bounds)]
+    again = merged(parts[::-1])
+    for (name, value), (_, other) in zip(whole.named_arrays(), again.named_arrays(), strict=True):
+        np.testing.assert_array_equal(value, other, err_msg=name)
+    rest = merged(parts[1:]) if len(parts) > 1 else moments_of(x, z, [])
+    for (name, value), (_, other) in zip(
+        (whole - parts[0]).named_arrays(), rest.named_arrays(), strict=True
+    ):
+        np.testing.assert_array_equal(value, other, err_msg=name)
+    # the sums themselves are those of the participants, to float64's digits
+    np.testing.assert_allclose(whole.zz, (z.astype(float) ** 2).sum(axis=0), rtol=1e-10)
+    np.testing.assert_allclose(whole.xtz, np.einsum("sp,snv->pnv", x, z), atol=1e-12)
 
 
 def test_merging_leaves_its_parts_alone():
