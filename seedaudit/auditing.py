@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import tempfile
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import Any, Protocol
@@ -97,12 +99,14 @@ def audit(
     # an equivalent design with orthonormal columns keeps the digits of the streamed sums
     matrix, contrast = orthonormal_design(plan.design.matrix, plan.design.contrast)
     folds = plan_folds(plan)
-    progress.stage("reading participants", len(plan.participants))
+    progress.stage("reading participants", len(plan.participants) * plan.layout.tiles)
     # single-threaded products, so that the digits depend on no number of cores
-    with threadpool_limits(limits=1):
+    with threadpool_limits(limits=1), _scratch(plan, cluster, checkpoint) as scratch:
         swept = sweep(
             replace(plan.sweep_task(matrix), prepared=prepared),
             folds,
+            layout=plan.layout,
+            scratch=scratch,
             workers=workers,
             cluster=cluster,
             checkpoint=checkpoint,
@@ -134,8 +138,23 @@ def open_checkpoint(
 ) -> Checkpoint:
     """The progress of a plan in a folder, to be entered as a context until the result is safe."""
     matrix, _ = orthonormal_design(plan.design.matrix, plan.design.contrast)
-    key = sweep_key(plan.sweep_task(matrix), plan_folds(plan))
+    key = sweep_key(plan.sweep_task(matrix), plan_folds(plan), plan.layout)
     return Checkpoint(folder, key, fresh=fresh, tell=tell)
+
+
+@contextmanager
+def _scratch(
+    plan: Plan, cluster: str | None, checkpoint: Checkpoint | None
+) -> Iterator[Path | None]:
+    """A folder for the states of finished folds, where they leave the memory."""
+    if not plan.layout.on_disk and cluster is None:
+        yield None
+    elif checkpoint is not None:
+        checkpoint.state_folder.mkdir(exist_ok=True)
+        yield checkpoint.state_folder
+    else:
+        with tempfile.TemporaryDirectory(prefix="seedaudit-") as folder:
+            yield Path(folder)
 
 
 def plan_folds(plan: Plan) -> list[list[ParticipantTask]]:

@@ -1,4 +1,7 @@
-"""A memory budget kept: fewer folds first, then a state of half precision; else an error."""
+"""A memory budget kept: finished folds go to disk, then the voxels are done in tiles.
+
+Neither changes a digit. Fewer folds, which do, are the last resort.
+"""
 
 from __future__ import annotations
 
@@ -9,12 +12,15 @@ import psutil
 from seedaudit.errors import Problem, StudyError
 from seedaudit.forecast import forecast
 from seedaudit.plan import Plan
+from seedaudit.sweep.tiles import Layout
 
 USUAL_SHARE = 0.8
 """Share of the machine's memory that a run keeps to when nothing is said."""
 
 LEAST_FOLDS = 4
-"""Folds below which a jackknife interval says little; only the last resort goes lower."""
+"""Folds below which a jackknife interval says little."""
+
+MOST_TILES = 64
 
 UNITS = {"": 1.0, "B": 1.0, "KB": 1e3, "MB": 1e6, "GB": 1e9, "TB": 1e12}
 
@@ -45,33 +51,43 @@ def usual_memory() -> float:
 
 
 def fitted(plan: Plan, workers: int, memory: float) -> Plan:
-    """The plan as it fits into so many bytes; what was given up stands among its choices.
+    """The plan as it fits into so many bytes; what that takes stands among its choices.
 
     Raises
     ------
     StudyError
         If it does not fit in any way.
     """
-    asked = plan.folds
-    fewer = min(asked, LEAST_FOLDS)
-    steps = [(asked, "float64"), (fewer, "float64"), (fewer, "float32"), (2, "float32")]
-    for folds, precision in steps:
-        trial = replace(plan, folds=folds, precision=precision)
-        if forecast(trial, workers).memory > memory:
-            continue
-        if (folds, precision) == steps[0]:
-            return trial
-        text = f"to keep to {memory / 1e9:.1f} GB of memory: {folds} folds in the place of {asked}"
-        if precision != "float64":
-            text += f", their state in {precision}"
-        return replace(trial, choices=(*plan.choices, text))
-    least = forecast(replace(plan, folds=2, precision="float32"), workers).memory
+    for folds in dict.fromkeys((plan.folds, min(plan.folds, LEAST_FOLDS))):
+        for layout in _layouts():
+            trial = replace(plan, folds=folds, layout=layout)
+            if forecast(trial, workers).memory <= memory:
+                words = _words(trial, plan.folds, memory)
+                return replace(trial, choices=(*plan.choices, *words))
+    most = replace(plan, folds=min(plan.folds, LEAST_FOLDS), layout=Layout(MOST_TILES, True))
+    least = forecast(most, workers).memory
     raise StudyError(
         Problem(
             "memory",
             f"{memory / 1e9:.1f} GB to keep to; this study needs about {least / 1e9:.1f} GB at the "
             "least",
-            "enough memory for the state of all placements",
+            "enough memory for the maps of all placements of a seed",
             "fewer placements or workers, a smaller mask, or a machine with more memory",
         )
     )
+
+
+def _layouts() -> list[Layout]:
+    """From the fastest to the one that takes least memory."""
+    return [Layout(), *(Layout(tiles, on_disk=True) for tiles in range(1, MOST_TILES + 1))]
+
+
+def _words(plan: Plan, asked: int, memory: float) -> list[str]:
+    parts = []
+    if plan.folds < asked:
+        parts.append(f"{plan.folds} folds in the place of {asked}")
+    if plan.layout.on_disk:
+        parts.append("the state of finished folds on disk")
+    if plan.layout.tiles > 1:
+        parts.append(f"{plan.layout.tiles} passes over the data, each for a part of the voxels")
+    return [f"to keep to {memory / 1e9:.1f} GB of memory: {', '.join(parts)}"] if parts else []

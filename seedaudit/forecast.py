@@ -12,8 +12,10 @@ import psutil
 from seedaudit.dictionary import MAPS
 from seedaudit.errors import Problem, StudyError
 from seedaudit.plan import Plan
+from seedaudit.searching import PlannedSearch
 from seedaudit.sweep.correlate import BLOCK
 from seedaudit.sweep.schedule import assign_folds
+from seedaudit.sweep.tiles import tile_slices
 
 READ_RATE = 150e6
 """Uncompressed bytes a worker reads in a second: the usual order for gzip on one core."""
@@ -26,6 +28,15 @@ ESTIMATE_RATE = 1.5e7
 
 BASE_MEMORY = 300e6
 """The program itself with its libraries, bytes."""
+
+
+MAPS_MEMORY = 25
+"""Volumes of the grid in float32 that a result holds."""
+
+OTHER_MAPS = 30
+"""Further maps in float64 that a worker's arithmetic on one placement takes at the most."""
+
+CLASS_SPLITS = 4
 
 
 @dataclass(frozen=True)
@@ -41,45 +52,103 @@ class Forecast:
     progress: float = 0.0
 
 
+@dataclass(frozen=True)
+class _Sizes:
+    """What the needs follow from: voxels V, placements N, columns p, folds G, and bytes of a state
+    for each voxel.
+    """
+
+    voxels: int
+    placements: int
+    p: int
+    folds: int
+    state: float
+
+    @classmethod
+    def of(cls, plan: Plan) -> _Sizes:
+        single = len(plan.participants) == 1
+        p, n = plan.design.matrix.shape[1], plan.n_swept
+        each = 8 * (p + 2) if single else 4 * (p + 1)
+        folds = len(assign_folds(plan.design.strata, plan.folds))
+        return cls(len(plan.voxels), n, p, folds, each * n + 8.0 * p * p + 4)
+
+
 def forecast(plan: Plan, workers: int) -> Forecast:
     """Predict what a run of the plan needs with so many workers."""
-    n_voxels, n_placements = len(plan.voxels), plan.n_swept
-    p = plan.design.matrix.shape[1]
-    runs = [[run.header for run in participant.runs] for participant in plan.participants]
-    n_folds = len(assign_folds(plan.design.strata, plan.folds))
-    workers = min(workers, n_folds)
-
-    layers = p + 1 + (len(plan.participants) == 1)
-    digits = np.dtype(plan.precision).itemsize
-    one_state = n_voxels * (digits * layers * n_placements + 8 * p * p + 4)
-    searched = [seed.search for seed in plan.seeds if seed.search is not None]
-    search_state = sum(8.0 * len(one.shifts) * len(one.targets) for one in searched)
-    series = max(4 * n_voxels * sum(h.n_volumes for h in own) for own in runs)
-    block = 8 * BLOCK * (n_placements * 4 + max(h.n_volumes for own in runs for h in own))
-    sweeping = workers * (series + block)
-    largest = max(len(seed.used) for seed in plan.seeds)
-    # effects, statistics and classes of a cloud, its parts for pairs and low rank, and counts of
-    # classes with each fold left out, for every worker
-    concluding = n_voxels * (18 * largest + 12 * n_folds * workers + 150)
-    # float32 copies of a search's sums, of all folds and of one block of candidates
-    judging = n_folds * max((4.0 * len(s.shifts) * len(s.targets) for s in searched), default=0)
-    states = n_folds * (one_state + search_state)
-    memory = BASE_MEMORY + states + max(sweeping, concluding, 2 * judging)
-
-    stored = sum(float(np.prod(h.grid.shape)) * h.n_volumes * h.dtype.itemsize
-                 for own in runs for h in own)  # fmt: skip
-    products = 2.0 * n_placements * n_voxels * sum(h.n_volumes for own in runs for h in own)
-    products += sum(2.0 * len(one.shifts) * len(one.targets) * h.n_volumes
-                    for one in searched for own in runs for h in own)  # fmt: skip
-    pairs = sum(float(one.around().counts.sum()) * len(one.targets) for one in searched)
-    estimates = n_placements * n_voxels * (n_folds + 1)
-    seconds = (stored / READ_RATE + products / PRODUCT_RATE) / workers + estimates / ESTIMATE_RATE
-    # every pair of a candidate and its neighbour, for every two folds, in blocks
-    seconds += 4 * n_folds**2 * pairs / PRODUCT_RATE
-    disk = len(plan.seeds) * (2.0 * len(MAPS) * n_voxels + 60.0 * n_placements**2 / 2) + 2e6
+    sizes = _Sizes.of(plan)
+    workers = min(workers, sizes.folds)
+    memory = BASE_MEMORY + max(_sweeping(plan, sizes, workers), _concluding(plan, sizes, workers))
+    disk = len(plan.seeds) * (2.0 * len(MAPS) * sizes.voxels + 60.0 * sizes.placements**2 / 2) + 2e6
     # one fold is written anew while its last state is still there
-    progress = (n_folds + 1) * (one_state + search_state)
-    return Forecast(seconds, memory, disk, progress)
+    kept = sizes.voxels * sizes.state / plan.layout.tiles
+    progress = (sizes.folds + 1) * (kept + _search_state(plan))
+    if plan.layout.on_disk:
+        progress += sizes.folds * sizes.voxels * sizes.state
+    return Forecast(_seconds(plan, sizes, workers), memory, disk, progress)
+
+
+def _sweeping(plan: Plan, sizes: _Sizes, workers: int) -> float:
+    """Bytes at the height of the pass: states, and for each worker its series and a block."""
+    layout = plan.layout
+    runs = [[run.header.n_volumes for run in person.runs] for person in plan.participants]
+    tile = max(part.stop - part.start for part in tile_slices(sizes.voxels, layout.tiles))
+    read = tile
+    if layout.tiles > 1:
+        read += _read_for_spheres(plan)
+    series = 4.0 * read * max(sum(own) for own in runs)
+    block = 8.0 * BLOCK * (sizes.placements * 4 + max(map(max, runs)))
+    states = workers if layout.on_disk else sizes.folds
+    searched = sizes.folds * _search_state(plan)
+    return workers * (series + block) + states * tile * sizes.state + searched
+
+
+def _read_for_spheres(plan: Plan) -> int:
+    """Voxels that every tile reads beside its own."""
+    used = [seed.cloud.weights[seed.used].indices for seed in plan.seeds]
+    used += [part for one in _searches(plan) for part in (one.weights.indices, one.targets)]
+    return len(np.unique(np.concatenate(used)))
+
+
+def _concluding(plan: Plan, sizes: _Sizes, workers: int) -> float:
+    """Bytes at the height of the conclusions about one seed."""
+    v, p, g = sizes.voxels, sizes.p, sizes.folds
+    largest = max(len(seed.used) for seed in plan.seeds)
+    # effects and classes of a cloud; counts and X'X, twice; models without each fold; reported sums
+    shared = 5.0 * largest + g * (2 * (4 + 8 * p * p) + 8 * (3 * p + 2))
+    # counts of classes without each fold, a placement's sums, arithmetic, and classes of halves
+    own = 4.0 * g + 8 * g * (p + 1) + 8 * OTHER_MAPS + 2 * CLASS_SPLITS * (2 + g // 2)
+    maps = 4.0 * MAPS_MEMORY * len(plan.seeds) * float(np.prod(plan.voxels.grid.shape))
+    states = 0.0 if plan.layout.on_disk else g * v * sizes.state
+    # float32 copies of a search's sums, of all folds and of one block of candidates
+    judging = (
+        2 * g * max((4.0 * len(s.shifts) * len(s.targets) for s in _searches(plan)), default=0)
+    )
+    return (
+        states + maps + g * _search_state(plan) + max(v * (shared + (1 + workers) * own), judging)
+    )
+
+
+def _searches(plan: Plan) -> list[PlannedSearch]:
+    return [seed.search for seed in plan.seeds if seed.search is not None]
+
+
+def _search_state(plan: Plan) -> float:
+    return sum(8.0 * len(one.shifts) * len(one.targets) for one in _searches(plan))
+
+
+def _seconds(plan: Plan, sizes: _Sizes, workers: int) -> float:
+    searched = _searches(plan)
+    headers = [run.header for person in plan.participants for run in person.runs]
+    stored = sum(float(np.prod(h.grid.shape)) * h.n_volumes * h.dtype.itemsize for h in headers)
+    volumes = float(sum(h.n_volumes for h in headers))
+    products = 2.0 * sizes.placements * sizes.voxels * volumes
+    products += sum(2.0 * len(one.shifts) * len(one.targets) * volumes for one in searched)
+    pairs = sum(float(one.around().counts.sum()) * len(one.targets) for one in searched)
+    reading = stored * plan.layout.tiles / READ_RATE + products / PRODUCT_RATE
+    estimates = sizes.placements * sizes.voxels * (sizes.folds + 1)
+    # every pair of a candidate and its neighbour, for every two folds, in blocks
+    judging = 4 * sizes.folds**2 * pairs / PRODUCT_RATE
+    return reading / workers + estimates / ESTIMATE_RATE + judging
 
 
 def strains(needs: Forecast, output: Path) -> list[str]:

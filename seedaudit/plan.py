@@ -17,12 +17,16 @@ from seedaudit.placements import Cloud, uncertainty_sd
 from seedaudit.searching import PlannedSearch
 from seedaudit.space.grid import VoxelSet
 from seedaudit.study import Placements, Seed, Study
+from seedaudit.sweep.moments import Steps
 from seedaudit.sweep.participant import CloudTargets
 from seedaudit.sweep.schedule import (
+    IN_MEMORY,
     CleaningRecipe,
+    Layout,
     ParticipantRecord,
     ParticipantTask,
     SweepTask,
+    assign_folds,
 )
 from seedaudit.sweep.task import SearchTask
 
@@ -85,8 +89,8 @@ class Plan:
     """Everything that the pass needs, checked.
 
     `design` has one row for each of `participants`; `set_aside` are those left out already;
-    `warnings` are for the user's attention, `choices` what the program decided. `folds` and the
-    `precision` of the state are as asked, or as memory allows (`seedaudit.budget`).
+    `warnings` are for the user's attention, `choices` what the program decided. `folds` are as
+    asked; `layout` is how the pass keeps to its memory (`seedaudit.budget`).
     """
 
     study: Study
@@ -100,7 +104,7 @@ class Plan:
     warnings: tuple[str, ...]
     choices: tuple[str, ...]
     folds: int = 8
-    precision: str = "float64"
+    layout: Layout = IN_MEMORY
 
     @property
     def first_run(self) -> RunHeader:
@@ -119,6 +123,8 @@ class Plan:
 
     def sweep_task(self, design: NDArray[np.float64]) -> SweepTask:
         """What the workers of the pass need, with an equivalent design of their own (n, p)."""
+        single = len(self.participants) == 1
+        rows_of = assign_folds(self.design.strata, self.folds)
         weights = sparse.vstack([seed.cloud.weights[seed.used] for seed in self.seeds]).tocsr()
         clouds, start = [], 0
         for seed in self.seeds:
@@ -133,9 +139,10 @@ class Plan:
             self.cleaning,
             min_coverage=self.study.placements.min_coverage,
             set_aside=self.study.data.on_bad_run == "set-aside",
-            single=len(self.participants) == 1,
+            single=single,
             keep_reported=self.study.threshold.rule == "fwe",
-            precision=self.precision,
+            # one participant's state is read as it is; a group's is a sum
+            steps=None if single else Steps.of(design, rows_of),
             searches=tuple(
                 SearchTask(seed.search.weights, seed.search.targets)
                 for seed in self.seeds

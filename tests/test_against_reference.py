@@ -17,7 +17,7 @@ from seedaudit.sweep.participant import participant_blocks
 from seedaudit.sweep.schedule import load_run, sweep
 from tests.reference import classes_stage, maps_stage, reference_audit, rows_of
 from tests.small_study import write_small_study
-from tests.whole_states import group_maps
+from tests.whole_states import group_maps, some
 
 CUTS = (0.1, 0.2, 0.35, 0.5)
 
@@ -92,7 +92,7 @@ def group_of(case, rule, level):
     classes_of = classifier(
         ThresholdRule(rule, level), plan.voxels.ijk[keep], plan.voxels.grid.shape
     )
-    moments = merged(swept.folds).placements(slice(len(case.inputs[-1]))).voxels(keep)
+    moments = some(merged(swept.folds), slice(len(case.inputs[-1])), keep)
     return group_maps(moments, contrast, len(plan.participants), classes_of), case.order[keep]
 
 

@@ -1,25 +1,68 @@
-"""A memory budget is kept by folds, then by precision; the choice is recorded."""
+"""A memory budget is kept: folds on disk, then tiles, and no digit changes; it is recorded."""
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import nibabel as nib
 import numpy as np
+import pandas as pd
 import pytest
 
+from seedaudit import forecast as needs
 from seedaudit.auditing import audit, plan_folds
-from seedaudit.budget import fitted, parse_size
+from seedaudit.budget import MOST_TILES, fitted, parse_size
 from seedaudit.errors import StudyError
 from seedaudit.forecast import BASE_MEMORY, forecast
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
-from tests.small_study import write_small_study
+from seedaudit.sweep.correlate import BLOCK
+from seedaudit.sweep.tiles import IN_MEMORY, Layout, tile_slices
+
+SHAPE = (30, 34, 28)
 
 
 @pytest.fixture(scope="module")
-def plan(tmp_path_factory):
-    small = write_small_study(tmp_path_factory.mktemp("study"), participants=8)
-    text = small.study_file.read_text().replace("folds = 4", "folds = 8")
-    small.study_file.write_text(text)
-    return make_plan(Study.load(small.study_file))
+def large(tmp_path_factory):
+    """A study of several blocks of voxels, with regions, a claim and a search."""
+    folder = tmp_path_factory.mktemp("study")
+    rng = np.random.default_rng(0)
+    affine = np.diag([4.0, 4.0, 4.0, 1.0])
+    affine[:3, 3] = -58, -70, -50
+    xyz = np.moveaxis(np.indices(SHAPE), 0, -1) @ affine[:3, :3] + affine[:3, 3]
+    mask = (xyz**2).sum(axis=-1) < 53**2
+    assert mask.sum() > 2 * BLOCK
+    labels = np.where(mask, 1 + (xyz[..., 0] > 0) + 2 * (xyz[..., 1] > 0), 0)
+    for name, values in {"mask": mask, "networks_dseg": labels}.items():
+        nib.save(nib.Nifti1Image(values.astype(np.uint8), affine), folder / f"{name}.nii.gz")
+    (folder / "networks_dseg.tsv").write_text(
+        "index\tname\n" + "".join(f"{i}\tquarter {i}\n" for i in range(1, 5))
+    )
+    (folder / "claims.tsv").write_text(
+        "claim\tseed\tregion\tdirection\nback\tseed\tquarter 1\tpositive\n"
+    )
+    names = []
+    for number in range(9):
+        signal = rng.standard_normal((30, 4))
+        data = 800 + 8 * rng.standard_normal((*SHAPE, 30)) + 6 * signal.T[labels - 1]
+        if number == 3:
+            data[:3] = 700  # a part that this participant lacks
+        names.append(folder / f"sub-{number}_bold.nii.gz")
+        nib.save(nib.Nifti1Image(data.astype(np.int16), affine), names[-1])
+    content = {
+        "data": {"runs": [str(name) for name in names], "mask": "mask.nii.gz",
+                 "regions": "networks_dseg.nii.gz"},
+        "seed": [{"name": "seed", "at": [-20.0, -12.0, 8.0], "radius": 8.0, "space": "native"}],
+        "placements": {"count": 12, "within": 8.0, "controls": 3},
+        "claims": {"table": "claims.tsv", "smallest_effect": 0.05},
+        "steadier": {"search": 4.0, "step": 4.0, "targets": 100},
+    }  # fmt: skip
+    return make_plan(Study.from_mapping(content, folder))
+
+
+@pytest.fixture(scope="module")
+def whole(large):
+    return audit(large, workers=2)
 
 
 @pytest.mark.parametrize(
@@ -35,33 +78,60 @@ def test_what_is_no_size(text):
         parse_size(text)
 
 
-def test_steps_of_the_ladder(plan):
-    """Enough: as asked. Less: fewer folds. Still less: half precision. Too little: an error."""
+def test_steps_of_the_ladder(large, monkeypatch):
+    """Enough: as asked. Less: folds on disk. Still less: tiles. Fewer folds last; else an error."""
+    # a study whose pass takes more memory than its conclusions
+    monkeypatch.setattr(needs, "_concluding", lambda plan, sizes, workers: 1e6)
 
-    def need(folds, precision):
-        from dataclasses import replace
+    def need(layout, folds=8):
+        return forecast(replace(large, layout=layout, folds=folds), 2).memory
 
-        return forecast(replace(plan, folds=folds, precision=precision), 2).memory
-
-    enough = fitted(plan, 2, need(8, "float64"))
-    assert (enough.folds, enough.precision, enough.choices) == (8, "float64", plan.choices)
-    fewer = fitted(plan, 2, need(8, "float64") - 1)
-    assert (fewer.folds, fewer.precision) == (4, "float64")
-    assert "4 folds in the place of 8" in fewer.choices[-1]
-    assert len(plan_folds(fewer)) == 4
-    half = fitted(plan, 2, need(4, "float64") - 1)
-    assert (half.folds, half.precision) == (4, "float32")
-    assert "float32" in half.choices[-1]
+    enough = fitted(large, 2, need(IN_MEMORY))
+    assert (enough.folds, enough.layout, enough.choices) == (8, IN_MEMORY, large.choices)
+    disk = fitted(large, 2, need(IN_MEMORY) - 1)
+    assert (disk.folds, disk.layout) == (8, Layout(1, on_disk=True))
+    assert disk.choices[-1].endswith("of memory: the state of finished folds on disk")
+    tiled = fitted(large, 2, need(Layout(1, on_disk=True)) - 1)
+    assert (tiled.folds, tiled.layout) == (8, Layout(2, on_disk=True))
+    assert "2 passes over the data" in tiled.choices[-1]
+    assert forecast(tiled, 2).progress > forecast(enough, 2).progress
+    fewest = fitted(large, 2, need(Layout(MOST_TILES, True)) - 1)
+    assert fewest.folds == 4
+    assert "4 folds in the place of 8" in fewest.choices[-1]
+    assert len(plan_folds(fewest)) == 4
     with pytest.raises(StudyError, match="at the least"):
-        fitted(plan, 2, BASE_MEMORY)
+        fitted(large, 2, BASE_MEMORY)
 
 
-def test_half_precision_gives_the_same_maps(plan):
-    """t within 1e-4 relative, as the whole program is held to."""
-    from dataclasses import replace
+LAYOUTS = [Layout(1, on_disk=True), Layout(2, on_disk=True), Layout(7, on_disk=True)]
 
-    whole, half = audit(plan), audit(replace(plan, precision="float32"))
-    for name in ("t_reported", "effect_mean", "conjunction"):
-        np.testing.assert_allclose(
-            half.maps[name].get_fdata(), whole.maps[name].get_fdata(), rtol=1e-4, atol=1e-4
+
+def assert_same(found, expected):
+    found, expected = found.seeds[0], expected.seeds[0]
+    assert found.summary == expected.summary
+    assert set(found.tables) == set(expected.tables) >= {"claims", "steadier", "regions"}
+    for name, table in expected.tables.items():
+        pd.testing.assert_frame_equal(table, found.tables[name], check_exact=True)
+    for name, image in expected.maps.items():
+        np.testing.assert_array_equal(
+            np.asarray(image.dataobj), np.asarray(found.maps[name].dataobj), err_msg=name
         )
+
+
+@pytest.mark.parametrize("layout", LAYOUTS)
+def test_no_digit_depends_on_the_layout(large, whole, layout):
+    """Tables, maps and headline of the whole audit, with a claim and a search."""
+    assert_same(audit(replace(large, layout=layout), workers=3), whole)
+
+
+def test_tiles_from_prepared_runs(large, whole, tmp_path):
+    for _ in ("kept", "used"):
+        found = audit(replace(large, layout=LAYOUTS[1]), prepared=tmp_path / "kept")
+        assert_same(found, whole)
+
+
+def test_tiles_are_whole_blocks():
+    tiles = tile_slices(10 * BLOCK + 5, 3)
+    assert [tile.start for tile in tiles] == [0, 4 * BLOCK, 7 * BLOCK]
+    assert tiles[-1].stop == 10 * BLOCK + 5
+    assert tile_slices(5, 3) == [slice(0, 5)]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +22,21 @@ class WholeMaps:
     classes: NDArray[np.int8]
     standard_error: NDArray[np.float64]
     df: NDArray[np.float64]
+
+
+def some(
+    moments: Moments, placements: slice | NDArray[np.int_] = slice(None), voxels: Any = slice(None)
+) -> Moments:
+    """The state, in float64, of some placements at some voxels."""
+    whole = moments.wide()
+    known = None if whole.variance is None else whole.variance[placements][:, voxels]
+    return Moments(
+        whole.count[voxels],
+        whole.xtx[:, :, voxels],
+        whole.xtz[:, placements][:, :, voxels],
+        whole.zz[placements][:, voxels],
+        known,
+    )
 
 
 def estimate(moments: Moments, model: Model, placement: int) -> Estimate:

@@ -5,9 +5,10 @@ from __future__ import annotations
 import gzip
 import hashlib
 import io
+import os
 import zlib
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -83,6 +84,17 @@ class _HashingReader(io.RawIOBase):
         count = self._raw.readinto(buffer) or 0
         self.digest.update(memoryview(buffer)[:count])
         return count
+
+
+def read_ahead(path: Path) -> None:
+    """Ask the system to bring a file into its cache; it does so while the program computes.
+
+    Decompressing ahead would cost a second buffer of voxel series for each worker, and no core is
+    idle that could do it; what can be waited for is the disk or the network. Does nothing where
+    the system has no such call; a file that cannot be read is told by its reader.
+    """
+    with suppress(OSError, AttributeError), open(path, "rb", buffering=0) as file:
+        os.posix_fadvise(file.fileno(), 0, 0, os.POSIX_FADV_WILLNEED)
 
 
 @contextmanager

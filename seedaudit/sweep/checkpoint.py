@@ -25,20 +25,24 @@ from numpy.typing import NDArray
 from seedaudit.errors import DataError, Problem, StudyError
 from seedaudit.sweep.digests import file_digest
 from seedaudit.sweep.fold import FoldProgress
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.moments import Moments, Steps
 from seedaudit.sweep.participant import Kept
 from seedaudit.sweep.task import ParticipantRecord, ParticipantTask, SearchSums
 
 EVERY = 30.0
 """Seconds of work that may be lost, if a participant does not take longer."""
 
-FORMAT = 1
+FORMAT = 2
 
 UNREADABLE = (OSError, ValueError, KeyError, EOFError, zipfile.BadZipFile, zlib.error)
 SCALARS = (
     "participant", "row", "n_runs", "n_volumes", "n_censored", "residual_df",
     "n_missing_voxels", "used", "reason",
 )  # fmt: skip
+
+
+Unit = tuple[int, int]
+"""Number of a tile and of a fold."""
 
 
 class Checkpoint:
@@ -70,8 +74,8 @@ class Checkpoint:
         self._folder, self._key, self._every, self._tell = folder, dict(key), every, tell
         self._fresh = fresh
         self._guard = threading.Lock()
-        self._pending: dict[int, FoldProgress] = {}
-        self._saved: dict[int, float] = {}
+        self._pending: dict[Unit, FoldProgress] = {}
+        self._saved: dict[Unit, float] = {}
         self._lock = FileLock(folder / "lock")
 
     def __enter__(self) -> Self:
@@ -116,13 +120,22 @@ class Checkpoint:
                 self._tell(f"earlier progress is not used ({why})")
                 for fold in kept:
                     fold.unlink()
+                shutil.rmtree(self.state_folder, ignore_errors=True)
             else:
                 self._tell("going on from earlier progress")
         _write_whole(path, json.dumps(content, indent=1).encode())
 
-    def load(self, fold: int, participants: Sequence[ParticipantTask]) -> FoldProgress | None:
-        """Progress of a fold, if there is any that can be used."""
-        path = self._path(fold)
+    @property
+    def state_folder(self) -> Path:
+        """Where the states of finished folds are, if they leave the memory."""
+        return self._folder / "state"
+
+    def load(self, unit: Unit, participants: Sequence[ParticipantTask]) -> FoldProgress | None:
+        """Progress of a fold in a tile, if there is any that can be used.
+
+        The state of a fold that is finished and has left the memory holds no placement.
+        """
+        path = self._path(unit)
         if not path.exists():
             return None
         try:
@@ -131,14 +144,14 @@ class Checkpoint:
             self._tell(f"{path.name} is damaged and is made again")
             return None
         tasks = {task.participant: task for task in participants}
-        for record in progress.records:
+        for record in (record for record in progress.records if record.used):
             for run, digest in zip(tasks[record.participant].runs, record.digests, strict=False):
                 if file_digest(run.header.path) != digest:
                     self._tell(f"{run.header.path.name} has changed since; its fold is made again")
                     return None
         return progress
 
-    def note(self, fold: int, progress: FoldProgress, *, finished: bool, now: bool) -> None:
+    def note(self, unit: Unit, progress: FoldProgress, *, finished: bool, now: bool) -> None:
         """Called by a fold's worker after each participant: write what is due.
 
         Raises
@@ -148,11 +161,11 @@ class Checkpoint:
         """
         with self._guard:
             if finished:
-                self._pending[fold] = progress
-            due = time.monotonic() - self._saved.get(fold, self._began) >= self._every
+                self._pending[unit] = progress
+            due = time.monotonic() - self._saved.get(unit, self._began) >= self._every
             if not (due or now):
                 return
-            writes = {**self._pending, fold: progress}
+            writes = {**self._pending, unit: progress}
             try:
                 for number, part in writes.items():
                     _write(self._path(number), part)
@@ -165,24 +178,32 @@ class Checkpoint:
         """The pass is done and its result is safe: remove the progress."""
         shutil.rmtree(self._folder, ignore_errors=True)
 
-    def _path(self, fold: int) -> Path:
-        return self._folder / f"fold-{fold:03d}.npz"
+    def _path(self, unit: Unit) -> Path:
+        tile, fold = unit
+        return self._folder / f"fold-{fold:03d}-tile-{tile:03d}.npz"
 
     def _refused(self, error: OSError) -> DataError:
-        return DataError(
-            Problem(
-                f"progress folder {self._folder.name}",
-                f"cannot be written ({error.strerror or error})",
-                "a writable disk with enough space beside the output",
-                "free some space and say the same command again, or choose another --out",
-            )
+        return disk_refused(self._folder, error)
+
+
+def disk_refused(folder: Path, error: OSError) -> DataError:
+    """The error for progress, or for states, that cannot be written."""
+    return DataError(
+        Problem(
+            f"progress folder {folder.name}",
+            f"cannot be written ({error.strerror or error})",
+            "a writable disk with enough space beside the output",
+            "free some space and say the same command again, or choose another --out",
         )
+    )
 
 
 def _write(path: Path, progress: FoldProgress) -> None:
     arrays: dict[str, NDArray[Any]] = {
         f"moments_{name}": value for name, value in progress.moments.named_arrays()
     }
+    if (steps := progress.moments.steps) is not None:
+        arrays["steps"] = np.array([steps.xz, steps.zz])
     rows = []
     for i, record in enumerate(progress.records):
         row = {name: getattr(record, name) for name in SCALARS}
@@ -190,7 +211,7 @@ def _write(path: Path, progress: FoldProgress) -> None:
             {
                 **row,
                 "digests": list(record.digests),
-                "clouds": len(record.kept),
+                "kept_voxels": [kept.n_voxels for kept in record.kept],
                 "searches": len(record.search_coverage),
             }
         )
@@ -198,8 +219,7 @@ def _write(path: Path, progress: FoldProgress) -> None:
             if (value := getattr(record, name)) is not None:
                 arrays[f"{i}_{name}"] = value
         for c, kept in enumerate(record.kept):
-            arrays[f"{i}_{c}_similarity"] = kept.similarity
-            arrays[f"{i}_{c}_targets"] = kept.target_means
+            arrays |= {f"{i}_{c}_{name}": value for name, value in kept.arrays().items()}
         for c, coverage in enumerate(record.search_coverage):
             arrays[f"{i}_{c}_search"] = coverage
     for c, search in enumerate(progress.searches):
@@ -219,10 +239,11 @@ def _read(path: Path) -> FoldProgress:
     rows = json.loads(arrays["records"].tobytes())
     records = []
     for i, row in enumerate(rows):
-        clouds, digests = row.pop("clouds"), tuple(row.pop("digests"))
+        voxels, digests = row.pop("kept_voxels"), tuple(row.pop("digests"))
         searched = range(row.pop("searches"))
         kept = tuple(
-            Kept(arrays[f"{i}_{c}_similarity"], arrays[f"{i}_{c}_targets"]) for c in range(clouds)
+            Kept(n, *(arrays[f"{i}_{c}_{name}"] for name in Kept.NAMES))
+            for c, n in enumerate(voxels)
         )
         records.append(
             ParticipantRecord(
@@ -240,8 +261,12 @@ def _read(path: Path) -> FoldProgress:
     while f"search_{len(searches)}_z" in arrays:
         name = f"search_{len(searches)}"
         searches.append(SearchSums(arrays[f"{name}_z"], arrays[f"{name}_count"]))
+    steps = Steps(*arrays["steps"].tolist()) if "steps" in arrays else None
+    moments = Moments(**state, steps=steps)
+    if not moments.n_placements:
+        return FoldProgress(moments, searches, records)
     # those set aside are tried again: nothing of them is in the state
-    return FoldProgress(Moments(**state), searches, [r for r in records if r.used])
+    return FoldProgress(moments, searches, [r for r in records if r.used])
 
 
 def _write_whole(path: Path, content: bytes) -> None:

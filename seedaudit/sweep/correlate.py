@@ -23,6 +23,9 @@ LIMIT = 1 - 1e-7
 CANCELLING = 0.1
 """Residual share of a voxel's sum of squares below which float32 would lose digits."""
 
+LARGEST_Z = float(np.arctanh(LIMIT))
+"""About 8.4"""
+
 STEEP = 0.9
 """Correlation above which z magnifies an error of r more than fivefold."""
 

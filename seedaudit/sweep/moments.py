@@ -7,23 +7,56 @@ of the participants is one and the same addition.
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
+from math import floor, log2
 from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import DTypeLike, NDArray
 
-from seedaudit.sweep.correlate import ZBlock
+from seedaudit.sweep.correlate import LARGEST_Z, ZBlock
 
 Voxels = NDArray[np.bool_] | NDArray[np.integer[Any]] | slice
 
-XX, XZ, ZZ = 2.0**-50, 2.0**-44, 2.0**-38
-"""What is added up in float64 are whole multiples of these steps: sums below 2^53 of them are exact
-(X'X below 8, X'z below 512, z'z below 32,768; the columns of the design have unit norm, and |z| is
-8.4 at the most), so that the order of adding and merging cannot matter. A step is far below the
-rounding of z in float32."""
+XX = 2.0**-50
+"""Products of columns of the design, which have unit norm, are added up as multiples of this: sums
+below 8 are then exact, and the order of adding cannot matter."""
 
 _ROWS = 16  # placements added at once, so that what is computed on the way stays in cache
+
+
+@dataclass(frozen=True)
+class Steps:
+    """What one unit of a state in whole numbers is worth: of X'z, and of z'z.
+
+    Sums of whole numbers are exact, so that the order of adding and merging cannot matter; and the
+    rounding of a contribution does not grow with its size, so that a small variance beside a large
+    mean keeps its digits, as it would not in float32.
+    """
+
+    xz: float
+    zz: float
+
+    @classmethod
+    def of(cls, design: NDArray[np.float64], folds: Iterable[NDArray[np.int_]]) -> Steps:
+        """The finest steps with which no sum of a fold can pass the range of 32 bits.
+
+        Parameters
+        ----------
+        design : (n, p)
+        folds : iterable of (n_g,) int
+            Rows of the design in each fold.
+        """
+        xz, zz = (
+            max(largest)
+            for largest in zip(
+                *((np.abs(design[rows]).sum(axis=0).max() * LARGEST_Z, len(rows) * LARGEST_Z**2)
+                  for rows in folds),
+                strict=True,
+            )
+        )  # fmt: skip
+        # a power of two, one bit spared for the rounding of each contribution
+        return cls(*(2.0 ** -floor(30 - log2(largest)) for largest in (xz, zz)))
 
 
 @dataclass
@@ -72,10 +105,8 @@ class FoldState(Protocol):
 class Moments:
     """Sufficient statistics of participants for N placements, V voxels and p design columns.
 
-    Accumulated in float64, exactly (see `ZZ`): the residual sum of squares is a difference of
-    large sums. When memory is short a fold's part may be float32, which costs a relative error of
-    t of about 1e-7 times (mean/SD)² for the few participants of a fold, and exactness; parts are
-    merged in float64.
+    The residual sum of squares is a difference of large sums. A state in float64 bears that, and
+    so does one in whole numbers of 32 bits, in half the memory (see `Steps`).
 
     Parameters
     ----------
@@ -83,19 +114,22 @@ class Moments:
         Participants who have the voxel.
     xtx : (p, p, V) float64
         Sum of x x'.
-    xtz : (p, N, V) float64
+    xtz : (p, N, V) float64 or int32
         Sum of x z.
-    zz : (N, V) float64
+    zz : (N, V) float64 or int32
         Sum of z².
     variance : (N, V) float64 or None
         Sum of the known sampling variances of z; kept for a single participant.
+    steps : Steps or None
+        What the whole numbers are worth; None for a state in float64.
     """
 
     count: NDArray[np.int32]
     xtx: NDArray[np.float64]
-    xtz: NDArray[np.float64]
-    zz: NDArray[np.float64]
+    xtz: NDArray[Any]
+    zz: NDArray[Any]
     variance: NDArray[np.float64] | None = None
+    steps: Steps | None = None
 
     @classmethod
     def empty(
@@ -105,16 +139,23 @@ class Moments:
         n_voxels: int,
         *,
         variance: bool = False,
-        dtype: DTypeLike = np.float64,
+        steps: Steps | None = None,
     ) -> Moments:
         """The neutral element."""
+        dtype: DTypeLike = np.float64 if steps is None else np.int32
         return cls(
             np.zeros(n_voxels, np.int32),
             np.zeros((p, p, n_voxels)),
             np.zeros((p, n_placements, n_voxels), dtype),
             np.zeros((n_placements, n_voxels), dtype),
-            np.zeros((n_placements, n_voxels), dtype) if variance else None,
+            np.zeros((n_placements, n_voxels)) if variance else None,
+            steps,
         )
+
+    def clear(self) -> None:
+        """Become the neutral element again, in the same memory."""
+        for _, array in self.named_arrays():
+            array.fill(0)
 
     def add(self, x: NDArray[np.float64], block: ZBlock) -> None:
         """Add one participant's z at the voxels of a block.
@@ -127,13 +168,20 @@ class Moments:
         """
         where = block.where
         self.count[where] += block.valid
-        self.xtx[:, :, where] += np.multiply.outer(_whole_steps(np.outer(x, x), XX), block.valid)
+        self.xtx[:, :, where] += np.multiply.outer(whole(np.outer(x, x), XX), block.valid)
         for start in range(0, self.n_placements, _ROWS):
             rows = slice(start, start + _ROWS)
             z = block.z[rows].astype(np.float64)
+            if self.steps is None:
+                for j, value in enumerate(x):
+                    self.xtz[j, rows, where] += value * z
+                self.zz[rows, where] += z * z
+                continue
             for j, value in enumerate(x):
-                self.xtz[j, rows, where] += _whole_steps(value * z, XZ)
-            self.zz[rows, where] += _whole_steps(z * z, ZZ)
+                self.xtz[j, rows, where] += np.rint((value / self.steps.xz) * z).astype(np.int32)
+            z *= z
+            z *= 1 / self.steps.zz
+            self.zz[rows, where] += np.rint(z, out=z).astype(np.int32)
         if self.variance is not None and block.variance is not None:
             self.variance[:, where] += block.variance
 
@@ -156,37 +204,54 @@ class Moments:
 
     def sums(self, placement: int, voxels: Voxels) -> Sums:
         """See `FoldState`."""
-        known = None if self.variance is None else _wide(self.variance[placement][voxels])
-        return Sums(
-            _wide(self.xtz[:, placement][:, voxels]), _wide(self.zz[placement][voxels]), known
-        )
+        known = None if self.variance is None else self.variance[placement][voxels]
+        xtz, zz = self.xtz[:, placement][:, voxels], self.zz[placement][voxels]
+        return in_float64(xtz, zz, known, self.steps)
 
     def __iadd__(self, other: Moments) -> Moments:
-        for mine, theirs in zip(self._arrays(), other._arrays(), strict=True):
+        for (_, mine), (_, theirs) in zip(self.named_arrays(), other.named_arrays(), strict=True):
             mine += theirs
         return self
 
     def __sub__(self, other: Moments) -> Moments:
         """What is left when a part is taken out again (a fold, for the jackknife)."""
-        pairs = zip(self._arrays(), other._arrays(), strict=True)
-        return Moments(*(mine - theirs for mine, theirs in pairs))
-
-    def placements(self, rows: slice | NDArray[np.int_]) -> Moments:
-        """The state of some placements only (a view, when `rows` is a slice)."""
-        known = None if self.variance is None else self.variance[rows]
-        return Moments(self.count, self.xtx, self.xtz[:, rows], self.zz[rows], known)
-
-    def voxels(self, keep: NDArray[np.bool_]) -> Moments:
-        """The state of some voxels only (a copy)."""
-        return Moments(*(array[..., keep] for array in self._arrays()))
+        known = None
+        if self.variance is not None and other.variance is not None:
+            known = self.variance - other.variance
+        return Moments(
+            self.count - other.count,
+            self.xtx - other.xtx,
+            self.xtz - other.xtz,
+            self.zz - other.zz,
+            known,
+            self.steps,
+        )
 
     def named_arrays(self) -> list[tuple[str, NDArray[Any]]]:
         """The arrays of the state by name, those that are kept."""
-        pairs = ((field.name, getattr(self, field.name)) for field in fields(self))
+        names = ("count", "xtx", "xtz", "zz", "variance")
+        pairs = ((name, getattr(self, name)) for name in names)
         return [(name, value) for name, value in pairs if value is not None]
 
-    def _arrays(self) -> list[NDArray[Any]]:
-        return [value for _, value in self.named_arrays()]
+    def copy(self) -> Moments:
+        """The same in memory of its own."""
+        known = None if self.variance is None else self.variance.copy()
+        return Moments(
+            self.count.copy(), self.xtx.copy(), self.xtz.copy(), self.zz.copy(), known, self.steps
+        )
+
+    def wide(self) -> Moments:
+        """A copy in float64."""
+        known = None if self.variance is None else self.variance.copy()
+        xz, zz = (1.0, 1.0) if self.steps is None else (self.steps.xz, self.steps.zz)
+        return Moments(self.count.copy(), self.xtx.copy(), self.xtz * xz, self.zz * zz, known)
+
+
+def in_float64(
+    xtz: NDArray[Any], zz: NDArray[Any], known: NDArray[np.float64] | None, steps: Steps | None
+) -> Sums:
+    """Sums from the rows of a state."""
+    return Sums(xtz, zz, known) if steps is None else Sums(xtz * steps.xz, zz * steps.zz, known)
 
 
 @dataclass(frozen=True)
@@ -210,22 +275,18 @@ class Chosen:
         return self.state.sums(int(self.rows[placement]), voxels)
 
 
-def _wide(array: NDArray[Any]) -> NDArray[Any]:
-    return array.astype(np.float64, copy=False) if array.dtype.kind == "f" else array
-
-
-def _whole_steps(values: NDArray[np.float64], step: float) -> NDArray[np.float64]:
-    """Round to multiples of a step, in place: beside so large a number nothing smaller is kept."""
-    large = 1.5 * 2.0**52 * step
-    values += large
-    values -= large
+def whole(values: NDArray[np.float64], step: float) -> NDArray[np.float64]:
+    """Round to whole multiples of a power of two, in place: their sums are then exact."""
+    values /= step
+    np.rint(values, out=values)
+    values *= step
     return values
 
 
 def merged(parts: Iterable[Moments]) -> Moments:
-    """Sum of the parts in float64, in the order given, so that the digits are always the same."""
+    """Sum of the parts in float64."""
     first, *others = parts
-    total = Moments(*(_wide(array).copy() for array in first._arrays()))
+    total = first.wide()
     for part in others:
-        total += part
+        total += part.wide()
     return total

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import ClassVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +19,7 @@ from seedaudit.sweep.correlate import (
     seed_series,
     z_blocks,
 )
+from seedaudit.sweep.moments import whole
 
 
 @dataclass(frozen=True)
@@ -39,54 +41,90 @@ class CloudTargets:
     targets: sparse.csr_array
 
 
-@dataclass(frozen=True)
-class Kept:
-    """What is kept of one participant for one cloud: both small.
+_OF_Z, _OF_SQUARES = 2.0**-28, 2.0**-25
+"""Sums over voxels are added up as multiples of these, and are exact for 10 million voxels: the
+tiles that the voxels are read in do not show in the digits."""
 
-    `similarity` (N,) is the spatial correlation of each placement's z map with the reported
-    placement's; `target_means` (N, K) is mean z over the voxels of each target, NaN without any.
+_ROWS = 16  # placements at once, so that their float64 copy stays in cache
+
+
+@dataclass
+class Kept:
+    """What is kept of one participant for one cloud, all of it small: sums over analysis voxels.
+
+    Parameters
+    ----------
+    n_voxels : int
+    sums, squares, products : (N,)
+        Of each placement's z, of its square, and of its product with the reported placement's.
+    target_sums : (N, K)
+        Of z over the voxels of each target.
+    target_counts : (K,)
     """
 
-    similarity: NDArray[np.float64]
-    target_means: NDArray[np.float64]
+    n_voxels: int
+    sums: NDArray[np.float64]
+    squares: NDArray[np.float64]
+    products: NDArray[np.float64]
+    target_sums: NDArray[np.float64]
+    target_counts: NDArray[np.float64]
 
+    NAMES: ClassVar = ("sums", "squares", "products", "target_sums", "target_counts")
 
-class KeptSums:
-    """Running sums behind `Kept`, fed block by block."""
-
-    def __init__(self, cloud: CloudTargets) -> None:
+    @classmethod
+    def empty(cls, cloud: CloudTargets) -> Kept:
+        """The neutral element."""
         n, k = cloud.rows.stop - cloud.rows.start, cloud.targets.shape[1]
-        self.cloud = cloud
-        self.n_voxels = 0
-        self.sums = np.zeros(n)
-        self.squares = np.zeros(n)
-        self.products = np.zeros(n)
-        self.target_sums = np.zeros((n, k))
-        self.target_counts = np.zeros(k)
+        return cls(0, np.zeros(n), np.zeros(n), np.zeros(n), np.zeros((n, k)), np.zeros(k))
 
-    def add(self, block: ZBlock) -> None:
+    def add(self, cloud: CloudTargets, block: ZBlock) -> None:
         """Add the z of one block of voxels."""
-        keep = block.valid & self.cloud.analysis[block.where]
-        z = block.z[self.cloud.rows][:, keep].astype(np.float64)
-        self.n_voxels += z.shape[1]
-        self.sums += z.sum(axis=1)
-        self.squares += np.einsum("nv,nv->n", z, z)
-        self.products += z @ z[0]
-        members = self.cloud.targets[block.where][keep]
-        self.target_sums += (members.T @ z.T).T
-        self.target_counts += np.asarray(members.sum(axis=0)).ravel()
+        keep = np.flatnonzero(block.valid & cloud.analysis[block.where])
+        if not keep.size:
+            return
+        z = block.z[cloud.rows]
+        if keep.size < z.shape[1]:
+            z = z[:, keep]
+        members = cloud.targets[block.where.start + keep]
+        present = np.unique(members.indices)
+        # one product gives the sums, the products with the reported map, and those of the targets
+        columns = np.empty((keep.size, 2 + present.size))
+        columns[:, 0], columns[:, 1] = 1, z[0]
+        columns[:, 2:] = members[:, present].toarray()
+        for start in range(0, len(z), _ROWS):
+            rows = slice(start, start + _ROWS)
+            wide = z[rows].astype(np.float64)
+            found = wide @ columns
+            self.products[rows] += whole(found[:, 1], _OF_SQUARES)
+            self.sums[rows] += whole(found[:, 0], _OF_Z)
+            self.target_sums[rows, present] += whole(found[:, 2:], _OF_Z)
+            self.squares[rows] += whole(np.einsum("nv,nv->n", wide, wide), _OF_SQUARES)
+        self.n_voxels += keep.size
+        self.target_counts[present] += columns[:, 2:].sum(axis=0)
 
-    def finish(self) -> Kept:
-        """The similarity and the target means."""
+    def __iadd__(self, other: Kept) -> Kept:
+        self.n_voxels += other.n_voxels
+        for mine, theirs in zip(self.arrays().values(), other.arrays().values(), strict=True):
+            mine += theirs
+        return self
+
+    def arrays(self) -> dict[str, NDArray[np.float64]]:
+        """All but the number of voxels, by name."""
+        return {name: getattr(self, name) for name in self.NAMES}
+
+    @property
+    def similarity(self) -> NDArray[np.float64]:
+        """Spatial correlation (N,) of each placement's z map with the reported placement's."""
         n = max(self.n_voxels, 1)
         covariance = self.products - self.sums * self.sums[0] / n
         variance = np.maximum(self.squares - self.sums**2 / n, 0)
         scale = np.sqrt(variance * variance[0])
-        similarity = np.divide(
-            covariance, scale, out=np.full_like(covariance, np.nan), where=scale > 0
-        )
-        counts = np.where(self.target_counts > 0, self.target_counts, np.nan)
-        return Kept(similarity, self.target_sums / counts)
+        return np.divide(covariance, scale, out=np.full_like(covariance, np.nan), where=scale > 0)
+
+    @property
+    def target_means(self) -> NDArray[np.float64]:
+        """Mean z (N, K) over the voxels of each target, NaN without any."""
+        return self.target_sums / np.where(self.target_counts > 0, self.target_counts, np.nan)
 
 
 def participant_blocks(
@@ -94,7 +132,7 @@ def participant_blocks(
     weights: sparse.csr_array,
     *,
     known_variance: bool = False,
-    targets: NDArray[np.int_] | None = None,
+    targets: NDArray[np.int_] | slice | None = None,
     block: int = BLOCK,
 ) -> tuple[Iterator[ZBlock], NDArray[np.float64]]:
     """Fisher z of one participant: the mean over runs weighted by (residual df - 3).
@@ -110,7 +148,7 @@ def participant_blocks(
     known_variance : bool
         Also give the sampling variance of z: 1 / (n_eff - 3) for a run, n_eff being the effective
         number of volumes of each pair of seed and voxel, and that of the weighted mean.
-    targets : (B,) int, optional
+    targets : (B,) int or slice, optional
         Rows of the voxels to correlate with; default: all. Blocks are then slices of these.
     block : int
         Voxels in a block.

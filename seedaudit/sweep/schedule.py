@@ -1,7 +1,7 @@
 """Which worker does what: folds of participants, each swept by one thread.
 
-A fold is the unit of work. Its participants are added one after the other in a fixed order, so
-that the digits do not depend on the number of workers.
+A fold is the unit of work. What is added up over participants is exact, so that the digits depend
+neither on the number of workers nor on where they are, nor on how the pass keeps to its memory.
 """
 
 from __future__ import annotations
@@ -10,6 +10,7 @@ import threading
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_EXCEPTION, ThreadPoolExecutor, wait
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +20,8 @@ from seedaudit.sweep.checkpoint import Checkpoint
 from seedaudit.sweep.cluster import folds_on_cluster
 from seedaudit.sweep.digests import digest
 from seedaudit.sweep.fold import FoldProgress, run_fold
-from seedaudit.sweep.moments import Moments
+from seedaudit.sweep.keeper import Keeper, joined_records
+from seedaudit.sweep.moments import FoldState
 from seedaudit.sweep.task import (
     LEAST_RESIDUAL_DF,
     Buffers,
@@ -32,19 +34,20 @@ from seedaudit.sweep.task import (
     load_run,
     run_basis,
 )
+from seedaudit.sweep.tiles import IN_MEMORY, Layout, tile_slices, tile_task
 
 __all__ = [
-    "LEAST_RESIDUAL_DF", "CleaningRecipe", "ParticipantRecord", "ParticipantTask", "RunTask",
-    "SweepTask", "Swept", "assign_folds", "load_run", "run_basis", "run_fold", "sweep",
-    "sweep_key",
+    "IN_MEMORY", "LEAST_RESIDUAL_DF", "CleaningRecipe", "Layout", "ParticipantRecord",
+    "ParticipantTask", "RunTask", "SweepTask", "Swept", "assign_folds", "load_run", "run_basis",
+    "run_fold", "sweep", "sweep_key",
 ]  # fmt: skip
 
 
 @dataclass(frozen=True)
 class Swept:
-    """The result of the pass: moments and searches of each fold, and the participants in order."""
+    """The result of the pass: states and searches of each fold, and the participants in order."""
 
-    folds: tuple[Moments, ...]
+    folds: tuple[FoldState, ...]
     fold_sizes: tuple[int, ...]
     records: tuple[ParticipantRecord, ...]
     searches: tuple[tuple[SearchSums, ...], ...] = ()
@@ -70,7 +73,9 @@ def assign_folds(strata: NDArray[np.int_], folds: int) -> list[NDArray[np.int_]]
     return [np.sort(dealt[start::n_folds]) for start in range(n_folds)]
 
 
-def sweep_key(task: SweepTask, folds: Sequence[Sequence[ParticipantTask]]) -> dict[str, str]:
+def sweep_key(
+    task: SweepTask, folds: Sequence[Sequence[ParticipantTask]], layout: Layout = IN_MEMORY
+) -> dict[str, str]:
     """Digests of exactly the settings that change the numbers of the pass, by name."""
     weights, recipe = task.weights, task.cleaning
     runs = [run for fold in folds for participant in fold for run in participant.runs]
@@ -97,8 +102,10 @@ def sweep_key(task: SweepTask, folds: Sequence[Sequence[ParticipantTask]]) -> di
         ),
         "cleaning": digest(recipe, *(run_basis(run, recipe)[0] for run in runs)),
         "options": digest(
-            task.min_coverage, task.set_aside, task.single, task.keep_reported, task.precision
+            task.min_coverage, task.set_aside, task.single, task.keep_reported, task.steps
         ),
+        # no number depends on it, but what is on disk is laid out by it
+        "memory": digest(layout),
     }  # fmt: skip
 
 
@@ -106,17 +113,24 @@ def sweep(
     task: SweepTask,
     folds: Sequence[Sequence[ParticipantTask]],
     *,
+    layout: Layout = IN_MEMORY,
+    scratch: Path | None = None,
     workers: int = 2,
     cluster: str | None = None,
     checkpoint: Checkpoint | None = None,
     on_participant: Callable[[ParticipantRecord], None] = lambda record: None,
 ) -> Swept:
-    """The pass over the data.
+    """The pass over the data, or one for each tile of the voxels.
 
     Parameters
     ----------
     task : SweepTask
     folds : sequence of sequences of ParticipantTask
+    layout : Layout
+        How it keeps to its memory.
+    scratch : Path, optional
+        An existing folder for the states of finished folds, which then leave the memory; needed
+        for several tiles. The result reads from it.
     workers : int
         Threads, each with one fold at a time; reading, decompression and products run outside
         the interpreter lock.
@@ -125,7 +139,7 @@ def sweep(
     checkpoint : Checkpoint, optional
         Where progress is kept; earlier progress is gone on from.
     on_participant : callable
-        Told of every finished participant, from the worker's thread.
+        Told of every finished participant of every tile, from the worker's thread.
 
     Returns
     -------
@@ -136,18 +150,26 @@ def sweep(
     DataError
         The first bad participant, unless the task sets them aside.
     """
-    earlier = [checkpoint.load(n, fold) if checkpoint else None for n, fold in enumerate(folds)]
-    for record in (r for progress in earlier if progress for r in progress.records):
-        on_participant(record)
-    if cluster is None:
-        parts = _on_threads(task, folds, earlier, workers, checkpoint, on_participant)
-    else:
-        parts = folds_on_cluster(cluster, task, folds, earlier, checkpoint, on_participant)
+    if layout.tiles > 1 and scratch is None:
+        raise ValueError("several tiles need a folder for the states of finished folds")
+    keeper = Keeper(task, len(folds), scratch, checkpoint)
+    tiles: list[list[FoldProgress]] = []
+    for number, tile in enumerate(tile_slices(len(task.voxels), layout.tiles)):
+        # whoever was set aside in the first tile would be again
+        out = {r.participant for part in tiles[:1] for f in part for r in f.records if not r.used}
+        left = [[p for p in fold if p.participant not in out] for fold in folds]
+        earlier = keeper.begin(number, tile, left)
+        for record in (r for progress in earlier if progress for r in progress.records):
+            on_participant(record)
+        own = tile_task(task, tile)
+        if cluster is None:
+            tiles.append(_on_threads(own, left, earlier, workers, keeper, on_participant))
+        else:
+            tiles.append(folds_on_cluster(cluster, own, left, earlier, keeper, on_participant))
+    records = joined_records([[r for part in parts for r in part.records] for parts in tiles])
+    sizes = tuple(sum(r.used for r in part.records) for part in tiles[-1])
     return Swept(
-        tuple(part.moments for part in parts),
-        tuple(sum(record.used for record in part.records) for part in parts),
-        tuple(sorted((r for part in parts for r in part.records), key=lambda r: r.row)),
-        tuple(tuple(part.searches) for part in parts),
+        keeper.states(tiles), sizes, records, tuple(tuple(part.searches) for part in tiles[0])
     )
 
 
@@ -156,7 +178,7 @@ def _on_threads(
     folds: Sequence[Sequence[ParticipantTask]],
     earlier: Sequence[FoldProgress | None],
     workers: int,
-    checkpoint: Checkpoint | None,
+    keeper: Keeper,
     on_participant: Callable[[ParticipantRecord], None],
 ) -> list[FoldProgress]:
     stop, memory = threading.Event(), threading.local()
@@ -164,14 +186,21 @@ def _on_threads(
     def work(number: int) -> FoldProgress:
         if not hasattr(memory, "buffers"):
             memory.buffers = Buffers()
+        before = earlier[number]
+        if keeper.is_done(before):
+            assert before is not None
+            return before
 
         def after(progress: FoldProgress, last: bool) -> bool:
             on_participant(progress.records[-1])
-            if checkpoint:
-                checkpoint.note(number, progress, finished=last, now=stop.is_set())
+            keeper.note(number, progress, finished=last, now=stop.is_set())
             return not stop.is_set()
 
-        return run_fold(task, folds[number], earlier[number], buffers=memory.buffers, after=after)
+        progress = run_fold(
+            task, folds[number], before, buffers=memory.buffers, reuse_state=keeper.on_disk,
+            after=after,
+        )  # fmt: skip
+        return progress if stop.is_set() else keeper.finished(number, progress)
 
     with ThreadPoolExecutor(max_workers=workers) as pool:
         futures = [pool.submit(work, number) for number in range(len(folds))]

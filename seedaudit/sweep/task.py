@@ -15,12 +15,15 @@ from seedaudit.inputs.nuisance import censored_volumes, nuisance_basis, read_con
 from seedaudit.inputs.volumes import RunHeader, read_mask, read_run
 from seedaudit.space.grid import VoxelSet
 from seedaudit.sweep.correlate import CleanRun
-from seedaudit.sweep.moments import Moments
-from seedaudit.sweep.participant import CloudTargets, Kept, KeptSums, participant_blocks
+from seedaudit.sweep.moments import Moments, Steps
+from seedaudit.sweep.participant import CloudTargets, Kept, participant_blocks
 from seedaudit.sweep.prepared import PreparedRuns
 
 LEAST_RESIDUAL_DF = 4
 """A run's weight is its residual degrees of freedom minus 3."""
+
+_FINEST = np.float32(2.0**40)
+"""z of a search is added up in multiples of 1 / this, exactly: the order cannot matter."""
 
 
 @dataclass(frozen=True)
@@ -85,6 +88,11 @@ class SearchSums:
     z: NDArray[np.float64]
     count: NDArray[np.int_]
 
+    def __iadd__(self, other: SearchSums) -> SearchSums:
+        self.z += other.z
+        self.count += other.count
+        return self
+
 
 @dataclass(frozen=True)
 class SweepTask:
@@ -112,8 +120,14 @@ class SweepTask:
         One for each seed where a steadier one is looked for; may be empty.
     prepared : Path or None
         Folder where decompressed runs are kept and found again.
-    precision : str
-        Type of the state: float64, or float32 to halve its memory.
+    steps : Steps or None
+        Of the state; None for float64.
+    ahead : int
+        Voxels at the front of `voxels` that are read for the spheres only; no map holds them.
+    columns : (V,) int or None
+        Where `voxels` are in `prepared_voxels`, when they are not the same.
+    prepared_voxels : VoxelSet or None
+        Voxels of the prepared runs; None for `voxels`.
     """
 
     voxels: VoxelSet
@@ -127,17 +141,24 @@ class SweepTask:
     keep_reported: bool = False
     searches: tuple[SearchTask, ...] = ()
     prepared: Path | None = None
-    precision: str = "float64"
+    steps: Steps | None = None
+    ahead: int = 0
+    columns: NDArray[np.int_] | None = None
+    prepared_voxels: VoxelSet | None = None
+
+    @property
+    def n_voxels(self) -> int:
+        """Voxels of the maps."""
+        return len(self.voxels) - self.ahead
 
     def empty_moments(self) -> Moments:
         """The neutral element for this task."""
-        n_placements, n_voxels = self.weights.shape
         return Moments.empty(
             self.design.shape[1],
-            n_placements,
-            n_voxels,
+            self.weights.shape[0],
+            self.n_voxels,
             variance=self.single,
-            dtype=np.dtype(self.precision),
+            steps=self.steps,
         )
 
     def empty_searches(self) -> list[SearchSums]:
@@ -177,19 +198,31 @@ class ParticipantRecord:
 
 
 class Buffers:
-    """Memory for voxel series, used again for every participant of a worker.
+    """Memory of a worker, used again for every participant and, if finished folds leave it, fold.
 
     Fresh pages of memory cost about as much time as decompressing what goes into them.
     """
 
     def __init__(self) -> None:
         self._arrays: list[NDArray[np.float32]] = []
+        self._state: Moments | None = None
 
-    def get(self, number: int, n_volumes: int, n_voxels: int) -> NDArray[np.float32]:
+    def state(self, task: SweepTask) -> Moments:
+        """An empty state in the memory of the last one."""
+        if self._state is None or self._state.count.shape != (task.n_voxels,):
+            self._state = None  # let go before the next is made
+            self._state = task.empty_moments()
+        else:
+            self._state.clear()
+        return self._state
+
+    def series(self, number: int, n_volumes: int, n_voxels: int) -> NDArray[np.float32]:
         """The buffer for the run of that number, of at least (n_volumes, n_voxels)."""
         while len(self._arrays) <= number:
             self._arrays.append(np.empty((0, n_voxels), np.float32))
-        if len(self._arrays[number]) < n_volumes:
+        held = self._arrays[number]
+        if len(held) < n_volumes or held.shape[1] != n_voxels:
+            self._arrays[number] = np.empty((0, n_voxels), np.float32)
             self._arrays[number] = np.empty((n_volumes, n_voxels), np.float32)
         return self._arrays[number]
 
@@ -201,8 +234,11 @@ def load_run(
     *,
     out: NDArray[np.float32] | None = None,
     prepared: PreparedRuns | None = None,
+    columns: NDArray[np.int_] | None = None,
 ) -> tuple[CleanRun, int, str]:
     """Read one run, into `out` or from where it was prepared, and build its nuisance basis.
+
+    `columns` are the positions of `voxels` among those of the prepared runs, if not the same.
 
     Returns
     -------
@@ -217,8 +253,10 @@ def load_run(
         For unreadable images or tables.
     """
     basis, n_censored = run_basis(task, recipe)
-    if prepared is not None:
+    if prepared is not None and columns is None:
         data = prepared.run(task.header, out)
+    elif prepared is not None and columns is not None:
+        data = prepared.some(task.header, columns, out)
     else:
         data = read_run(task.header, voxels, recipe.smooth, out=out)
     finite = data.finite
@@ -276,20 +314,27 @@ def sweep_participant(
     """
     buffers, prepared = buffers or Buffers(), None
     if task.prepared is not None:
-        prepared = PreparedRuns(task.prepared, task.voxels, task.cleaning.smooth)
+        own = task.prepared_voxels or task.voxels
+        prepared = PreparedRuns(task.prepared, own, task.cleaning.smooth)
     try:
         loaded = [
             load_run(
                 run,
                 task.cleaning,
                 task.voxels,
-                out=buffers.get(number, run.header.n_volumes, len(task.voxels)),
+                out=buffers.series(number, run.header.n_volumes, len(task.voxels)),
                 prepared=prepared,
+                columns=task.columns,
             )
             for number, run in enumerate(participant.runs)
         ]
         runs = [run for run, _, _ in loaded]
-        blocks, coverage = participant_blocks(runs, task.weights, known_variance=task.single)
+        blocks, coverage = participant_blocks(
+            runs,
+            task.weights,
+            known_variance=task.single,
+            targets=slice(task.ahead, None) if task.ahead else None,
+        )
         _check_reported(task, participant, coverage)
     except DataError as error:
         named = [
@@ -303,16 +348,18 @@ def sweep_participant(
             participant.participant, participant.row, len(participant.runs), used=False,
             reason=reason,
         )  # fmt: skip
-    sums = [KeptSums(cloud) for cloud in task.clouds]
+    kept = tuple(Kept.empty(cloud) for cloud in task.clouds)
     reported = [cloud.rows.start for cloud in task.clouds]
-    maps = np.full((len(reported), len(task.voxels)), np.nan, np.float32)
+    maps = None
+    if task.keep_reported:
+        maps = np.full((len(reported), task.n_voxels), np.nan, np.float32)
     n_missing = 0
     for block in blocks:
         moments.add(task.design[participant.row], block)
         n_missing += int((~block.valid).sum())
-        for part in sums:
-            part.add(block)
-        if task.keep_reported:
+        for part, cloud in zip(kept, task.clouds, strict=True):
+            part.add(cloud, block)
+        if maps is not None:
             maps[:, block.where] = np.where(block.valid, block.z[reported], np.nan)
     searched = [
         _search(runs, search, sums) for search, sums in zip(task.searches, searches, strict=True)
@@ -327,8 +374,8 @@ def sweep_participant(
         n_missing_voxels=n_missing,
         digests=tuple(digest for _, _, digest in loaded),
         coverage=coverage,
-        kept=tuple(part.finish() for part in sums),
-        reported_z=maps if task.keep_reported else None,
+        kept=kept,
+        reported_z=maps,
         search_coverage=tuple(searched),
     )
 
@@ -337,6 +384,7 @@ def _search(runs: Sequence[CleanRun], search: SearchTask, sums: SearchSums) -> N
     """Add one participant's maps of a lattice; give the coverage of its spheres."""
     blocks, coverage = participant_blocks(runs, search.weights, targets=search.targets)
     for block in blocks:
+        block.z[:] = np.rint(block.z * _FINEST) / _FINEST
         sums.z[:, block.where] += block.z
         sums.count[block.where] += block.valid
     return coverage

@@ -13,7 +13,7 @@ from seedaudit.consensus.chance import gwet_ac1
 from seedaudit.consensus.halves import FoldMaps, cross_half_r, fold_sums, half_splits, halves
 from seedaudit.inference.glm import uniform_estimate
 from seedaudit.sweep.correlate import ZBlock
-from seedaudit.sweep.moments import Moments, merged
+from seedaudit.sweep.moments import Chosen, Moments, merged
 
 V, N, FOLDS = 90, 5, 4  # voxels, placements (row 0 reported), folds
 BOUNDS = np.array([[0, V], [10, 50], [50, 52]])
@@ -204,7 +204,7 @@ def test_ceiling_puts_it_together(study):
 def test_a_control_that_is_the_reported_seed_has_ratio_one(study):
     moments = study[4]
     keep = np.ones((2, V), bool)
-    found = whole(study, controls=[m.placements(np.array([0, 3])) for m in moments],
+    found = whole(study, controls=[Chosen(m, np.array([0, 3])) for m in moments],
                   control_keep=keep)  # fmt: skip
     np.testing.assert_allclose(found.control_relative[0], 1.0 if np.isfinite(
         found.placement_relative[0]) else np.nan)  # fmt: skip

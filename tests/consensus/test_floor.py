@@ -12,7 +12,7 @@ from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.space.geometry import FWHM_PER_SD
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Chosen, Moments, merged
-from tests.whole_states import group_maps
+from tests.whole_states import group_maps, some
 
 ONE = np.ones(1)
 
@@ -38,7 +38,7 @@ def test_controls_are_compared_outside_their_own_sphere():
     ijk = np.stack([np.arange(80), np.zeros(80), np.zeros(80)], axis=1).astype(np.int32)
     classes_of = classifier(ThresholdRule("p", 0.05), ijk, (80, 1, 1))
     folds = moments_of(z, np.ones((10, 1)))
-    reported = group_maps(merged(folds).placements(slice(0, 1)), ONE, 10, classes_of)
+    reported = group_maps(some(merged(folds), slice(0, 1)), ONE, 10, classes_of)
     keep = np.ones((2, 80), bool)
     keep[:, :8] = False
     controls = [Chosen(fold, np.array([1, 2])) for fold in folds]

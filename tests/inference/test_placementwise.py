@@ -11,7 +11,7 @@ from seedaudit.inference.group import ThresholdRule, classifier
 from seedaudit.inference.placementwise import placement_maps
 from seedaudit.sweep.correlate import ZBlock
 from seedaudit.sweep.moments import Moments, merged
-from tests.whole_states import group_maps
+from tests.whole_states import group_maps, some
 
 N, SHAPE = 7, (5, 6, 4)
 V = int(np.prod(SHAPE))
@@ -60,7 +60,7 @@ def test_equals_whole_states(workers, missing, rule):
         look=lambda found, df: found.statistic,
         workers=workers,
     )
-    total = merged(folds).voxels(voxels)
+    total = some(merged(folds), voxels=voxels)
     expected = group_maps(total, contrast, needed, classes_of)
     np.testing.assert_allclose(maps.effects, expected.effects, rtol=1e-6)
     np.testing.assert_allclose(np.array(seen), expected.statistics, rtol=1e-5)
@@ -75,7 +75,7 @@ def test_equals_whole_states(workers, missing, rule):
         )
     used = [(fold, size) for fold, size in zip(folds, sizes, strict=True) if size]
     for g, (fold, size) in enumerate(used):
-        rest = group_maps(total - fold.voxels(voxels), contrast, needed - size, classes_of)
+        rest = group_maps(total - some(fold, voxels=voxels), contrast, needed - size, classes_of)
         np.testing.assert_array_equal(without.counts(g), class_counts(rest.classes[1:]))
         for column, sign in enumerate((1, -1)):
             np.testing.assert_array_equal(

@@ -32,7 +32,7 @@ def test_sums_of_z_equal_those_of_the_placements(searched):
     swept = sweep(task, plan_folds(plan))
     for fold, (search,) in zip(swept.folds, swept.searches, strict=True):
         targets = task.searches[0].targets
-        np.testing.assert_allclose(search.z, fold.xtz[0][:, targets], atol=1e-5)
+        np.testing.assert_allclose(search.z, fold.wide().xtz[0][:, targets], atol=1e-5)
         np.testing.assert_array_equal(search.count, fold.count[targets])
     for record in swept.records:
         np.testing.assert_allclose(record.search_coverage[0], record.coverage)
