@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -69,7 +70,8 @@ def conclude_seed(
     )
     if found.ceiling is None and len(plan.participants) == 1:
         found = replace(
-            found, ceiling=_time_ceiling(plan, seed, found, space, kept_rows, control_rows)
+            found,
+            ceiling=_time_ceiling(plan, seed, found, space, kept_rows, control_rows, swept.scratch),
         )
     shifts = placements[["dx", "dy", "dz"]].to_numpy()[seed.used[kept_rows]]
     claims = judge_claims(
@@ -185,11 +187,17 @@ def _time_ceiling(
     space: Space,
     kept_rows: NDArray[np.int_],
     control_rows: NDArray[np.int_],
+    scratch: Path | None,
 ) -> Ceiling:
     """Halves of the time series, for one participant."""
     chosen = seed.used[np.concatenate([kept_rows, control_rows])]
-    first, second = time_halves(plan, csr_array(seed.cloud.weights[chosen]))
-    rows = np.flatnonzero(found.voxels & (first.count > 0) & (second.count > 0))
+    within = None
+    if scratch is not None:
+        within = scratch / "halves"
+        within.mkdir(exist_ok=True)
+    first, second = time_halves(plan, csr_array(seed.cloud.weights[chosen]), within)
+    counts = [half.frame(slice(None)).count for half in (first, second)]
+    rows = np.flatnonzero(found.voxels & (counts[0] > 0) & (counts[1] > 0))
     keep = _controls(plan, seed, (), control_rows).keep[:, rows]
     labels = region_rows(space.labels[rows], space.index)
     return time_ceiling(first, second, rows, labels, len(space.index), len(keep), keep)

@@ -50,6 +50,7 @@ def overview(plan: Plan, needs: Forecast) -> dict[str, Any]:
             "seconds": round(needs.seconds, 1),
             "memory_gb": round(needs.memory / 1e9, 2),
             "disk_mb": round(needs.disk / 1e6, 1),
+            "disk_while_running_gb": round(needs.progress / 1e9, 2),
         },
     }
 
@@ -165,7 +166,8 @@ def overview_text(found: dict[str, Any]) -> str:
         )
     parts.append(
         f"\nPredicted, roughly: {_duration(needs['seconds'])}, "
-        f"{needs['memory_gb']:g} GB of memory, {needs['disk_mb']:g} MB of disk\nA run would start."
+        f"{needs['memory_gb']:g} GB of memory, {needs['disk_mb']:g} MB of disk, and "
+        f"{needs['disk_while_running_gb']:g} GB more until the result is safe\nA run would start."
     )
     return "\n".join(parts)
 

@@ -45,12 +45,15 @@ __all__ = [
 
 @dataclass(frozen=True)
 class Swept:
-    """The result of the pass: states and searches of each fold, and the participants in order."""
+    """The result of the pass: states and searches of each fold, and the participants in order;
+    `scratch` is the folder that finished folds are in, if they left the memory.
+    """
 
     folds: tuple[FoldState, ...]
     fold_sizes: tuple[int, ...]
     records: tuple[ParticipantRecord, ...]
     searches: tuple[tuple[SearchSums, ...], ...] = ()
+    scratch: Path | None = None
 
 
 def assign_folds(strata: NDArray[np.int_], folds: int) -> list[NDArray[np.int_]]:
@@ -168,9 +171,8 @@ def sweep(
             tiles.append(folds_on_cluster(cluster, own, left, earlier, keeper, on_participant))
     records = joined_records([[r for part in parts for r in part.records] for parts in tiles])
     sizes = tuple(sum(r.used for r in part.records) for part in tiles[-1])
-    return Swept(
-        keeper.states(tiles), sizes, records, tuple(tuple(part.searches) for part in tiles[0])
-    )
+    searches = tuple(tuple(part.searches) for part in tiles[0])
+    return Swept(keeper.states(tiles), sizes, records, searches, scratch)
 
 
 def _on_threads(

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import gc
 import os
 import signal
 import threading
 import time
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -15,7 +17,11 @@ from seedaudit.errors import DataError, StudyError
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
 from seedaudit.sweep import cluster as module
+from seedaudit.sweep import schedule
+from seedaudit.sweep.keeper import Keeper
+from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.schedule import sweep
+from seedaudit.sweep.task import SearchTask
 from tests.small_study import write_small_study
 
 distributed = pytest.importorskip("distributed", reason="the extra `cluster` is not installed")
@@ -59,6 +65,45 @@ def test_a_cluster_gives_the_same_digits(plan, local, cluster):
     )  # fmt: skip
     assert_same(local, found)
     assert {record.participant for record in told} == {r.participant for r in local.records}
+
+
+def test_parts_of_a_fold_are_merged_in_pairs(plan, local, cluster, monkeypatch):
+    """Folds of several parts, here of one participant each, also in tiles and with a search."""
+    monkeypatch.setattr(module, "PART", 1)
+    folds = [plan_folds(plan)[0] + plan_folds(plan)[1], [], *plan_folds(plan)[2:]]
+    task = plan.sweep_task(plan.design.matrix)
+    task = replace(task, searches=(SearchTask(task.weights, np.arange(0, len(plan.voxels), 7)),))
+    expected = sweep(task, folds)
+    found = sweep(task, folds, cluster=cluster.scheduler_address)
+    assert_same(expected, found)
+    for one, other in zip(expected.searches, found.searches, strict=True):
+        np.testing.assert_array_equal(one[0].z, other[0].z)
+        np.testing.assert_array_equal(one[0].count, other[0].count)
+
+
+def test_the_client_holds_one_state_at_a_time(plan, local, cluster, monkeypatch, tmp_path):
+    """When a fold has come and goes to its file, no other fold's state is with the client."""
+    held = []
+
+    class Watched(Keeper):
+        def finished(self, fold, progress):
+            gc.collect()
+            states = [o for o in gc.get_objects() if isinstance(o, Moments) and o.n_placements]
+            held.append(len([state for state in states if state is not progress.moments]))
+            return super().finished(fold, progress)
+
+    before = [o for o in gc.get_objects() if isinstance(o, Moments) and o.n_placements]
+    monkeypatch.setattr(schedule, "Keeper", Watched)
+    found = sweep(
+        plan.sweep_task(plan.design.matrix), plan_folds(plan), scratch=tmp_path,
+        cluster=cluster.scheduler_address,
+    )  # fmt: skip
+    assert held == [len(before)] * len(plan_folds(plan))
+    for fold, again in zip(local.folds, found.folds, strict=True):
+        for placement in range(fold.n_placements):
+            one, other = (f.sums(placement, slice(None)) for f in (fold, again))
+            np.testing.assert_array_equal(one.xtz, other.xtz)
+            np.testing.assert_array_equal(one.zz, other.zz)
 
 
 def slow_fold(task, fold, before):
