@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from itertools import combinations
+from itertools import combinations, pairwise
 from math import comb
 from typing import Any
 
@@ -131,8 +131,24 @@ class FoldMaps:
     @classmethod
     def of(cls, maps: FloatArray, bounds: NDArray[np.integer[Any]]) -> FoldMaps:
         """From the maps, such as those of `fold_sums`."""
-        totals = np.array([maps[:, start:stop].sum(axis=1) for start, stop in bounds])
+        edges, spans = _segments(bounds)
+        totals = _over_spans(np.add.reduceat(maps[:, : edges[-1]], edges[:-1], axis=1).T, spans)
         return cls(maps, bounds, totals, _centred_products(maps, maps, bounds, totals, totals))
+
+
+def _segments(
+    bounds: NDArray[np.integer[Any]],
+) -> tuple[NDArray[np.integer[Any]], NDArray[np.integer[Any]]]:
+    """Ends of the pieces that sets of voxels are made of, so that each voxel is looked at once;
+    and the first and last + 1 piece of every set.
+    """
+    edges = np.unique(bounds)
+    return edges, np.searchsorted(edges, bounds)
+
+
+def _over_spans(pieces: FloatArray, spans: NDArray[np.integer[Any]]) -> FloatArray:
+    """Sums over the pieces of every set."""
+    return np.array([pieces[first:last].sum(axis=0) for first, last in spans])
 
 
 def _centred_products(
@@ -143,7 +159,9 @@ def _centred_products(
     y_totals: FloatArray,
 ) -> FloatArray:
     """Of all rows of x with all rows of y, within each set of voxels, (B, rows of x, rows of y)."""
-    products = np.array([x[:, start:stop] @ y[:, start:stop].T for start, stop in bounds])
+    edges, spans = _segments(bounds)
+    pieces = [x[:, start:stop] @ y[:, start:stop].T for start, stop in pairwise(edges)]
+    products = _over_spans(np.reshape(pieces, (-1, len(x), len(y))), spans)
     n = np.maximum(bounds[:, 1] - bounds[:, 0], 1)
     return np.asarray(products - np.einsum("bi,bj->bij", x_totals / n[:, None], y_totals))
 

@@ -112,15 +112,29 @@ def low_rank(
         size += len(packed(code))
         if size > most_bytes:
             break
-        for part in _blocks(left):
-            left[:, part] -= np.outer(weight, code[part] * step).astype(np.float32)
+        errors.append(_taken_away(left, weight, code, step))
         lengths[k] = length * np.linalg.norm(pattern - code * step)
         codes.append(code)
         steps.append(step)
         weights.append(weight)
-        errors.append(_largest(left))
     kept = np.array(weights[1:]).reshape(-1, len(maps)).T
     return LowRank(np.array(codes), np.array(steps), kept, np.array(errors))
+
+
+def _taken_away(
+    left: NDArray[np.floating[Any]],
+    weight: NDArray[np.float64],
+    code: NDArray[np.int8],
+    step: float,
+) -> float:
+    """Take one component out, in place, and give the largest value that is left."""
+    column = weight.astype(np.float32)[:, None]
+    largest = 0.0
+    for part in _blocks(left):
+        block = left[:, part]
+        block -= column * (code[part] * np.float32(step))
+        largest = max(largest, _largest(block))
+    return largest
 
 
 def packed(codes: NDArray[np.int8]) -> bytes:
