@@ -41,7 +41,11 @@ def shared(command: Callable[..., Any]) -> Callable[..., Any]:
         click.option(
             "--workers", type=click.IntRange(1), metavar="N", help="Threads (default: all cores)."
         ),
-        click.option("--memory", metavar="SIZE", help="Keep to so much memory, such as 6GB."),
+        click.option(
+            "--memory",
+            metavar="SIZE",
+            help="Keep to so much memory, such as 6GB; more then goes to disk.",
+        ),
         click.option("--json", "as_json", is_flag=True, help="JSON on standard output."),
         click.option("--quiet", is_flag=True, help="No progress, no warnings."),
     ]

@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+import errno
+import os
+import shutil
 from dataclasses import replace
+from pathlib import Path
 
 import nibabel as nib
 import numpy as np
@@ -10,12 +14,13 @@ import pandas as pd
 import pytest
 
 from seedaudit import forecast as needs
-from seedaudit.auditing import audit, plan_folds
+from seedaudit.auditing import Silence, audit, open_checkpoint, plan_folds
 from seedaudit.budget import MOST_TILES, fitted, parse_size
-from seedaudit.errors import StudyError
+from seedaudit.errors import DataError, StudyError
 from seedaudit.forecast import BASE_MEMORY, forecast
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
+from seedaudit.sweep import keeper, schedule
 from seedaudit.sweep.correlate import BLOCK
 from seedaudit.sweep.tiles import IN_MEMORY, Layout, tile_slices
 
@@ -141,6 +146,80 @@ def test_no_digit_depends_on_the_layout_with_one_participant(asked):
     assert expected.seeds[0].summary["ceiling"] is not None
     for layout in LAYOUTS[:2]:
         assert_same(audit(replace(plan, layout=layout)), expected, claims=False)
+
+
+class Stop(Silence):
+    """Ctrl-C after so many participants."""
+
+    def __init__(self, left):
+        self.left = left
+
+    def step(self, label):
+        self.left -= 1
+        if self.left == 0:
+            raise KeyboardInterrupt
+
+
+@pytest.mark.parametrize("after", [3, 9, 12])
+def test_an_interrupted_tile_goes_on(large, whole, after, tmp_path):
+    """In the first and in the second tile; finished folds are not read again."""
+    plan = replace(large, layout=LAYOUTS[1])
+    with pytest.raises(KeyboardInterrupt), open_checkpoint(plan, tmp_path / "progress") as kept:
+        audit(plan, workers=1, checkpoint=kept, progress=Stop(after))
+    told = []
+    with open_checkpoint(plan, tmp_path / "progress", tell=told.append) as kept:
+        assert_same(audit(plan, workers=2, checkpoint=kept), whole)
+    assert told == ["going on from earlier progress"]
+    # a state that is no longer there is made again
+    (tmp_path / "progress" / "state" / "fold-003").unlink()
+    with open_checkpoint(plan, tmp_path / "progress") as kept:
+        assert_same(audit(plan, checkpoint=kept), whole)
+        kept.finish()
+    assert not (tmp_path / "progress").exists()
+
+
+def test_another_layout_does_not_use_earlier_progress(large, whole, tmp_path):
+    told = []
+    for layout in (LAYOUTS[1], LAYOUTS[0]):
+        plan = replace(large, layout=layout)
+        with open_checkpoint(plan, tmp_path / "progress", tell=told.append) as kept:
+            assert_same(audit(plan, checkpoint=kept), whole)
+    assert told == ["earlier progress is not used (changed: memory)"]
+
+
+def test_a_full_disk_is_a_clear_error(large, tmp_path, monkeypatch):
+    def full(*_):
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    monkeypatch.setattr(keeper, "store_tile", full)
+    plan = replace(large, layout=LAYOUTS[0])
+    with (
+        open_checkpoint(plan, tmp_path / ".audit.progress") as kept,
+        pytest.raises(DataError, match=r"progress folder \.audit\.progress: cannot be written"),
+    ):
+        audit(plan, checkpoint=kept)
+
+
+def test_a_file_that_changes_between_tiles_is_an_error(large, monkeypatch):
+    def changed(tiles):
+        tiles[1][0] = replace(tiles[1][0], digests=("another",))
+        return keeper.joined_records(tiles)
+
+    monkeypatch.setattr(schedule, "joined_records", changed)
+    with pytest.raises(DataError, match="a run has changed while the audit was at work"):
+        audit(replace(large, layout=LAYOUTS[1]))
+
+
+def test_set_aside_in_the_first_tile_is_set_aside_in_all(asked, tmp_path):
+    content, folder = asked
+    runs = [str(shutil.copy(name, tmp_path)) for name in content["data"]["runs"]]
+    damaged = Path(runs[4])
+    damaged.write_bytes(damaged.read_bytes()[:-3000])
+    content = {**content, "data": {**content["data"], "runs": runs, "on_bad_run": "set-aside"}}
+    plan = make_plan(Study.from_mapping(content, folder))
+    expected = audit(plan)
+    assert expected.provenance["group"]["set_aside"] == 1
+    assert_same(audit(replace(plan, layout=LAYOUTS[1])), expected)
 
 
 def test_tiles_from_prepared_runs(large, whole, tmp_path):

@@ -37,6 +37,8 @@ class Keeper:
     ) -> None:
         self._task, self._scratch, self._checkpoint = task, scratch, checkpoint
         self._paths = [] if scratch is None else [scratch / f"fold-{n:03d}" for n in range(n_folds)]
+        # as it was before this pass: a file that is made anew holds no earlier tile
+        self._there = [path.exists() for path in self._paths]
         self._tile, self._start = 0, 0
 
     @property
@@ -53,7 +55,7 @@ class Keeper:
             return [None] * len(folds)
         found = [self._checkpoint.load((number, n), fold) for n, fold in enumerate(folds)]
         return [
-            None if self.is_done(part) and not (self.on_disk and self._paths[n].exists()) else part
+            None if self.is_done(part) and not (self.on_disk and self._there[n]) else part
             for n, part in enumerate(found)
         ]
 
@@ -81,7 +83,7 @@ class Keeper:
         try:
             store_tile(self._paths[fold], len(self._task.voxels), self._start, progress.moments)
         except OSError as error:
-            raise disk_refused(self._scratch, error) from error
+            raise disk_refused(self._scratch.parent, error) from error
         # copies: the state's own memory is used again
         kept = replace(progress, moments=progress.moments.frame(slice(None)).wide())
         if self._checkpoint is not None:

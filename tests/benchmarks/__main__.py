@@ -14,9 +14,10 @@ import tempfile
 from pathlib import Path
 from typing import Any
 
-from tests.benchmarks.data import FULL, SMALL, Size, write_runs
+from tests.benchmarks.data import FULL, LARGE, SMALL, Size, write_runs
 
 ROOT = Path(__file__).resolve().parents[2]
+SMALL_MEMORY = "0.9GB"
 
 
 def measured(kind: str, **options: Any) -> dict[str, float]:
@@ -47,16 +48,9 @@ def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: in
     report = Report()
     tables = {n: str(write_runs(folder, size, n)) for n in {2, 6, *many}}
     six = tables[6]
-    measured("decompress", table=six, workers=2)  # brings the files into the page cache
-
-    base = measured("decompress", table=six, workers=2)
-    for name, cleaned, goal in [("no cleaning", 0, "<= 1.5"), ("30 confounds, band", 1, "<= 2.0")]:
-        whole = measured("audit", table=six, workers=2, placements=placements, cleaned=cleaned)
-        for part, label in [("pass", "the pass"), ("seconds", "whole run")]:
-            report.add(
-                f"(a) {label} over decompression, {name}", whole[part] / base["seconds"], "x", goal,
-                f"{whole[part]:.2f} s over {base['seconds']:.2f} s, 6 participants",
-            )  # fmt: skip
+    for n in (6, many[1]):
+        measured("decompress", table=tables[n], workers=2)  # brings the files into the page cache
+        _against_decompression(report, tables[n], n, placements)
 
     ours = measured("audit", table=six, workers=2, placements=100)
     per_run = ours["pass"] / 6
@@ -68,8 +62,7 @@ def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: in
     report.add(f"(c) loop over {placements} placements over the pass, one run",
                loop["seconds"] / ours_many, "x", ">= 1000",
                f"{loop['seconds']:.0f} s extrapolated from 3 placements")  # fmt: skip
-    report.add("(d) peak memory over that of the batch", ours["peak_gb"] / batch["peak_gb"], "x",
-               "<= 0.33", f"{ours['peak_gb']:.2f} GB over {batch['peak_gb']:.2f} GB")  # fmt: skip
+    _memory(report, six, ours, batch)
 
     runs = {n: measured("audit", table=tables[n], workers=2, placements=100) for n in many}
     few, most = many[0], many[-1]
@@ -83,25 +76,61 @@ def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: in
     alone = measured("audit", table=six, workers=1, placements=100)
     report.add("(f) one worker over two, the pass", alone["pass"] / ours["pass"], "x", "about 2",
                f"{alone['pass']:.2f} s over {ours['pass']:.2f} s")  # fmt: skip
-    _cluster(report, six, ours)
+    _cluster(report, tables)
     _placements(report, six)
     _prepared(report, six, folder, ours)
     _search(report, six, ours)
     return report
 
 
-def _cluster(report: Report, table: str, local: dict[str, float]) -> None:
+def _against_decompression(report: Report, table: str, n: int, placements: int) -> None:
+    base = measured("decompress", table=table, workers=2)
+    for name, cleaned, goal in [("no cleaning", 0, "<= 1.5"), ("30 confounds, band", 1, "<= 2.0")]:
+        found = measured("audit", table=table, workers=2, placements=placements, cleaned=cleaned)
+        for part, label in [("pass", "the pass"), ("seconds", "whole run")]:
+            report.add(
+                f"(a) {label} over decompression, {name}", found[part] / base["seconds"], "x", goal,
+                f"{found[part]:.2f} s over {base['seconds']:.2f} s, {n} participants",
+            )  # fmt: skip
+    report.add("    left-out folds, pairs, sweep, regions over the pass",
+               found["maps"] / found["pass"], "x", "< 1",
+               f"{found['maps']:.2f} s, {placements} placements, {n} participants")  # fmt: skip
+
+
+def _memory(report: Report, table: str, ours: dict[str, float], batch: dict[str, float]) -> None:
+    report.add("(d) peak memory over that of the batch", ours["peak_gb"] / batch["peak_gb"], "x",
+               "<= 0.33", f"{ours['peak_gb']:.2f} GB over {batch['peak_gb']:.2f} GB")  # fmt: skip
+    kept = measured("audit", table=table, workers=2, placements=100, memory=SMALL_MEMORY)
+    report.add(f"(d) the same with --memory {SMALL_MEMORY}", kept["peak_gb"] / batch["peak_gb"],
+               "x", "<= 0.33", f"{kept['peak_gb']:.2f} GB, {kept['tiles']:.0f} tiles, whole run "
+               f"{kept['seconds'] / ours['seconds']:.2f} times as long")  # fmt: skip
+
+
+def large(folder: Path, report: Report) -> None:
+    """1 mm and 500 placements within 8 GB; some 60 GB of disk and 15 minutes."""
+    table = str(write_runs(folder, LARGE, 4))
+    found = measured("audit", table=table, workers=2, placements=500, memory="8GB")
+    report.add("    1 mm, 500 placements with --memory 8GB, peak", found["peak_gb"], "GB", "<= 8",
+               f"{found['tiles']:.0f} tiles, 4 participants, {LARGE.volumes} volumes: pass "
+               f"{found['pass']:.0f} s, whole run {found['seconds']:.0f} s")  # fmt: skip
+
+
+def _cluster(report: Report, tables: dict[int, str]) -> None:
     try:
         from distributed import LocalCluster
     except ImportError:
         print("(g) skipped: the extra `cluster` is not installed")
         return
-    with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None,
-                      worker_dashboard_address=None, host="127.0.0.1") as cluster:  # fmt: skip
-        found = measured("audit", table=table, workers=2, placements=100,
-                         cluster=cluster.scheduler_address)  # fmt: skip
-    report.add("(g) cluster of 2 workers over local, the pass", found["pass"] / local["pass"], "x",
-               "about 1", f"{found['pass']:.2f} s over {local['pass']:.2f} s")  # fmt: skip
+    most = max(tables)
+    for n in (6, most):
+        options = {"table": tables[n], "workers": 2, "placements": 100}
+        local = measured("audit", **options)
+        with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None,
+                          worker_dashboard_address=None, host="127.0.0.1") as cluster:  # fmt: skip
+            found = measured("audit", **options, cluster=cluster.scheduler_address)
+        report.add("(g) cluster of 2 workers over local, the pass", found["pass"] / local["pass"],
+                   "x", "about 1", f"{found['pass']:.2f} s over {local['pass']:.2f} s, {n} "
+                   f"participants; client {found['peak_gb']:.2f} GB")  # fmt: skip
 
 
 def _placements(report: Report, table: str) -> None:
@@ -134,6 +163,7 @@ def main() -> None:
     """Parse the options, measure, print, write JSON."""
     parser = argparse.ArgumentParser(prog="python -m tests.benchmarks", description=__doc__)
     parser.add_argument("--small", action="store_true", help="tiny data, in under two minutes")
+    parser.add_argument("--large", action="store_true", help="also 1 mm (60 GB of disk)")
     parser.add_argument("--json", type=Path, help="also write the table as JSON")
     parser.add_argument("--folder", type=Path, help="keep the data there (default: temporary)")
     options = parser.parse_args()
@@ -142,6 +172,8 @@ def main() -> None:
         folder = options.folder or Path(temporary)
         folder.mkdir(parents=True, exist_ok=True)
         report = benchmark(folder, size, many=many, placements=200)
+        if options.large:
+            large(folder, report)
     if options.json:
         options.json.write_text(json.dumps(report.lines, indent=2) + "\n")
 

@@ -22,6 +22,7 @@ class Size:
 
 FULL = Size(2.0, 300)
 SMALL = Size(8.0, 160)
+LARGE = Size(1.0, 150)
 
 N_CONFOUNDS = 30
 

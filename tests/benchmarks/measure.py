@@ -66,9 +66,15 @@ def audit(
     searched: int = 0,
     cluster: str = "",
     prepared: str = "",
+    memory: str = "",
 ) -> dict[str, float]:
-    """A whole audit from Python: plan, pass, conclusions."""
+    """A whole audit from Python: plan, pass, conclusions; `maps` are what is computed from the
+    maps of all placements: estimates with every fold left out, pairs, sweep and regions.
+    """
     from seedaudit.auditing import audit as run
+    from seedaudit.budget import fitted, parse_size
+    from seedaudit.consensus import cloud
+    from seedaudit.preflight import make_plan
 
     options: dict[str, Any] = {"workers": workers}
     if cluster:
@@ -76,10 +82,35 @@ def audit(
     if prepared:
         options["prepared"] = Path(prepared)
     asked = study(table, placements, cleaned=bool(cleaned), searched=bool(searched))
+    spent = [
+        _timed(cloud, name) for name in ("placement_maps", "_pairs", "_thresholds", "_regions")
+    ]
     started = time.perf_counter()
-    result = run(asked, **options)
+    plan = make_plan(asked)
+    if memory:
+        plan = fitted(plan, workers, parse_size(memory))
+    result = run(plan if memory else asked, **options)
     took = time.perf_counter() - started
-    return {"seconds": took, "pass": result.provenance["seconds"]["pass over the data"]}
+    return {
+        "seconds": took,
+        "pass": result.provenance["seconds"]["pass over the data"],
+        "maps": sum(map(sum, spent)),
+        "tiles": plan.layout.tiles,
+    }
+
+
+def _timed(module: Any, name: str) -> list[float]:
+    """The seconds that each call of a function will take."""
+    inner, seconds = getattr(module, name), []
+
+    def outer(*arguments: Any, **options: Any) -> Any:
+        started = time.perf_counter()
+        found = inner(*arguments, **options)
+        seconds.append(time.perf_counter() - started)
+        return found
+
+    setattr(module, name, outer)
+    return seconds
 
 
 def maskers_batch(table: str, placements: int) -> dict[str, float]:

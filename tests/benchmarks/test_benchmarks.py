@@ -20,6 +20,7 @@ def table(tmp_path_factory):
     [
         ("decompress", {"workers": 2}),
         ("audit", {"workers": 2, "placements": 20, "cleaned": 1}),
+        ("audit", {"workers": 2, "placements": 20, "memory": "2GB"}),
         ("maskers_batch", {"placements": 5}),
         ("maskers_loop", {"placements": 5, "measured": 1}),
     ],
