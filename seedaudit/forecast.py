@@ -11,6 +11,7 @@ import psutil
 
 from seedaudit.dictionary import MAPS
 from seedaudit.errors import Problem, StudyError
+from seedaudit.inference.glm import orthonormal_design
 from seedaudit.plan import Plan
 from seedaudit.searching import PlannedSearch
 from seedaudit.sweep.correlate import BLOCK
@@ -66,9 +67,9 @@ class _Sizes:
 
     @classmethod
     def of(cls, plan: Plan) -> _Sizes:
-        single = len(plan.participants) == 1
         p, n = plan.design.matrix.shape[1], plan.n_swept
-        each = 8 * (p + 2) if single else 4 * (p + 1)
+        steps = plan.steps(orthonormal_design(plan.design.matrix, plan.design.contrast)[0])
+        each = 8 * (p + 2) if steps is None else steps.dtype.itemsize * (p + 1)
         folds = len(assign_folds(plan.design.strata, plan.folds))
         return cls(len(plan.voxels), n, p, folds, each * n + 8.0 * p * p + 4)
 

@@ -123,8 +123,6 @@ class Plan:
 
     def sweep_task(self, design: NDArray[np.float64]) -> SweepTask:
         """What the workers of the pass need, with an equivalent design of their own (n, p)."""
-        single = len(self.participants) == 1
-        rows_of = assign_folds(self.design.strata, self.folds)
         weights = sparse.vstack([seed.cloud.weights[seed.used] for seed in self.seeds]).tocsr()
         clouds, start = [], 0
         for seed in self.seeds:
@@ -139,16 +137,21 @@ class Plan:
             self.cleaning,
             min_coverage=self.study.placements.min_coverage,
             set_aside=self.study.data.on_bad_run == "set-aside",
-            single=single,
+            single=len(self.participants) == 1,
             keep_reported=self.study.threshold.rule == "fwe",
-            # one participant's state is read as it is; a group's is a sum
-            steps=None if single else Steps.of(design, rows_of),
+            steps=self.steps(design),
             searches=tuple(
                 SearchTask(seed.search.weights, seed.search.targets)
                 for seed in self.seeds
                 if seed.search is not None
             ),
         )
+
+    def steps(self, design: NDArray[np.float64]) -> Steps | None:
+        """Of the state: one participant's is read as it is, a group's is a sum."""
+        if len(self.participants) == 1:
+            return None
+        return Steps.of(design, assign_folds(self.design.strata, self.folds))
 
     @property
     def n_regions(self) -> int:

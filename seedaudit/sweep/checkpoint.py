@@ -203,7 +203,7 @@ def _write(path: Path, progress: FoldProgress) -> None:
         f"moments_{name}": value for name, value in progress.moments.named_arrays()
     }
     if (steps := progress.moments.steps) is not None:
-        arrays["steps"] = np.array([steps.xz, steps.zz])
+        arrays["steps"] = np.array([steps.xz, steps.zz, steps.bits])
     rows = []
     for i, record in enumerate(progress.records):
         row = {name: getattr(record, name) for name in SCALARS}
@@ -261,7 +261,10 @@ def _read(path: Path) -> FoldProgress:
     while f"search_{len(searches)}_z" in arrays:
         name = f"search_{len(searches)}"
         searches.append(SearchSums(arrays[f"{name}_z"], arrays[f"{name}_count"]))
-    steps = Steps(*arrays["steps"].tolist()) if "steps" in arrays else None
+    steps = None
+    if "steps" in arrays:
+        xz, zz, bits = arrays["steps"].tolist()
+        steps = Steps(xz, zz, int(bits))
     moments = Moments(**state, steps=steps)
     if not moments.n_placements:
         return FoldProgress(moments, searches, records)

@@ -25,6 +25,10 @@ below 8 are then exact, and the order of adding cannot matter."""
 _ROWS = 16  # placements added at once, so that what is computed on the way stays in cache
 
 
+COARSEST = 2.0**-15
+"""Step of z'z above which 32 bits no longer hold what t needs: for folds of some 250."""
+
+
 @dataclass(frozen=True)
 class Steps:
     """What one unit of a state in whole numbers is worth: of X'z, and of z'z.
@@ -32,14 +36,27 @@ class Steps:
     Sums of whole numbers are exact, so that the order of adding and merging cannot matter; and the
     rounding of a contribution does not grow with its size, so that a small variance beside a large
     mean keeps its digits, as it would not in float32.
+
+    Parameters
+    ----------
+    xz, zz : float
+        Powers of two.
+    bits : int
+        32 or 64, of a number.
     """
 
     xz: float
     zz: float
+    bits: int = 32
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Of the numbers."""
+        return np.dtype(f"i{self.bits // 8}")
 
     @classmethod
     def of(cls, design: NDArray[np.float64], folds: Iterable[NDArray[np.int_]]) -> Steps:
-        """The finest steps with which no sum of a fold can pass the range of 32 bits.
+        """The finest steps with which no sum of a fold can pass the range.
 
         Parameters
         ----------
@@ -47,16 +64,17 @@ class Steps:
         folds : iterable of (n_g,) int
             Rows of the design in each fold.
         """
-        xz, zz = (
-            max(largest)
-            for largest in zip(
-                *((np.abs(design[rows]).sum(axis=0).max() * LARGEST_Z, len(rows) * LARGEST_Z**2)
-                  for rows in folds),
-                strict=True,
-            )
-        )  # fmt: skip
-        # a power of two, one bit spared for the rounding of each contribution
-        return cls(*(2.0 ** -floor(30 - log2(largest)) for largest in (xz, zz)))
+        parts = [design[rows] for rows in folds]
+        xz = max(np.abs(part).sum(axis=0).max() for part in parts) * LARGEST_Z
+        zz = max(len(part) for part in parts) * LARGEST_Z**2
+
+        def finest(exponent: int, bits: int) -> Steps:
+            of_xz, of_zz = (2.0 ** -floor(exponent - log2(largest)) for largest in (xz, zz))
+            return cls(of_xz, of_zz, bits)
+
+        # one bit is spared for the rounding of each contribution; float64 holds 52
+        narrow = finest(30, 32)
+        return narrow if narrow.zz <= COARSEST else finest(52, 64)
 
 
 @dataclass
@@ -106,7 +124,7 @@ class Moments:
     """Sufficient statistics of participants for N placements, V voxels and p design columns.
 
     The residual sum of squares is a difference of large sums. A state in float64 bears that, and
-    so does one in whole numbers of 32 bits, in half the memory (see `Steps`).
+    so does one in whole numbers, mostly of 32 bits and so in half the memory (see `Steps`).
 
     Parameters
     ----------
@@ -114,9 +132,9 @@ class Moments:
         Participants who have the voxel.
     xtx : (p, p, V) float64
         Sum of x x'.
-    xtz : (p, N, V) float64 or int32
+    xtz : (p, N, V) float64 or int
         Sum of x z.
-    zz : (N, V) float64 or int32
+    zz : (N, V) float64 or int
         Sum of z².
     variance : (N, V) float64 or None
         Sum of the known sampling variances of z; kept for a single participant.
@@ -142,7 +160,7 @@ class Moments:
         steps: Steps | None = None,
     ) -> Moments:
         """The neutral element."""
-        dtype: DTypeLike = np.float64 if steps is None else np.int32
+        dtype: DTypeLike = np.float64 if steps is None else steps.dtype
         return cls(
             np.zeros(n_voxels, np.int32),
             np.zeros((p, p, n_voxels)),
@@ -178,10 +196,11 @@ class Moments:
                 self.zz[rows, where] += z * z
                 continue
             for j, value in enumerate(x):
-                self.xtz[j, rows, where] += np.rint((value / self.steps.xz) * z).astype(np.int32)
+                units = np.rint((value / self.steps.xz) * z)
+                self.xtz[j, rows, where] += units.astype(self.steps.dtype)
             z *= z
             z *= 1 / self.steps.zz
-            self.zz[rows, where] += np.rint(z, out=z).astype(np.int32)
+            self.zz[rows, where] += np.rint(z, out=z).astype(self.steps.dtype)
         if self.variance is not None and block.variance is not None:
             self.variance[:, where] += block.variance
 

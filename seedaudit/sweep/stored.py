@@ -54,7 +54,7 @@ class StoredFold:
 
     @property
     def _dtype(self) -> np.dtype[Any]:
-        return np.dtype(np.float64 if self.steps is None else np.int32)
+        return np.dtype(np.float64) if self.steps is None else self.steps.dtype
 
 
 def store_tile(path: Path, n_voxels: int, start: int, moments: Moments) -> None:

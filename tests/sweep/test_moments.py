@@ -100,7 +100,7 @@ def test_no_cancellation_in_the_residual_sum_of_squares(mean):
 
 
 @pytest.mark.parametrize("mean", [0.0, 1.0, 2.5])
-@pytest.mark.parametrize(("n", "sd"), [(24, 0.03), (400, 0.03)])
+@pytest.mark.parametrize(("n", "sd"), [(24, 0.03), (400, 0.03), (4000, 0.03)])
 def test_whole_numbers_keep_t_beside_a_large_mean(mean, n, sd):
     """Trap: t within 1e-4 for the smallest spread that 1,100 volumes allow, up to r = 0.987.
 
@@ -111,6 +111,7 @@ def test_whole_numbers_keep_t_beside_a_large_mean(mean, n, sd):
     x, contrast = orthonormal_design(np.ones((n, 1)), np.array([1.0]))
     rows = np.array_split(np.arange(n), 8)
     steps = Steps.of(x, rows)
+    assert steps.bits == (32 if n < 2000 else 64)
     total = merged(moments_of(x, z, own, steps=steps) for own in rows)
     found = estimate(total, solve_model(total, contrast, n), 0)
     values = z[:, 0].astype(np.float64)
