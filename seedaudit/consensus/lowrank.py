@@ -14,6 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 LARGEST_CODE = 127
+MOST = 128
+"""Components at the most: beyond, little of what is left over is common to several maps."""
+
 _BLOCK = 8192  # voxels
 _ROUNDING_SHARE = 1 / 20
 """Part of the tolerance that the rounding of one component may take."""
@@ -97,7 +100,7 @@ def low_rank(
     lengths, vectors = _principal(left)
     steps, weights = [mean_step], [np.zeros(0)]
     size, errors = len(packed(codes[0])), [_largest(left)]
-    while errors[-1] >= tolerance and lengths.max(initial=0.0) > 0:
+    while errors[-1] >= tolerance and lengths.max(initial=0.0) > 0 and len(steps) <= MOST:
         # a vector may come again, for what the rounding of its pattern has left over
         k = int(lengths.argmax())
         pattern = vectors[:, k].astype(np.float32) @ left
@@ -109,6 +112,10 @@ def low_rank(
             2 * tolerance * _ROUNDING_SHARE / _largest(weight),
         )
         code = _rounded(pattern, step)
+        if not code.any():
+            # finer than the steps: nothing of this vector can be kept
+            lengths[k] = 0
+            continue
         size += len(packed(code))
         if size > most_bytes:
             break

@@ -7,7 +7,7 @@ import json
 import pytest
 
 from tests.benchmarks.__main__ import measured
-from tests.benchmarks.data import SMALL, write_runs
+from tests.benchmarks.data import SMALL, Size, write_runs
 
 
 @pytest.fixture(scope="module")
@@ -41,3 +41,13 @@ def test_memory_of_an_audit_keeps_to_its_forecast(table):
     predicted = forecast(make_plan(study(table, 100)), 2).memory
     found = measured("audit", table=table, workers=2, placements=100)
     assert found["peak_gb"] * 1e9 < 1.2 * predicted
+
+
+def test_a_memory_budget_is_kept(tmp_path):
+    """The measured peak, libraries included, of a study that asks for half as much again."""
+    table = str(write_runs(tmp_path, Size(4.0, 160), 4))
+    options = {"table": table, "workers": 2, "placements": 400}
+    assert measured("audit", **options)["peak_gb"] > 0.65
+    found = measured("audit", **options, memory="500MB")
+    assert found["tiles"] > 1
+    assert found["peak_gb"] <= 0.5
