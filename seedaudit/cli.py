@@ -43,6 +43,14 @@ Examples:
 Lengths and coordinates are in mm. {CAUTION}
 """
 
+EPILOG_START = f"""\b
+Examples:
+  seedaudit start derivatives/preproc
+  seedaudit start images --study posterior.toml
+
+{CAUTION}
+"""
+
 EPILOG_SYNTH = f"""\b
 Examples:
   seedaudit synth tide-study
@@ -168,6 +176,40 @@ def synth(folder: Path, **asked: Any) -> int:
     settings = dataclasses.replace(DEMO, **given)
     synth_study(folder, settings)
     click.echo(f"Synthetic study: {folder}\nNext: seedaudit run {folder / 'study.toml'}")
+    return DONE
+
+
+@app.command(epilog=EPILOG_START)
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option(
+    "--study",
+    "name",
+    default="study.toml",
+    metavar="FILE",
+    help="Name of the study file in FOLDER (default study.toml).",
+)
+@click.option("--replace", is_flag=True, help="Write over an earlier study file.")
+def start(folder: Path, name: str, replace: bool) -> int:
+    """Write a study file into FOLDER from the images and tables found there.
+
+    FOLDER is a BIDS derivative data set or a plain folder of images. The seed is yours to fill in.
+    """
+    from seedaudit.starting import start_study
+
+    found, path = start_study(folder), folder / name
+    try:
+        with open(path, "w" if replace else "x", encoding="utf-8") as file:
+            file.write(found.text)
+    except FileExistsError:
+        raise StudyError(
+            Problem(str(path), "exists", "a new file", "choose another --study, or --replace")
+        ) from None
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise StudyError(Problem(str(path), f"cannot be written ({reason})")) from error
+    for line in found.told:
+        click.echo(printable(line))
+    click.echo(f"Study file: {path}\nFill in `at`, then: seedaudit check {path}")
     return DONE
 
 
