@@ -200,7 +200,20 @@ def _limits(ax: Axes, values: FloatArray) -> None:
     pad = 0.04 * (high - low) or 0.1
     ax.set_xlim(low - pad, high + pad)
     room = ax.bbox.width / ax.figure.dpi * MM_PER_INCH
-    ax.xaxis.set_major_locator(MaxNLocator(int(np.clip(room / 9, 1, 5)), steps=[1, 2, 5, 10]))
+    ticks = next((n for n in (5, 4, 3, 2) if n * _tick_room(high - low, n) <= room), 1)
+    ax.xaxis.set_major_locator(MaxNLocator(ticks, steps=[1, 2, 5, 10]))
+    ax.xaxis.set_major_formatter(lambda value, _: _tick_text(value))
+
+
+def _tick_text(value: float) -> str:
+    """A number with its own power of ten, where it needs one, and none for the whole axis."""
+    return f"{round(value, 12):g}".replace("-", "\N{MINUS SIGN}")
+
+
+def _tick_room(span: float, ticks: int) -> float:
+    """What one label of so many ticks takes, mm: small effects have many digits."""
+    step = 10 ** np.floor(np.log10(span / ticks)) if span > 0 else 1.0
+    return max(9.0, text_width(_tick_text(-5 * step), TYPE) + 3.0)
 
 
 def _not_available(ax: Axes, rows: NDArray[np.int_], colours: Palette) -> None:

@@ -313,6 +313,7 @@ def invented_seed(
     worth: bool = False,
     ceiling: bool = True,
     claims: Sequence[str] = ("Parietal", "Visual", "Motor"),
+    scale: float = 1.0,
     **summary: Any,
 ) -> SeedAudit:
     """One seed's result; see the tests for what each option makes awkward."""
@@ -324,6 +325,10 @@ def invented_seed(
         "similarity": invented_similarity(placements, negative=negative),
         "regions": invented_regions(names, states, single=single),
     }
+    scaled = [
+        name for name in tables["regions"] if "effect" in name or name.endswith(("d_low", "d_high"))
+    ]
+    tables["regions"][scaled] *= scale
     if nothing:
         tails = ["dice_positive", "dice_negative"]
         tables["similarity"] = tables["similarity"].assign(

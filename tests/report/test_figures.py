@@ -67,6 +67,8 @@ CASES = {
     "nothing anywhere": {"nothing": True},
     "oblique": {"grid": head_grid(oblique=True), "names": MARKUP, "claims": MARKUP},
     "an older result": {"worth": False},
+    "tiny effects": {"scale": 1e-3},
+    "tinier effects": {"scale": 2e-6},
 }
 PAGES = [
     *((case, 180.0) for case in CASES),
