@@ -93,6 +93,7 @@ def audit(
     plan = study
     if not isinstance(plan, Plan):
         plan = fitted(make_plan(plan), workers, usual_memory())
+    workers = plan.layout.threads(workers)
     reuse_freed_memory()
     started = time.monotonic()
 

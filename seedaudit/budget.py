@@ -1,15 +1,16 @@
 """A memory budget kept: finished folds go to disk, then the voxels are done in tiles.
 
-Neither changes a digit. Fewer folds, which do, are the last resort.
+Neither changes a digit, nor do fewer workers, which come next. Fewer folds are the last resort.
 """
 
 from __future__ import annotations
 
 from dataclasses import replace
+from itertools import product
 
 import psutil
 
-from seedaudit.errors import Problem, StudyError
+from seedaudit.errors import Problem, StudyError, counted
 from seedaudit.forecast import forecast
 from seedaudit.plan import Plan
 from seedaudit.sweep.tiles import Layout
@@ -58,13 +59,13 @@ def fitted(plan: Plan, workers: int, memory: float) -> Plan:
     StudyError
         If it does not fit in any way.
     """
-    for folds in dict.fromkeys((plan.folds, min(plan.folds, LEAST_FOLDS))):
-        for layout in _layouts():
-            trial = replace(plan, folds=folds, layout=layout)
-            if forecast(trial, workers).memory <= memory:
-                words = _words(trial, plan.folds, memory)
-                return replace(trial, choices=(*plan.choices, *words))
-    most = replace(plan, folds=min(plan.folds, LEAST_FOLDS), layout=Layout(MOST_TILES, True))
+    fewest = min(plan.folds, LEAST_FOLDS)
+    for folds, layout in product(dict.fromkeys((plan.folds, fewest)), _layouts(workers)):
+        trial = replace(plan, folds=folds, layout=layout)
+        if forecast(trial, workers).memory <= memory:
+            words = _words(trial, plan.folds, memory)
+            return replace(trial, choices=(*plan.choices, *words))
+    most = replace(plan, folds=fewest, layout=Layout(MOST_TILES, True, 1))
     least = forecast(most, workers).memory
     raise StudyError(
         Problem(
@@ -72,14 +73,19 @@ def fitted(plan: Plan, workers: int, memory: float) -> Plan:
             f"{memory / 1e9:.1f} GB to keep to; this study needs about {least / 1e9:.1f} GB at the "
             "least",
             "enough memory for the maps of all placements of a seed",
-            "fewer placements or workers, a smaller mask, or a machine with more memory",
+            "fewer placements, a smaller mask, or a machine with more memory",
         )
     )
 
 
-def _layouts() -> list[Layout]:
+def _layouts(workers: int) -> list[Layout]:
     """From the fastest to the one that takes least memory."""
-    return [Layout(), *(Layout(tiles, on_disk=True) for tiles in range(1, MOST_TILES + 1))]
+    threads: list[int | None] = [None]
+    while workers > 1:
+        workers //= 2
+        threads.append(workers)
+    tiles = range(1, MOST_TILES + 1)
+    return [Layout(), *(Layout(n, True, most) for most in threads for n in tiles)]
 
 
 def _words(plan: Plan, asked: int, memory: float) -> list[str]:
@@ -90,4 +96,6 @@ def _words(plan: Plan, asked: int, memory: float) -> list[str]:
         parts.append("the state of finished folds on disk")
     if plan.layout.tiles > 1:
         parts.append(f"{plan.layout.tiles} passes over the data, each for a part of the voxels")
+    if plan.layout.workers is not None:
+        parts.append(f"{counted(plan.layout.workers, 'worker')} at the most")
     return [f"to keep to {memory / 1e9:.1f} GB of memory: {', '.join(parts)}"] if parts else []

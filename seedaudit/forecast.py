@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import shutil
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -14,6 +15,7 @@ from seedaudit.errors import Problem, StudyError
 from seedaudit.inference.glm import orthonormal_design
 from seedaudit.plan import Plan
 from seedaudit.searching import PlannedSearch
+from seedaudit.standins import MOST_VOXELS
 from seedaudit.sweep.correlate import BLOCK
 from seedaudit.sweep.schedule import assign_folds
 from seedaudit.sweep.tiles import tile_slices
@@ -80,15 +82,16 @@ class _Sizes:
 def forecast(plan: Plan, workers: int) -> Forecast:
     """Predict what a run of the plan needs with so many workers."""
     sizes = _Sizes.of(plan)
-    workers = min(workers, sizes.folds)
+    workers = min(plan.layout.threads(workers), sizes.folds)
     largest = max(_sweeping(plan, sizes, workers), _concluding(plan, sizes, workers))
     memory = BASE_MEMORY + MARGIN * largest
     disk = len(plan.seeds) * (2.0 * len(MAPS) * sizes.voxels + 60.0 * sizes.placements**2 / 2) + 2e6
     # one fold is written anew while its last state is still there
-    kept = sizes.voxels * sizes.state / plan.layout.tiles
-    progress = (sizes.folds + 1) * (kept + _search_state(plan))
+    whole = sizes.voxels * sizes.state
+    states = (sizes.folds + 1) * whole
     if plan.layout.on_disk:
-        progress += sizes.folds * sizes.voxels * sizes.state
+        states = sizes.folds * whole + (workers + 1) * whole / plan.layout.tiles
+    progress = states + (sizes.folds + 1) * _search_state(plan)
     return Forecast(_seconds(plan, sizes, workers), memory, disk, progress)
 
 
@@ -102,9 +105,23 @@ def _sweeping(plan: Plan, sizes: _Sizes, workers: int) -> float:
         read += _read_for_spheres(plan)
     series = 4.0 * read * max(sum(own) for own in runs)
     block = 8.0 * BLOCK * (sizes.placements * 4 + max(map(max, runs)))
+    # the series of the spheres in float64, and what is left of them without nuisance
+    block += 16.0 * _read_for_spheres(plan) * max(map(max, runs))
     states = workers if layout.on_disk else sizes.folds
     searched = sizes.folds * _search_state(plan)
-    return workers * (series + block) + states * tile * sizes.state + searched
+    return (
+        workers * (series + block)
+        + states * tile * sizes.state
+        + searched
+        + _reported_maps(plan, sizes)
+    )
+
+
+def _reported_maps(plan: Plan, sizes: _Sizes) -> float:
+    """Every participant's map of every reported placement, for permutation."""
+    if plan.study.threshold.rule != "fwe":
+        return 0.0
+    return 4.0 * len(plan.participants) * len(plan.seeds) * sizes.voxels
 
 
 def _read_for_spheres(plan: Plan) -> int:
@@ -124,13 +141,17 @@ def _concluding(plan: Plan, sizes: _Sizes, workers: int) -> float:
     own = 4.0 * g + 8 * g * (p + 1) + 8 * OTHER_MAPS + 2 * CLASS_SPLITS * (2 + g // 2)
     maps = 4.0 * MAPS_MEMORY * len(plan.seeds) * float(np.prod(plan.voxels.grid.shape))
     states = 0.0 if plan.layout.on_disk else g * v * sizes.state
+    # two copies of the maps of one reported placement beside all of them
+    states += _reported_maps(plan, sizes) * (1 + 2 / len(plan.seeds))
+    if len(plan.participants) == 1:
+        states += 2 * v * 8.0 * largest / (plan.layout.tiles if plan.layout.on_disk else 1)
     # float32 copies of a search's sums, of all folds and of one block of candidates
     judging = (
         2 * g * max((4.0 * len(s.shifts) * len(s.targets) for s in _searches(plan)), default=0)
     )
-    return (
-        states + maps + g * _search_state(plan) + max(v * (shared + (1 + workers) * own), judging)
-    )
+    between = 8.0 * g * p * MOST_VOXELS * sizes.placements if len(plan.seeds) > 1 else 0.0
+    largest_step = max(v * (shared + (1 + workers) * own), judging, between)
+    return states + maps + g * _search_state(plan) + largest_step
 
 
 def _searches(plan: Plan) -> list[PlannedSearch]:
@@ -171,7 +192,10 @@ def strains(needs: Forecast, output: Path) -> list[str]:
         If result and progress plainly do not fit on the disk of the output.
     """
     there = next(parent for parent in output.absolute().parents if parent.exists())
-    wanted, free = needs.disk + needs.progress, shutil.disk_usage(there).free
+    # what an interrupted run has left there already is no further need
+    kept = _held(output.with_name(f".{output.name}.progress"))
+    wanted = needs.disk + max(needs.progress - kept, 0)
+    free = shutil.disk_usage(there).free
     if wanted > free:
         raise StudyError(
             Problem(
@@ -188,6 +212,16 @@ def strains(needs: Forecast, output: Path) -> list[str]:
         f"about {_size(needs.memory)} of memory will be needed, {_size(available)} are free: "
         "fewer --workers, folds or placements need less"
     ]
+
+
+def _held(folder: Path) -> float:
+    """Bytes on disk of the files in a folder, if there is one."""
+    held = 0.0
+    for path in folder.rglob("*"):
+        with suppress(OSError):  # it may go while it is looked at
+            # not the length: files of states have holes where a tile is missing
+            held += 512.0 * getattr(path.stat(), "st_blocks", 0)
+    return held
 
 
 def _size(count: float) -> str:

@@ -160,13 +160,15 @@ class Plan:
 
     def _targets(self, seed: SeedPlan) -> sparse.csr_array:
         """Voxels by target: the regions, then the targets of the seed's claims."""
-        members = np.zeros((len(self.voxels), self.n_regions + len(seed.claims)))
+        members = []
         if self.regions is not None:
-            within = self.regions.labels[:, None] == self.regions.index[None, :]
-            members[:, : self.n_regions] = within & seed.analysis[:, None]
-        for column, claim in enumerate(seed.claims, self.n_regions):
-            members[claim.members, column] = 1
-        return sparse.csr_array(members)
+            labels = np.where(seed.analysis, self.regions.labels, 0)
+            members = [np.flatnonzero((labels == k) & (labels != 0)) for k in self.regions.index]
+        members += [claim.members for claim in seed.claims]
+        rows = np.concatenate([np.zeros(0, int), *members])
+        columns = np.repeat(np.arange(len(members)), [len(rows) for rows in members])
+        shape = (len(self.voxels), len(members))
+        return sparse.csr_array((np.ones(len(rows)), (rows, columns)), shape=shape)
 
 
 def kept_placements(seed: SeedPlan, table: pd.DataFrame) -> NDArray[np.int_]:

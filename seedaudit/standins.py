@@ -83,13 +83,17 @@ def _seed_maps(
     kept = start + kept_placements(plan.seeds[number], seed.tables["placements"])
     frame = merged(fold.frame(rows) for fold in folds)
     model = solve_model(frame, group.design.contrast, group.design.least_count)
-    sums = [[fold.sums(int(placement), rows) for fold in folds] for placement in kept]
-    effects = [estimate_sums(total_sums(parts), model).effect for parts in sums]
+    effects = np.empty((len(kept), len(rows)))
+    sums = np.empty((len(kept), len(folds) * len(group.design.contrast), len(rows)))
+    for row, placement in enumerate(kept):
+        parts = [fold.sums(int(placement), rows) for fold in folds]
+        effects[row] = estimate_sums(total_sums(parts), model).effect
+        sums[row] = np.concatenate([part.xtz for part in parts])
     volume = np.asarray(seed.maps["class_reported"].dataobj)
     classes = volume[tuple(plan.voxels.ijk[everywhere].T)]
     return SeedMaps(
         plan.seeds[number].at,
-        np.array(effects),
+        effects,
         np.nan_to_num(classes).astype(np.int8),
-        np.array([np.concatenate([part.xtz for part in parts]) for parts in sums]),
+        sums,
     )

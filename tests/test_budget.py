@@ -21,6 +21,7 @@ from seedaudit.forecast import BASE_MEMORY, forecast
 from seedaudit.preflight import make_plan
 from seedaudit.study import Study
 from seedaudit.sweep import keeper, schedule
+from seedaudit.sweep.checkpoint import Checkpoint
 from seedaudit.sweep.correlate import BLOCK
 from seedaudit.sweep.tiles import IN_MEMORY, Layout, tile_slices
 
@@ -106,7 +107,10 @@ def test_steps_of_the_ladder(large, monkeypatch):
     assert (tiled.folds, tiled.layout) == (8, Layout(2, on_disk=True))
     assert "2 passes over the data" in tiled.choices[-1]
     assert forecast(tiled, 2).progress > forecast(enough, 2).progress
-    fewest = fitted(large, 2, need(Layout(MOST_TILES, True)) - 1)
+    alone = fitted(large, 2, need(Layout(MOST_TILES, True)) - 1)
+    assert (alone.folds, alone.layout.workers) == (8, 1)
+    assert "1 worker at the most" in alone.choices[-1]
+    fewest = fitted(large, 2, need(Layout(MOST_TILES, True, 1)) - 1)
     assert fewest.folds == 4
     assert "4 folds in the place of 8" in fewest.choices[-1]
     assert len(plan_folds(fewest)) == 4
@@ -178,13 +182,99 @@ def test_an_interrupted_tile_goes_on(large, whole, after, tmp_path):
     assert not (tmp_path / "progress").exists()
 
 
+def stopped(plan, folder, after, workers=1):
+    with pytest.raises(KeyboardInterrupt), open_checkpoint(plan, folder) as kept:
+        audit(plan, workers=workers, checkpoint=kept, progress=Stop(after))
+
+
+def resumed(plan, folder, workers=2):
+    with open_checkpoint(plan, folder, tell=str) as kept:
+        return audit(plan, workers=workers, checkpoint=kept)
+
+
+def test_states_that_are_lost_twice_are_made_again(large, whole, tmp_path):
+    """No tile is believed whose bytes went with the file, however often the run is stopped."""
+    plan, folder = replace(large, layout=LAYOUTS[2]), tmp_path / "progress"
+    stopped(plan, folder, 25)  # nine participants, three tiles
+    shutil.rmtree(folder / "state")
+    stopped(plan, folder, 10)
+    (folder / "state" / "fold-001").write_bytes(b"")
+    stopped(plan, folder, 20)
+    assert_same(resumed(plan, folder), whole)
+
+
+def test_workers_and_memory_may_change_on_the_way(large, whole, tmp_path):
+    """Progress is used again wherever the states are; only the tiles must be the same."""
+    for number, (first, second) in enumerate(
+        [(IN_MEMORY, LAYOUTS[0]), (LAYOUTS[0], IN_MEMORY),
+         (LAYOUTS[1], replace(LAYOUTS[1], workers=1))]
+    ):  # fmt: skip
+        folder = tmp_path / str(number)
+        stopped(replace(large, layout=first), folder, 5)
+        told = []
+        plan = replace(large, layout=second)
+        with open_checkpoint(plan, folder, tell=told.append) as kept:
+            assert_same(audit(plan, workers=3, checkpoint=kept), whole)
+        assert told == ["going on from earlier progress"]
+
+
+@pytest.fixture
+def mutable(asked, tmp_path):
+    """A plan of copies of the runs, which may be damaged and mended; and the copies."""
+    content, folder = asked
+    runs = [Path(shutil.copy(name, tmp_path)) for name in content["data"]["runs"]]
+    own = {**content["data"], "runs": [str(run) for run in runs], "on_bad_run": "set-aside"}
+    plan = make_plan(Study.from_mapping({**content, "data": own}, folder))
+    return replace(plan, layout=LAYOUTS[1]), runs
+
+
+@pytest.mark.parametrize("first", [3, 12])
+@pytest.mark.parametrize("damaged_first", [True, False])
+def test_a_run_that_is_damaged_or_mended_on_the_way(
+    mutable, large, whole, tmp_path, first, damaged_first
+):
+    """In the first and in the second tile: what is there at the end is what counts."""
+    plan, runs = mutable
+    good, bad = runs[4].read_bytes(), runs[4].read_bytes()[:-3000]
+    runs[4].write_bytes(bad if damaged_first else good)
+    stopped(plan, tmp_path / "progress", first)
+    runs[4].write_bytes(good if damaged_first else bad)
+    found = resumed(plan, tmp_path / "progress")
+    if damaged_first:
+        assert_same(found, whole)
+    else:
+        assert found.provenance["group"]["set_aside"] == 1
+        assert_same(found, audit(plan))
+
+
+def test_a_kill_between_a_state_and_its_note(mutable, whole, tmp_path, monkeypatch):
+    """The note of an earlier state must not vouch for a later one, when the file comes back."""
+    plan, runs = mutable
+    folder, good = tmp_path / "progress", runs[0].read_bytes()
+    stopped(plan, folder, 12)
+    runs[0].write_bytes(runs[8].read_bytes() + good)  # other images, readable
+    noted = Checkpoint.note
+
+    def killed(self, unit, progress, *, finished, now):
+        if finished:
+            raise KeyboardInterrupt
+        noted(self, unit, progress, finished=finished, now=now)
+
+    with monkeypatch.context() as patched:
+        patched.setattr(Checkpoint, "note", killed)
+        with pytest.raises(KeyboardInterrupt):
+            resumed(plan, folder)
+    runs[0].write_bytes(good)
+    assert_same(resumed(plan, folder), whole)
+
+
 def test_another_layout_does_not_use_earlier_progress(large, whole, tmp_path):
     told = []
-    for layout in (LAYOUTS[1], LAYOUTS[0]):
+    for layout in (LAYOUTS[1], LAYOUTS[2]):
         plan = replace(large, layout=layout)
         with open_checkpoint(plan, tmp_path / "progress", tell=told.append) as kept:
             assert_same(audit(plan, checkpoint=kept), whole)
-    assert told == ["earlier progress is not used (changed: memory)"]
+    assert told == ["earlier progress is not used (changed: tiles of the voxels)"]
 
 
 def test_a_full_disk_is_a_clear_error(large, tmp_path, monkeypatch):

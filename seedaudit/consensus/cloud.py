@@ -34,6 +34,7 @@ from seedaudit.consensus.overlap import (
 )
 from seedaudit.consensus.regional import region_rows, region_table, regional_stability
 from seedaudit.consensus.resampling import bootstrap_interval, delete_fold_interval
+from seedaudit.errors import DataError, Problem
 from seedaudit.inference.glm import Estimate, solve_model
 from seedaudit.inference.group import GroupMaps, ThresholdRule, classifier
 from seedaudit.inference.placementwise import DegreesOfFreedom, WithoutFolds, placement_maps
@@ -171,6 +172,15 @@ def conclude(
     frame = merged(fold.frame(slice(None)) for fold in folds)
     estimable = np.isfinite(solve_model(frame, design.contrast, design.least_count).spread)
     voxels = space.analysis & estimable
+    if not voxels.any():
+        raise DataError(
+            Problem(
+                "analysis voxels",
+                "in none of them can the group model be estimated",
+                f"voxels outside the seed's spheres that {design.least_count} participants have",
+                "look at the coverage of the runs, the mask, or group.missing = counts",
+            )
+        )
     complete = voxels & (frame.count == len(design.matrix))
     classes_of = classifier(rule, space.ijk[voxels], space.shape)
     densities = _DensityLooks()

@@ -30,7 +30,7 @@ class WithoutFolds:
 
     Parameters
     ----------
-    tails : (G, 2, A) uint16
+    tails : (G, 2, A) int
         Drawn placements in class + and in class - at every voxel.
     n_drawn : int
     sizes : (1 + G, N, 2) int
@@ -38,7 +38,7 @@ class WithoutFolds:
         everybody, and without each fold.
     """
 
-    tails: NDArray[np.uint16]
+    tails: NDArray[np.unsignedinteger[Any]]
     n_drawn: int
     sizes: NDArray[np.int_]
 
@@ -52,7 +52,7 @@ class WithoutFolds:
 class _Seen:
     """What one thread has gathered over its placements."""
 
-    tails: NDArray[np.uint16]
+    tails: NDArray[np.unsignedinteger[Any]]
     lowest: NDArray[np.float64]
     highest: NDArray[np.float64]
 
@@ -131,7 +131,9 @@ def placement_maps(
                     into.tails[fold, column] += here
 
     def work(placements: range) -> _Seen:
-        into = _Seen(np.zeros((g, 2, a), np.uint16), np.full(a, np.inf), np.full(a, -np.inf))
+        into = _Seen(
+            np.zeros((g, 2, a), np.min_scalar_type(n)), np.full(a, np.inf), np.full(a, -np.inf)
+        )
         for i in placements:
             one(i, into)
         return into

@@ -135,21 +135,31 @@ class Checkpoint:
 
         The state of a fold that is finished and has left the memory holds no placement.
         """
-        path = self._path(unit)
+        stored = self._path(unit, stored=True)
+        path = stored if stored.exists() else self._path(unit)
         if not path.exists():
             return None
         try:
             progress = _read(path)
+            why = _outdated(progress, participants)
         except UNREADABLE:
-            self._tell(f"{path.name} is damaged and is made again")
+            progress, why = None, f"{path.name} is damaged and is made again"
+        if why:
+            self._tell(why)
+            # gone before anything is made anew, which it must never vouch for
+            self.forget(unit)
             return None
-        tasks = {task.participant: task for task in participants}
-        for record in (record for record in progress.records if record.used):
-            for run, digest in zip(tasks[record.participant].runs, record.digests, strict=False):
-                if file_digest(run.header.path) != digest:
-                    self._tell(f"{run.header.path.name} has changed since; its fold is made again")
-                    return None
         return progress
+
+    def forget(self, unit: Unit) -> None:
+        """Drop the progress of a fold in a tile."""
+        for stored in (True, False):
+            self._path(unit, stored=stored).unlink(missing_ok=True)
+
+    def forget_stored(self, fold: int) -> None:
+        """Drop what vouches for the state of a fold, in all tiles."""
+        for path in self._folder.glob(f"fold-{fold:03d}-tile-*-stored.npz"):
+            path.unlink()
 
     def note(self, unit: Unit, progress: FoldProgress, *, finished: bool, now: bool) -> None:
         """Called by a fold's worker after each participant: write what is due.
@@ -168,7 +178,10 @@ class Checkpoint:
             writes = {**self._pending, unit: progress}
             try:
                 for number, part in writes.items():
-                    _write(self._path(number), part)
+                    stored = not part.moments.n_placements
+                    _write(self._path(number, stored=stored), part)
+                    if stored:
+                        self._path(number).unlink(missing_ok=True)
                     self._saved[number] = time.monotonic()
             except OSError as error:
                 raise self._refused(error) from error
@@ -178,9 +191,10 @@ class Checkpoint:
         """The pass is done and its result is safe: remove the progress."""
         shutil.rmtree(self._folder, ignore_errors=True)
 
-    def _path(self, unit: Unit) -> Path:
+    def _path(self, unit: Unit, *, stored: bool = False) -> Path:
         tile, fold = unit
-        return self._folder / f"fold-{fold:03d}-tile-{tile:03d}.npz"
+        ending = "-stored" if stored else ""
+        return self._folder / f"fold-{fold:03d}-tile-{tile:03d}{ending}.npz"
 
     def _refused(self, error: OSError) -> DataError:
         return disk_refused(self._folder, error)
@@ -196,6 +210,23 @@ def disk_refused(folder: Path, error: OSError) -> DataError:
             "free some space and say the same command again, or choose another --out",
         )
     )
+
+
+def _outdated(progress: FoldProgress, participants: Sequence[ParticipantTask]) -> str:
+    """Why progress cannot be used; empty if it can.
+
+    Those set aside count too: their files may be whole by now.
+    """
+    tasks = {task.participant: task for task in participants}
+    records = {record.participant: record for record in progress.records}
+    finished = not progress.moments.n_placements
+    if not set(records) <= set(tasks) or (finished and set(records) != set(tasks)):
+        return "other participants take part now; their fold is made again"
+    for name, record in records.items():
+        for run, digest in zip(tasks[name].runs, record.digests, strict=False):
+            if file_digest(run.header.path) != digest:
+                return f"{run.header.path.name} has changed since; its fold is made again"
+    return ""
 
 
 def _write(path: Path, progress: FoldProgress) -> None:

@@ -94,7 +94,8 @@ def folds_on_cluster(
             future.release()
             for record in progress.records[len(before.records) if before else 0 :]:
                 on_participant(record)
-            keeper.note(number, progress, finished=True, now=False)
+            if not keeper.on_disk:
+                keeper.note(number, progress, finished=True, now=False)
             parts[number] = keeper.finished(number, progress)
             del progress
     return [parts[number] for number in range(len(folds))]

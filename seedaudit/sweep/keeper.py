@@ -37,9 +37,12 @@ class Keeper:
     ) -> None:
         self._task, self._scratch, self._checkpoint = task, scratch, checkpoint
         self._paths = [] if scratch is None else [scratch / f"fold-{n:03d}" for n in range(n_folds)]
-        # as it was before this pass: a file that is made anew holds no earlier tile
-        self._there = [path.exists() for path in self._paths]
         self._tile, self._start = 0, 0
+        for n in range(n_folds if checkpoint is not None else 0):
+            there = self.on_disk and _size(self._paths[n]) == self._n_bytes
+            # before anything is made anew, which no earlier note must ever vouch for
+            if checkpoint is not None and not there:
+                checkpoint.forget_stored(n)
 
     @property
     def on_disk(self) -> bool:
@@ -53,11 +56,18 @@ class Keeper:
         self._tile, self._start = number, tile.start
         if self._checkpoint is None:
             return [None] * len(folds)
-        found = [self._checkpoint.load((number, n), fold) for n, fold in enumerate(folds)]
-        return [
-            None if self.is_done(part) and not (self.on_disk and self._there[n]) else part
-            for n, part in enumerate(found)
-        ]
+        return [self._checkpoint.load((number, n), fold) for n, fold in enumerate(folds)]
+
+    @property
+    def _n_bytes(self) -> int:
+        """Of the file of a fold."""
+        layers, n, v = self._shape
+        return layers * n * v * (8 if self._task.steps is None else self._task.steps.bits // 8)
+
+    @property
+    def _shape(self) -> tuple[int, int, int]:
+        layers = self._task.design.shape[1] + 1 + self._task.single
+        return layers, self._task.weights.shape[0], len(self._task.voxels)
 
     @staticmethod
     def is_done(progress: FoldProgress | None) -> bool:
@@ -81,7 +91,10 @@ class Keeper:
         if self._scratch is None:
             return progress
         try:
-            store_tile(self._paths[fold], len(self._task.voxels), self._start, progress.moments)
+            store_tile(
+                self._paths[fold], self._n_bytes, len(self._task.voxels), self._start,
+                progress.moments,
+            )  # fmt: skip
         except OSError as error:
             raise disk_refused(self._scratch.parent, error) from error
         # copies: the state's own memory is used again
@@ -97,12 +110,17 @@ class Keeper:
         shared = [
             joined_frames([parts[n].moments for parts in tiles]) for n in range(len(tiles[0]))
         ]
-        layers = shared[0].xtz.shape[0] + 1 + (shared[0].variance is not None)
-        shape = (layers, self._task.weights.shape[0], len(self._task.voxels))
         return tuple(
-            StoredFold(path, shape, frame, self._task.steps)
+            StoredFold(path, self._shape, frame, self._task.steps)
             for path, frame in zip(self._paths, shared, strict=True)
         )
+
+
+def _size(path: Path) -> int:
+    try:
+        return path.stat().st_size
+    except OSError:
+        return -1
 
 
 def joined_frames(frames: Sequence[Moments]) -> Moments:

@@ -26,7 +26,11 @@ _ROWS = 16  # placements added at once, so that what is computed on the way stay
 
 
 COARSEST = 2.0**-15
-"""Step of z'z above which 32 bits no longer hold what t needs: for folds of some 250."""
+"""Step of z'z above which 32 bits no longer hold what t needs: for folds of some 460."""
+
+LEAST_DF = 2
+"""With fewer residual degrees of freedom in half of the participants, one fold left out, residual
+sums of squares are often next to nothing, and 32 bits no longer tell them from it."""
 
 
 @dataclass(frozen=True)
@@ -65,6 +69,9 @@ class Steps:
             Rows of the design in each fold.
         """
         parts = [design[rows] for rows in folds]
+        sizes = sorted(len(part) for part in parts)
+        left_out = sizes[-1] if len(sizes) > 3 else 0
+        least_df = sum(sizes[: len(sizes) // 2]) - left_out - design.shape[1]
         xz = max(np.abs(part).sum(axis=0).max() for part in parts) * LARGEST_Z
         zz = max(len(part) for part in parts) * LARGEST_Z**2
 
@@ -74,7 +81,7 @@ class Steps:
 
         # one bit is spared for the rounding of each contribution; float64 holds 52
         narrow = finest(30, 32)
-        return narrow if narrow.zz <= COARSEST else finest(52, 64)
+        return narrow if narrow.zz <= COARSEST and least_df >= LEAST_DF else finest(52, 64)
 
 
 @dataclass

@@ -115,10 +115,8 @@ def _rows(series: NDArray[np.float32]) -> Iterator[NDArray[np.float32]]:
         return
     with open(series.filename, "rb", buffering=0) as file:
         file.seek(series.offset)
-        row = np.empty(series.shape[1], series.dtype)
         for _ in range(len(series)):
-            file.readinto(row.data)
-            yield row
+            yield np.fromfile(file, np.float32, series.shape[1])
 
 
 def _stamp(path: Path) -> list[int]:

@@ -108,7 +108,7 @@ def sweep_key(
             task.min_coverage, task.set_aside, task.single, task.keep_reported, task.steps
         ),
         # no number depends on it, but what is on disk is laid out by it
-        "memory": digest(layout),
+        "tiles of the voxels": digest(layout.tiles),
     }  # fmt: skip
 
 
@@ -178,7 +178,7 @@ def sweep(
 def _on_threads(
     task: SweepTask,
     folds: Sequence[Sequence[ParticipantTask]],
-    earlier: Sequence[FoldProgress | None],
+    earlier: list[FoldProgress | None],
     workers: int,
     keeper: Keeper,
     on_participant: Callable[[ParticipantRecord], None],
@@ -188,9 +188,9 @@ def _on_threads(
     def work(number: int) -> FoldProgress:
         if not hasattr(memory, "buffers"):
             memory.buffers = Buffers()
-        before = earlier[number]
-        if keeper.is_done(before):
-            assert before is not None
+        # let go as soon as it has been gone on from
+        before, earlier[number] = earlier[number], None
+        if before is not None and keeper.is_done(before):
             return before
 
         def after(progress: FoldProgress, last: bool) -> bool:

@@ -57,8 +57,10 @@ class StoredFold:
         return np.dtype(np.float64) if self.steps is None else self.steps.dtype
 
 
-def store_tile(path: Path, n_voxels: int, start: int, moments: Moments) -> None:
+def store_tile(path: Path, n_bytes: int, n_voxels: int, start: int, moments: Moments) -> None:
     """Write the state of one tile, which begins at a voxel, into the file of its fold.
+
+    A file that is not of that many bytes is begun anew, at its full length.
 
     Raises
     ------
@@ -70,7 +72,10 @@ def store_tile(path: Path, n_voxels: int, start: int, moments: Moments) -> None:
         layers.append(moments.variance)
     n, width = moments.zz.shape
     size = moments.zz.dtype.itemsize
-    with open(path, "r+b" if path.exists() else "wb", buffering=0) as file:
+    fits = path.exists() and path.stat().st_size == n_bytes
+    with open(path, "r+b" if fits else "wb", buffering=0) as file:
+        if not fits:
+            file.truncate(n_bytes)
         for number, layer in enumerate(layers):
             if width == n_voxels:
                 file.seek(number * n * n_voxels * size)

@@ -15,6 +15,7 @@ from seedaudit.inputs.nuisance import censored_volumes, nuisance_basis, read_con
 from seedaudit.inputs.volumes import RunHeader, read_mask, read_run
 from seedaudit.space.grid import VoxelSet
 from seedaudit.sweep.correlate import CleanRun
+from seedaudit.sweep.digests import file_digest
 from seedaudit.sweep.moments import Moments, Steps
 from seedaudit.sweep.participant import CloudTargets, Kept, participant_blocks
 from seedaudit.sweep.prepared import PreparedRuns
@@ -346,7 +347,7 @@ def sweep_participant(
         reason = "; ".join(problem.brief for problem in error.problems)
         return ParticipantRecord(
             participant.participant, participant.row, len(participant.runs), used=False,
-            reason=reason,
+            reason=reason, digests=tuple(_digest(run.header.path) for run in participant.runs),
         )  # fmt: skip
     kept = tuple(Kept.empty(cloud) for cloud in task.clouds)
     reported = [cloud.rows.start for cloud in task.clouds]
@@ -378,6 +379,14 @@ def sweep_participant(
         reported_z=maps,
         search_coverage=tuple(searched),
     )
+
+
+def _digest(path: Path) -> str:
+    """Of the file of a participant set aside, to see when it is mended; empty without one."""
+    try:
+        return file_digest(path)
+    except OSError:
+        return ""
 
 
 def _search(runs: Sequence[CleanRun], search: SearchTask, sums: SearchSums) -> NDArray[np.float64]:

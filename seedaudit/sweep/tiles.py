@@ -29,10 +29,17 @@ class Layout:
         Passes over the data, each for a part of the voxels.
     on_disk : bool
         Whether a finished fold leaves the memory for a file; always with several tiles.
+    workers : int or None
+        Threads at the most; None for as many as are given.
     """
 
     tiles: int = 1
     on_disk: bool = False
+    workers: int | None = None
+
+    def threads(self, given: int) -> int:
+        """Threads that are used of those given."""
+        return given if self.workers is None else min(given, self.workers)
 
 
 IN_MEMORY = Layout()

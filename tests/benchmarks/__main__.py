@@ -46,23 +46,23 @@ class Report:
 def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: int) -> Report:
     """All measurements; `many` are the numbers of participants of line (e)."""
     report = Report()
-    tables = {n: str(write_runs(folder, size, n)) for n in {2, 6, *many}}
-    six = tables[6]
-    for n in (6, many[1]):
+    tables = {n: str(write_runs(folder, size, n)) for n in {8, *many}}
+    eight = tables[8]
+    for n in (8, many[1]):
         measured("decompress", table=tables[n], workers=2)  # brings the files into the page cache
         _against_decompression(report, tables[n], n, placements)
 
-    ours = measured("audit", table=six, workers=2, placements=100)
-    per_run = ours["pass"] / 6
-    batch = measured("maskers_batch", table=six, placements=100)
+    ours = measured("audit", table=eight, workers=2, placements=100)
+    per_run = ours["pass"] / 8
+    batch = measured("maskers_batch", table=eight, placements=100)
     report.add("(b) maskers in one batch over the pass, one run", batch["seconds"] / per_run, "x",
                ">= 15", f"{batch['seconds']:.1f} s over {per_run:.2f} s")  # fmt: skip
-    loop = measured("maskers_loop", table=six, placements=placements)
-    ours_many = measured("audit", table=six, workers=2, placements=placements)["pass"] / 6
+    loop = measured("maskers_loop", table=eight, placements=placements)
+    ours_many = measured("audit", table=eight, workers=2, placements=placements)["pass"] / 8
     report.add(f"(c) loop over {placements} placements over the pass, one run",
                loop["seconds"] / ours_many, "x", ">= 1000",
                f"{loop['seconds']:.0f} s extrapolated from 3 placements")  # fmt: skip
-    _memory(report, six, ours, batch)
+    _memory(report, eight, ours, batch)
 
     runs = {n: measured("audit", table=tables[n], workers=2, placements=100) for n in many}
     few, most = many[0], many[-1]
@@ -73,13 +73,13 @@ def benchmark(folder: Path, size: Size, *, many: tuple[int, ...], placements: in
                runs[most]["peak_gb"] / runs[few]["peak_gb"], "x", "about 1",
                ", ".join(f"{n}: {runs[n]['peak_gb']:.2f} GB" for n in many))  # fmt: skip
 
-    alone = measured("audit", table=six, workers=1, placements=100)
+    alone = measured("audit", table=eight, workers=1, placements=100)
     report.add("(f) one worker over two, the pass", alone["pass"] / ours["pass"], "x", "about 2",
                f"{alone['pass']:.2f} s over {ours['pass']:.2f} s")  # fmt: skip
     _cluster(report, tables)
-    _placements(report, six)
-    _prepared(report, six, folder, ours)
-    _search(report, six, ours)
+    _placements(report, eight)
+    _prepared(report, eight, folder, ours)
+    _search(report, eight, ours)
     return report
 
 
@@ -122,7 +122,7 @@ def _cluster(report: Report, tables: dict[int, str]) -> None:
         print("(g) skipped: the extra `cluster` is not installed")
         return
     most = max(tables)
-    for n in (6, most):
+    for n in (8, most):
         options = {"table": tables[n], "workers": 2, "placements": 100}
         local = measured("audit", **options)
         with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None,
