@@ -7,6 +7,7 @@ import os
 import shutil
 from dataclasses import replace
 from pathlib import Path
+from types import SimpleNamespace
 
 import nibabel as nib
 import numpy as np
@@ -116,6 +117,40 @@ def test_steps_of_the_ladder(large, monkeypatch):
     assert len(plan_folds(fewest)) == 4
     with pytest.raises(StudyError, match="at the least"):
         fitted(large, 2, BASE_MEMORY)
+
+
+def test_what_an_interrupted_run_holds_is_no_further_need(large, tmp_path, monkeypatch):
+    wanted = forecast(replace(large, layout=Layout(2, on_disk=True)), 2)
+    (tmp_path / ".audit.progress" / "state").mkdir(parents=True)
+    held = tmp_path / ".audit.progress" / "state" / "fold-000"
+    held.write_bytes(b"1" * (8 << 20))
+    free = wanted.disk + wanted.progress - (4 << 20)
+    monkeypatch.setattr(shutil, "disk_usage", lambda path: SimpleNamespace(free=free))
+    assert needs.strains(wanted, tmp_path / "audit") == []
+    held.unlink()
+    with pytest.raises(StudyError, match="enough space on the disk"):
+        needs.strains(wanted, tmp_path / "audit")
+
+
+def test_nothing_to_analyse_is_a_clear_error(asked, tmp_path):
+    """Two participants who have no voxel in common outside the surroundings of the seed."""
+    content, folder = asked
+    runs = [Path(shutil.copy(name, tmp_path)) for name in content["data"]["runs"][:4]]
+    for side, run in enumerate(runs[:2]):
+        image = nib.Nifti1Image.from_filename(run)
+        data = np.asarray(image.dataobj).copy()
+        xyz = np.moveaxis(np.indices(SHAPE), 0, -1) @ image.affine[:3, :3] + image.affine[:3, 3]
+        near = ((xyz - content["seed"][0]["at"]) ** 2).sum(axis=-1) < 20**2
+        data[~near & ((xyz[..., 0] > 0) == bool(side))] = 700
+        nib.save(nib.Nifti1Image(data, image.affine), run)
+    content = {
+        "data": {**content["data"], "runs": [str(run) for run in runs]},
+        "seed": content["seed"],
+        "placements": {"count": 12, "within": 4.0, "controls": 0},
+        "consensus": {"exclude_margin": 12.0},
+    }
+    with pytest.raises(DataError, match="in none of them can the group model be estimated"):
+        audit(make_plan(Study.from_mapping(content, folder)))
 
 
 LAYOUTS = [Layout(1, on_disk=True), Layout(2, on_disk=True), Layout(7, on_disk=True)]

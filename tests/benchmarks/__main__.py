@@ -108,7 +108,8 @@ def _memory(report: Report, table: str, ours: dict[str, float], batch: dict[str,
 
 def large(folder: Path, report: Report) -> None:
     """1 mm and 500 placements within 8 GB; some 60 GB of disk and 15 minutes."""
-    table = str(write_runs(folder, LARGE, 4))
+    (folder / "large").mkdir(exist_ok=True)
+    table = str(write_runs(folder / "large", LARGE, 4))
     found = measured("audit", table=table, workers=2, placements=500, memory="8GB")
     report.add("    1 mm, 500 placements with --memory 8GB, peak", found["peak_gb"], "GB", "<= 8",
                f"{found['tiles']:.0f} tiles, 4 participants, {LARGE.volumes} volumes: pass "

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy import stats
 
 from seedaudit.inference.glm import orthonormal_design, solve_model
 from seedaudit.sweep.correlate import LARGEST_Z, ZBlock
@@ -117,3 +118,28 @@ def test_whole_numbers_keep_t_beside_a_large_mean(mean, n, sd):
     values = z[:, 0].astype(np.float64)
     expected = values.mean(axis=0) / (values.std(axis=0, ddof=1) / np.sqrt(n))
     np.testing.assert_allclose(found.statistic, expected, rtol=1e-4, atol=1e-4)
+
+
+@pytest.mark.parametrize(("n", "p"), [(2, 1), (3, 2), (5, 4), (8, 1), (24, 2)])
+def test_whole_numbers_keep_what_is_significant(n, p):
+    """With one degree of freedom the largest t are those whose residuals are next to nothing."""
+    rng = np.random.default_rng(4)
+    voxels = 100_000
+    x = np.column_stack([np.ones(n), rng.standard_normal((n, p - 1))])
+    x, contrast = orthonormal_design(x, np.eye(p)[0])
+    z = (0.2 + 0.1 * rng.standard_normal((n, 1, voxels))).astype(np.float32)
+    rows = [np.arange(n)[start::8] for start in range(min(n, 8))]
+    steps = Steps.of(x, rows)
+    t = {}
+    for own in (None, steps):
+        total = Moments.empty(p, 1, voxels, steps=own)
+        for row in range(n):
+            total.add(x[row], ZBlock(slice(0, voxels), z[row], np.ones(voxels, bool)))
+        wide = total.wide()
+        t[own] = estimate(wide, solve_model(wide, contrast, n), 0).statistic
+    cut = stats.t.isf(5e-4, n - p)
+    significant = np.abs(t[None]) >= cut
+    assert significant.sum() > 20
+    assert np.isfinite(t[steps]).all()
+    differing = significant != (np.abs(t[steps]) >= cut)
+    assert differing.sum() <= 2
