@@ -15,8 +15,9 @@ from seedaudit.sweep.fold import FoldProgress
 from seedaudit.sweep.keeper import Keeper
 from seedaudit.sweep.moments import FoldState, Moments, Steps
 from seedaudit.sweep.participant import participant_blocks
-from seedaudit.sweep.task import SweepTask, load_run
+from seedaudit.sweep.task import SweepTask
 from seedaudit.sweep.tiles import tile_slices, tile_task
+from seedaudit.sweep.work import load_run
 
 ONE = np.ones((1, 1))
 

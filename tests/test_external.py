@@ -43,7 +43,7 @@ from seedaudit.consensus.chance import gwet_ac1
 from seedaudit.inputs.nuisance import nuisance_basis
 from seedaudit.preflight import make_plan
 from seedaudit.sweep.correlate import seed_series
-from seedaudit.sweep.task import load_run
+from seedaudit.sweep.work import load_run
 from tests.small_study import RADIUS, write_small_study
 
 DEMO = Path(__file__).parent.parent / "demo_data"

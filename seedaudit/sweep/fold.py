@@ -9,13 +9,12 @@ from itertools import zip_longest
 from seedaudit.inputs.stream import read_ahead
 from seedaudit.sweep.moments import Moments
 from seedaudit.sweep.task import (
-    Buffers,
     ParticipantRecord,
     ParticipantTask,
     SearchSums,
     SweepTask,
-    sweep_participant,
 )
+from seedaudit.sweep.work import Buffers, sweep_participant
 
 
 @dataclass

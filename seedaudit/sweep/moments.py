@@ -70,8 +70,8 @@ class Steps:
         """
         parts = [design[rows] for rows in folds]
         sizes = sorted(len(part) for part in parts)
-        left_out = sizes[-1] if len(sizes) > 3 else 0
-        least_df = sum(sizes[: len(sizes) // 2]) - left_out - design.shape[1]
+        # the smallest half of the folds, and what is left of it without one of them
+        least_df = sum(sizes[: max(1, len(sizes) // 2 - 1)]) - design.shape[1]
         xz = max(np.abs(part).sum(axis=0).max() for part in parts) * LARGEST_Z
         zz = max(len(part) for part in parts) * LARGEST_Z**2
 

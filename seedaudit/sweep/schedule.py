@@ -24,17 +24,15 @@ from seedaudit.sweep.keeper import Keeper, joined_records
 from seedaudit.sweep.moments import FoldState
 from seedaudit.sweep.task import (
     LEAST_RESIDUAL_DF,
-    Buffers,
     CleaningRecipe,
     ParticipantRecord,
     ParticipantTask,
     RunTask,
     SearchSums,
     SweepTask,
-    load_run,
-    run_basis,
 )
 from seedaudit.sweep.tiles import IN_MEMORY, Layout, tile_slices, tile_task
+from seedaudit.sweep.work import Buffers, load_run, run_basis
 
 __all__ = [
     "IN_MEMORY", "LEAST_RESIDUAL_DF", "CleaningRecipe", "Layout", "ParticipantRecord",
