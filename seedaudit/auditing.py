@@ -71,7 +71,8 @@ def audit(
         Threads; default: the cores that this process may use.
     progress : Progress, optional
     checkpoint : Checkpoint, optional
-        From `open_checkpoint`, entered: where the pass is kept on disk and gone on from.
+        From `open_checkpoint`, entered: where the pass is kept on disk and gone on from. Without
+        one, states that do not fit in memory go to the system's temporary folder (TMPDIR).
     cluster : str, optional
         Address of a Dask scheduler whose workers do the pass.
     prepared : Path, optional

@@ -90,7 +90,8 @@ class Plan:
 
     `design` has one row for each of `participants`; `set_aside` are those left out already;
     `warnings` are for the user's attention, `choices` what the program decided. `folds` are as
-    asked; `layout` is how the pass keeps to its memory (`seedaudit.budget`).
+    asked, or fewer where memory leaves no other way; `layout` is how the pass keeps to its memory
+    (`seedaudit.budget`).
     """
 
     study: Study
