@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import json
+import subprocess
+import sys
 
 import pytest
 
-from tests.benchmarks.__main__ import measured
+from tests.benchmarks.__main__ import ROOT, measured
 from tests.benchmarks.data import SMALL, Size, write_runs
 
 
@@ -51,3 +53,18 @@ def test_a_memory_budget_is_kept(tmp_path):
     found = measured("audit", **options, memory="500MB")
     assert found["tiles"] > 1
     assert found["peak_gb"] <= 0.525
+
+
+def test_the_command_small(tmp_path):
+    """Every line is there, with its goal, in the table and as JSON."""
+    written = tmp_path / "lines.json"
+    done = subprocess.run(
+        [sys.executable, "-m", "tests.benchmarks", "--small", "--json", str(written)],
+        cwd=ROOT, capture_output=True, text=True, check=False,
+    )  # fmt: skip
+    assert done.returncode == 0, done.stderr
+    lines = json.loads(written.read_text())
+    letters = {line["what"][:3] for line in lines if line["what"].startswith("(")}
+    assert letters >= {f"({letter})" for letter in "abcdefhi"}
+    assert all(line["value"] > 0 and line["goal"] for line in lines)
+    assert len(done.stdout.splitlines()) >= len(lines)
