@@ -63,7 +63,8 @@ def start_study(folder: Path) -> Start:
     header = read_header(found.runs[0].bold)
     people = len({run.participant for run in found.runs})
     mask, others = _mask(folder, found.runs)
-    regions = _regions(folder, found.runs)
+    regions, remarks = _regions(folder, found.runs)
+    found.remarks += remarks
     told = (
         f"{counted(len(found.runs), 'run')} of {counted(people, 'participant')}; the first has "
         f"{header.n_volumes} volumes of {' x '.join(map(str, header.grid.shape))} voxels",
@@ -183,15 +184,18 @@ def _mask(folder: Path, runs: Sequence[Run]) -> tuple[str | None, list[str]]:
     return (names[0], names[1:]) if names else (None, [])
 
 
-def _regions(folder: Path, runs: Sequence[Run]) -> str | None:
-    """A label image with its table beside it."""
-    used = {run.bold for run in runs}
+def _regions(folder: Path, runs: Sequence[Run]) -> tuple[str | None, list[str]]:
+    """A label image with its table beside it; else what such images lack."""
+    used, lacking = {run.bold for run in runs}, []
     for path in _images(folder):
-        stem = path.name.removesuffix(".gz").removesuffix(".nii")
         likely = any(word in path.name.lower() for word in REGION_WORDS)
-        if likely and path not in used and (folder / f"{stem}.tsv").is_file():
-            return path.name
-    return None
+        if not likely or path in used or _volumes(path) != 1:
+            continue
+        table = f"{path.name.removesuffix('.gz').removesuffix('.nii')}.tsv"
+        if (folder / table).is_file():
+            return path.name, []
+        lacking.append(f"{path.name} may hold regions; it needs {table} (index, name) beside it")
+    return None, lacking
 
 
 def _cleaning(runs: Sequence[Run]) -> list[str]:

@@ -108,6 +108,18 @@ def test_images_of_another_space_are_native(tmp_path):
     assert tomllib.loads(start_study(tmp_path).text)["seed"][0]["space"] == "native"
 
 
+def test_labels_without_their_table_are_told(tmp_path):
+    write_image(tmp_path / "a_bold.nii.gz", volumes=12)
+    write_image(tmp_path / "labels.nii.gz")
+    found = start_study(tmp_path)
+    assert "labels.nii.gz may hold regions; it needs labels.tsv (index, name) beside it" in (
+        found.told
+    )
+    assert "regions" not in tomllib.loads(found.text)["data"]
+    (tmp_path / "labels.tsv").write_text("index\tname\n1\tonly\n")
+    assert tomllib.loads(start_study(tmp_path).text)["data"]["regions"] == "labels.nii.gz"
+
+
 def test_what_cannot_be_started_from(tmp_path):
     with pytest.raises(StudyError, match="is no folder"):
         start_study(tmp_path / "nowhere")
