@@ -38,16 +38,19 @@ class Keeper:
         self._task, self._scratch, self._checkpoint = task, scratch, checkpoint
         self._paths = [] if scratch is None else [scratch / f"fold-{n:03d}" for n in range(n_folds)]
         self._tile, self._start = 0, 0
-        for n in range(n_folds if checkpoint is not None else 0):
-            there = self.on_disk and _size(self._paths[n]) == self._n_bytes
-            # before anything is made anew, which no earlier note must ever vouch for
-            if checkpoint is not None and not there:
-                checkpoint.forget_stored(n)
+        if checkpoint is not None:
+            self._forget_what_is_gone(checkpoint, n_folds)
 
     @property
     def on_disk(self) -> bool:
         """Whether finished folds leave the memory."""
         return self._scratch is not None
+
+    def _forget_what_is_gone(self, checkpoint: Checkpoint, n_folds: int) -> None:
+        """Before anything is made anew, which no earlier note must ever vouch for."""
+        for n in range(n_folds):
+            if not (self.on_disk and _size(self._paths[n]) == self._n_bytes):
+                checkpoint.forget_stored(n)
 
     def begin(
         self, number: int, tile: slice, folds: Sequence[Sequence[ParticipantTask]]

@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 from sklearn.metrics import f1_score
 
-from seedaudit.consensus.ceiling import ceiling, class_similarity
+from seedaudit.consensus.ceiling import ceiling
 from seedaudit.consensus.chance import gwet_ac1
+from seedaudit.consensus.half_classes import class_similarity
 from seedaudit.consensus.halves import FoldMaps, cross_half_r, fold_sums, half_splits, halves
 from seedaudit.inference.glm import uniform_estimate
 from seedaudit.sweep.correlate import ZBlock
