@@ -44,13 +44,18 @@ LONGEST_NAME = 30
 _SLACK = 1e-9
 
 
-def number(value: float | None, digits: int = 1) -> str:
-    """A number with at most so many decimals and a true minus sign; n/a when missing."""
+def number(value: float | None, digits: int = 1, *, fixed: bool = False) -> str:
+    """A number with at most so many decimals, or exactly so many where numbers stand in a column,
+    and a true minus sign; n/a when missing.
+    """
     if value is None or not isfinite(value):
         return "n/a"
     text = f"{value:.{digits}f}"
-    text = text.rstrip("0").rstrip(".") if "." in text else text
-    return "0" if text in ("-0", "") else text.replace("-", "−")
+    if "." in text and not fixed:
+        text = text.rstrip("0").rstrip(".")
+    if float(text) == 0:
+        text = text.removeprefix("-")
+    return text.replace("-", "−")
 
 
 def point(xyz: Sequence[float]) -> str:

@@ -487,6 +487,19 @@ def test_automatic_accessibility_check(scheme, study_page, axe, opened):
     assert len(found["passes"]) > 20
 
 
+@pytest.mark.parametrize("width", [1300, 900, 390])
+def test_the_bars_of_the_regions_end_within_their_cells(plain_page, opened, width):
+    with opened(plain_page) as page:
+        page.set_viewport_size({"width": width, "height": 900})
+        ends = page.evaluate(
+            "[...document.querySelectorAll('td.with-bar')].map(cell => ["
+            "cell.querySelector('.bar').getBoundingClientRect().right,"
+            "cell.getBoundingClientRect().right])"
+        )
+    assert ends
+    assert all(bar < cell for bar, cell in ends), ends
+
+
 def test_a_whole_brain_at_2_mm(opened):
     """Below 8 MB, and every move within 50 ms: what the page computes and draws, by its clock."""
     seed = whole_brain()

@@ -163,6 +163,8 @@ def test_a_share_above_0_never_reads_0(share):
 def test_numbers_are_written_with_a_true_minus_and_no_trailing_zeros():
     assert [number(x) for x in (-56.0, -0.04, 2.50, 100.0)] == ["−56", "0", "2.5", "100"]
     assert number(None) == number(float("nan")) == "n/a"
+    in_a_column = [number(x, 2, fixed=True) for x in (-0.1, -0.004, 0.72, 3.0)]
+    assert in_a_column == ["−0.10", "0.00", "0.72", "3.00"]
 
 
 def test_the_caption_states_what_is_on_the_page():
